@@ -1,0 +1,1 @@
+"""marshmallow schemas: what is checked and what OpenAPI says, in one place."""

@@ -1,0 +1,3 @@
+"""Tallyward: a service that watches the digits of payment amounts."""
+
+__version__ = "0.1.0"

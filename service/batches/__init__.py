@@ -1,0 +1,1 @@
+"""Request bytes to columns of checked rows; pure."""

@@ -1,0 +1,1 @@
+"""The demo portfolio: invented merchants, posted over HTTP like any caller would."""

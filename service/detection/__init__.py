@@ -1,0 +1,1 @@
+"""Policies, the detector bank, exact running values and learned baselines; pure."""

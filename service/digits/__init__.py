@@ -1,0 +1,1 @@
+"""Amounts to digits, reference laws and measures; pure NumPy and SciPy."""

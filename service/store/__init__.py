@@ -1,0 +1,1 @@
+"""Redis: keys, scripts, append, compaction, feed and sweep."""

@@ -1,0 +1,1 @@
+"""One stream: its log record, folded state, fold and alarms; pure."""

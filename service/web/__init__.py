@@ -1,0 +1,1 @@
+"""HTTP: blueprints by resource, problem details, keys and roles."""
