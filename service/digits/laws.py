@@ -39,6 +39,8 @@ def position_law(position: int) -> FloatArray:
     position : int
         1 to 6.
     """
+    if not 1 <= position <= 6:
+        raise ValueError(f"position must be 1 to 6, got {position}")
     if position == 1:
         return leading_law(1)
     return np.asarray(leading_law(position).reshape(-1, 10).sum(axis=0))

@@ -66,7 +66,7 @@ def trailing(amounts: IntArray, digits: int) -> IntArray:
     """Return the last ``digits`` digits of the integer, 0 to ``10**digits - 1``."""
     if not 1 <= digits <= 15:
         raise ValueError(f"digits must be 1 to 15, got {digits}")
-    return np.asarray(amounts, dtype=np.int64) % _POWERS[digits]
+    return np.asarray(np.asarray(amounts, dtype=np.int64) % _POWERS[digits])
 
 
 def circle(amounts: IntArray) -> FloatArray:
