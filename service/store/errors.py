@@ -32,6 +32,7 @@ _REFUSALS = frozenset(
         "EXECABORT",
     }
 )
+_RAISED_IN_SCRIPT = " script: "  # such an error ends in "script: <sha1>, on @user_script:1."
 _CODE = re.compile(r"[A-Z]+(?![A-Za-z])")
 
 _REFUSAL_CLASSES: tuple[type[BaseException], ...] = (
@@ -43,6 +44,7 @@ _REFUSAL_CLASSES: tuple[type[BaseException], ...] = (
     client.ReadOnlyError,
     client.MasterDownError,
     client.BusyLoadingError,
+    client.OutOfMemoryError,
     client.NoScriptError,
     client.NoPermissionError,
     client.AuthenticationError,
@@ -71,11 +73,13 @@ def surely_not_applied(exc: BaseException) -> bool:
     -------
     bool
     """
-    if isinstance(exc, (NotSent, ConnectionRefusedError, *_REFUSAL_CLASSES)):
+    if isinstance(exc, (NotSent, ConnectionRefusedError)):
+        return True
+    if _RAISED_IN_SCRIPT in str(exc):  # earlier writes of the script stay
+        return False
+    if isinstance(exc, _REFUSAL_CLASSES):  # the client cuts the code off the text of these
         return True
     if not isinstance(exc, client.ResponseError):
         return False
     found = _CODE.match(str(exc))
-    if found is None or found[0] not in _REFUSALS:
-        return False
-    return "script:" not in str(exc)  # raised by a command within a script
+    return found is not None and found[0] in _REFUSALS
