@@ -1,0 +1,89 @@
+"""Everything known about one stream."""
+
+from __future__ import annotations
+
+from marshmallow import fields
+
+from schemas import words
+from schemas.alarm import Alarm
+from schemas.base import Answer, Flag, Number, Whole, said
+from schemas.measures import ONE_LOOK, Band, Circle, LargestZ, SingleLook
+from schemas.merchant import Listed
+
+
+class ViewDetail(Answer):
+    """One view of a stream: what it is compared with, and how far it is from it."""
+
+    reference = fields.String(required=True, validate=words.one_of(*words.REFERENCES))
+    count = Whole(required=True, metadata=said("Amounts that the view sees.", minimum=0))
+    misfit = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Share that would have to differ, noise removed.", minimum=0, maximum=1),
+    )
+    misfit_low = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Lower end of its 95 % interval.", minimum=0, maximum=1),
+    )
+    misfit_high = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Upper end of its 95 % interval.", minimum=0, maximum=1),
+    )
+    band = fields.Nested(
+        Band,
+        required=True,
+        allow_none=True,
+        metadata=said("Only against the law, and where the count lets it mean anything."),
+    )
+    mad = Number(allow_none=True, metadata=said("With measures=all. " + ONE_LOOK, minimum=0))
+    mad_expected = Number(allow_none=True, metadata=said("With measures=all.", minimum=0))
+    chi_square = fields.Nested(SingleLook, metadata=said("With measures=all."))
+    g = fields.Nested(SingleLook, metadata=said("With measures=all."))
+    kuiper = Number(allow_none=True, metadata=said("With measures=all.", minimum=0))
+    watson_u2 = Number(allow_none=True, metadata=said("With measures=all.", minimum=0))
+    largest_z = fields.Nested(LargestZ, metadata=said("With measures=all."))
+
+
+class Verdict(Answer):
+    """A word, and the reason for it in words."""
+
+    status = fields.String(required=True)
+    reason = fields.String(required=True, metadata=said("Why, in words."))
+
+
+class Baseline(Answer):
+    """How far the stream's baseline has come."""
+
+    complete = Flag(required=True)
+    count = Whole(required=True, metadata=said("Rows gathered.", minimum=0))
+    size = Whole(required=True, metadata=said("Rows needed.", minimum=1))
+    days = Number(required=True, metadata=said("Days of event time spanned.", minimum=0))
+
+
+class Detail(Listed):
+    """Everything known about one stream."""
+
+    views = fields.Dict(
+        keys=words.view(), values=fields.Nested(ViewDetail), required=True
+    )
+    circle = fields.Nested(Circle, metadata=said("With measures=all."))
+    e_value = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Evidence against the reference; valid however often one looks.", minimum=0),
+    )
+    p_value = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("min(1, 1 / largest e_value so far).", minimum=0, maximum=1),
+    )
+    law_applies = fields.Nested(Verdict, required=True, metadata=said("yes, no or unknown."))
+    guarantee = fields.Nested(Verdict, required=True, metadata=said("holds, doubtful or void."))
+    baseline = fields.Nested(Baseline, required=True, allow_none=True)
+    policy = words.policy(required=True)
+    alarm = fields.Nested(Alarm, required=True, allow_none=True)
+    first_seen = words.moment("Event time of the earliest row.", required=True, allow_none=True)
+    last_seen = words.moment("Event time of the latest row.", required=True, allow_none=True)
+    warning = fields.String(metadata=said("With measures=all: what the p-values mean."))

@@ -1,0 +1,46 @@
+"""What the views work with, hung on the app once by ``create_app``."""
+
+from __future__ import annotations
+
+import threading
+from dataclasses import dataclass
+from typing import cast
+
+from flask import current_app
+
+from service.settings import Settings
+from service.tallies import Tallies
+from service.web.keyring import Keyring, keyring
+
+
+@dataclass(frozen=True)
+class Parts:
+    """The settings, the tallies and the keys of one app.
+
+    Attributes
+    ----------
+    seats : BoundedSemaphore
+        One for each request that may wait for an alarm: half the threads, so that posting never
+        starves.
+    """
+
+    settings: Settings
+    tallies: Tallies
+    keyring: Keyring
+    seats: threading.BoundedSemaphore
+
+
+def parts() -> Parts:
+    """Return the current app's parts."""
+    return cast(Parts, current_app.extensions["tallyward"])
+
+
+def tallies() -> Tallies:
+    """Return the current app's tallies."""
+    return parts().tallies
+
+
+def assemble(settings: Settings, tallies: Tallies) -> Parts:
+    """Return the parts of a new app."""
+    seats = threading.BoundedSemaphore(max(1, settings.threads // 2))
+    return Parts(settings, tallies, keyring(settings.admin_key), seats)
