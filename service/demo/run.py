@@ -166,7 +166,7 @@ def report(found: Found, story: Scenario, url: str) -> Iterator[str]:
     )
     if found.accepted == 0:
         yield "Every row had been counted before, so none was counted again."
-        yield "These are the alarms on record:"
+        yield "These are the alarms on record; what the history raised is kept off it."
     elif found.duplicates:
         yield f"{found.duplicates:,} rows had been counted before and were not counted again."
     if not found.alarms:
@@ -195,7 +195,7 @@ def report(found: Found, story: Scenario, url: str) -> Iterator[str]:
     for name in sorted(wronged):
         yield f"WRONGLY ALARMED: {name} was honest all along."
     yield ""
-    yield f"Look for yourself: {url}/console, or with KEY set to your key:"
+    yield "Look for yourself, with KEY set to your key:"
     address = f"{url}/v1/merchants?sort=evidence&order=desc&limit=10"
     yield f"  curl -s -H \"Authorization: Bearer $KEY\" '{address}'"
     yield "An alarm is a reason to look, never proof of fraud."
