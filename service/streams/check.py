@@ -55,9 +55,7 @@ def check(amounts: IntArray) -> Document:
     hits = np.concatenate(cells_hit(positive))
     counts = np.bincount(hits[hits >= 0], minlength=CELLS)
     law = law_cells()
-    second = np.bincount(
-        leading(positive[positive >= LEAD_PAIR_FROM], 2) % 10, minlength=10
-    )
+    second = np.bincount(leading(positive[positive >= LEAD_PAIR_FROM], 2) % 10, minlength=10)
     views = {
         name: {**measures_of(name, counts[cells], law[cells]), **_evidence(name, counts, law)}
         for name, cells in WATCHED.items()

@@ -56,9 +56,9 @@ Records = npt.NDArray[np.void]
 
 def at(records: Records) -> npt.NDArray[np.int64]:
     """Return event times in milliseconds since 1970 UTC."""
-    return records["at_s"].astype(np.int64) * 1000 + records["at_ms"]
+    return np.asarray(records["at_s"].astype(np.int64) * 1000 + records["at_ms"])
 
 
 def arrived(records: Records) -> npt.NDArray[np.int64]:
     """Return arrival times in milliseconds since 1970 UTC."""
-    return records["arrived_s"].astype(np.int64) * 1000 + records["arrived_ms"]
+    return np.asarray(records["arrived_s"].astype(np.int64) * 1000 + records["arrived_ms"])

@@ -1,0 +1,170 @@
+"""A merchant's own baseline: upper confidence bounds of its cells, and whether the law applies.
+
+Learned frequencies plugged in as if they were known destroy the false-alarm promise; bounds that
+hold with a stated confidence keep it. Time structure counts: a cell whose share differs between
+blocks of the baseline gets the largest of its blocks' bounds.
+
+Clopper & Pearson (1934), *Biometrika* 26, 404-413.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy import special
+
+from service.detection.bank import LAW
+from service.digits.significand import FloatArray, IntArray
+from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED
+
+DISPERSION_LEVEL = 0.001
+"""A cell is over-dispersed when its shares differ between blocks at this level (chi-square)."""
+
+HARMONICS_FROM = 1000
+"""Rows below which the circle says nothing about the law."""
+
+
+def spent_alpha(confidence: float, relearns: int) -> float:
+    """Return the error probability of one baseline: alpha / (i (i + 1)) for the i-th.
+
+    Over all relearns the series sums to ``1 - confidence``.
+    """
+    i = relearns + 1
+    return (1 - confidence) / (i * (i + 1))
+
+
+def upper_bound(count: npt.ArrayLike, rows: npt.ArrayLike, alpha: float) -> FloatArray:
+    """Return the Clopper-Pearson upper bound of a share at one-sided error ``alpha``.
+
+    A cell never seen in n rows gets ``1 - alpha**(1/n)``; no rows give 1.
+    """
+    c, n = np.broadcast_arrays(
+        np.asarray(count, dtype=np.float64), np.asarray(rows, dtype=np.float64)
+    )
+    some = c < n
+    safe = np.where(some, n - c, 1.0)
+    return np.where(some, special.betaincinv(c + 1, safe, 1 - alpha), 1.0)
+
+
+def lower_bound(count: npt.ArrayLike, rows: npt.ArrayLike, alpha: float) -> FloatArray:
+    """Return the Clopper-Pearson lower bound of a share at one-sided error ``alpha``."""
+    c, n = np.broadcast_arrays(
+        np.asarray(count, dtype=np.float64), np.asarray(rows, dtype=np.float64)
+    )
+    some = c > 0
+    safe = np.where(some, c, 1.0)
+    return np.where(some, special.betaincinv(safe, n - c + 1, alpha), 0.0)
+
+
+def own_bounds(
+    count: IntArray,
+    rows: IntArray,
+    block_count: IntArray,
+    block_rows: IntArray,
+    alpha: float,
+) -> FloatArray:
+    """Return upper bounds of all cells that hold together with probability ``1 - alpha``.
+
+    Bonferroni over the cells of all views; a cell that is over-dispersed between blocks gets the
+    largest of its blocks' bounds at the same level. Tolerance is not included.
+
+    Parameters
+    ----------
+    count : int64 array (199,)
+        The baseline's counts.
+    rows : int64 array (3,)
+        Baseline rows seen by each watched view.
+    block_count : int64 array (B, 199)
+        Counts per block; blocks of several partitions of the baseline may be stacked.
+    block_rows : int64 array (B, 3)
+        Rows of each block seen by each view.
+    alpha : float
+        Error probability of the baseline, 0 to 1.
+
+    Returns
+    -------
+    float64 array (199,)
+        In (0, 1]; 1 for every cell of a view without rows.
+    """
+    if not 0 < alpha < 1:
+        raise ValueError(f"alpha must be between 0 and 1, got {alpha}")
+    n = rows[VIEW_OF_CELL]
+    level = alpha / CELLS
+    pooled = upper_bound(count, n, level)
+    if not len(block_rows):
+        return pooled
+    nb = block_rows[:, VIEW_OF_CELL].astype(np.float64)
+    share = np.divide(count, n, out=np.zeros(CELLS), where=n > 0)
+    expected = nb * share
+    variance = expected * (1 - share)
+    scatter = np.divide(
+        (block_count - expected) ** 2, variance, out=np.zeros_like(expected), where=variance > 0
+    ).sum(axis=0)
+    freedom = np.maximum((nb > 0).sum(axis=0) - 1, 1)
+    dispersed = scatter > special.chdtri(freedom, DISPERSION_LEVEL)
+    if not dispersed.any():
+        return pooled
+    blocks = upper_bound(block_count[:, dispersed], nb[:, dispersed], level)
+    largest = np.where(nb[:, dispersed] > 0, blocks, 0).max(axis=0)
+    pooled[dispersed] = np.maximum(pooled[dispersed], largest)
+    return pooled
+
+
+@dataclass(frozen=True)
+class LawVerdict:
+    """Which parts of the acceptance of the law failed, per watched view (3,) bool."""
+
+    circle: npt.NDArray[np.bool_]
+    cell: npt.NDArray[np.bool_]
+
+
+def law_verdict(
+    count: IntArray,
+    rows: IntArray,
+    circle: FloatArray,
+    circle_rows: int,
+    tolerances: tuple[float, float, float],
+    alpha: float,
+) -> LawVerdict:
+    """Say for which views a complete baseline speaks against the law.
+
+    Two of the three parts of the acceptance: the harmonics of the circle
+    (``|phi_h|^2 - 1/n > (tol/2)^2`` for h = 1 or 2, or fewer than 1000 rows), and cells whose
+    lower confidence bound exceeds the law's bound. The third, a silent detector bank over the
+    baseline's own rows, is kept by the fold.
+
+    Parameters
+    ----------
+    count, rows
+        As in `own_bounds`.
+    circle : float64 array (4,)
+        Sums of cos and sin of one turn, cos and sin of two turns, over the baseline.
+    circle_rows : int
+        Rows in those sums.
+    tolerances : tuple of float
+        Per watched view.
+    alpha : float
+        Error probability of the cells' lower bounds together.
+    """
+    tol = np.asarray(tolerances)
+    n = rows[VIEW_OF_CELL]
+    lower = lower_bound(count, n, alpha / CELLS)
+    too_much = lower > LAW * (1 + tol[VIEW_OF_CELL])
+    cell = np.array([bool(too_much[cells].any()) for cells in WATCHED.values()])
+    off_circle = np.zeros(3, dtype=bool)
+    if circle_rows < HARMONICS_FROM:
+        off_circle[:2] = True
+    else:
+        power = (circle.reshape(2, 2) ** 2).sum(axis=1) / circle_rows**2 - 1 / circle_rows
+        off_circle[:2] = power.max() > (tol[:2] / 2) ** 2
+    return LawVerdict(circle=off_circle, cell=cell)
+
+
+def own_shares(count: npt.ArrayLike) -> FloatArray:
+    """Return the baseline's shares of all cells with half a row added to each, (..., 199)."""
+    smoothed = np.asarray(count, dtype=np.float64) + 0.5
+    for cells in WATCHED.values():
+        smoothed[..., cells] /= smoothed[..., cells].sum(axis=-1, keepdims=True)
+    return smoothed

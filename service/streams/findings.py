@@ -1,0 +1,176 @@
+"""What carries the evidence of a stream: which cells, or which shape, since when, how strongly."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from service.detection import bank
+from service.digits.significand import FloatArray
+from service.digits.views import LEAD_PAIR, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS, cell_label
+from service.streams.state import BY_OWN, States
+
+NOTABLE = 0.05
+"""Share of the evidence below which a view or shape is not mentioned."""
+
+COMPANION = 0.25
+"""Cells that carry at least so much of the strongest cell's evidence are named with it."""
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One pattern that carries evidence.
+
+    Attributes
+    ----------
+    view : str
+    pattern : str
+        ``cell`` or ``shape``.
+    cells : tuple of str
+        Strongest first; for a shape the cells most in excess under it.
+    weight : float
+        Share of the whole evidence, 0 to 1.
+    onset_row : int
+        The stream's row with which the run of evidence began, from 1.
+    onset_at : int
+        Event time of that row, ms since 1970 UTC.
+    observed, expected, bound : float
+        Share of the cells since the onset (selected by the alarm, so biased upwards), under the
+        reference, and the most that is taken as ordinary. NaN observed for a shape.
+    reference : str
+        ``law`` or ``own``.
+    severity : float
+        Log-likelihood gathered since the onset, in nats.
+    hits : int
+        Rows in the cells since the onset.
+    excess, excess_amount : float
+        Rows, and minor units, beyond what the reference expects.
+    shape : str
+        For a shape: ``invented`` or ``shifted``.
+    """
+
+    view: str
+    pattern: str
+    cells: tuple[str, ...]
+    weight: float
+    onset_row: int
+    onset_at: int
+    observed: float
+    expected: float
+    bound: float
+    reference: str
+    severity: float
+    hits: int = 0
+    excess: float = 0.0
+    excess_amount: float = 0.0
+    shape: str = ""
+
+
+def evidence_of_cells(state: States) -> FloatArray:
+    """Return the weighted value of every cell's detectors now, (..., 199).
+
+    Between hits a value decays in closed form: n misses act as
+    ``R -> r**n R + r (1 - r**n) / (1 - r)``.
+    """
+    misses = (state["clock"][..., VIEW_OF_CELL] - state["hit"])[..., None].astype(np.float64)
+    kept = bank.RETAINED**misses
+    value = kept * state["value"] + bank.RETAINED * (1 - kept) / bank.EPSILONS
+    return np.asarray(bank.CELL_WEIGHTS * (value * bank.EPSILON_SHARES).sum(axis=-1))
+
+
+def findings(
+    state: States, tolerance: FloatArray, active: FloatArray, shapes: FloatArray
+) -> list[Finding]:
+    """Return what carries one stream's evidence, strongest first.
+
+    Parameters
+    ----------
+    state : one record of ``STATE``
+    tolerance, active : float64 arrays (3,)
+        Of the watched views.
+    shapes : float64 array (14,)
+        Weights of the shape detectors in force.
+    """
+    cells = evidence_of_cells(state) * active[VIEW_OF_CELL]
+    shape = state["shape"] * shapes
+    whole = float(cells.sum() + shape.sum())
+    if whole <= 0:
+        return []
+    found = [
+        _cells(state, view, cells, whole, float(tolerance[view]))
+        for view, part in enumerate(WATCHED.values())
+        if cells[part].sum() >= NOTABLE * whole
+    ]
+    if shape.sum() >= NOTABLE * whole:
+        found.append(_shape(state, shape, whole, float(tolerance[1])))
+    return sorted(found, key=lambda f: -f.weight)
+
+
+def _reference(state: States, view: int) -> tuple[str, FloatArray, FloatArray]:
+    """Name, expected shares and bounds (before tolerance) of a view's cells."""
+    part = WATCHED[WATCHED_VIEWS[view]]
+    if state["reference"][view] == BY_OWN:
+        base = state["base"][part].astype(np.float64)
+        return "own", base / max(base.sum(), 1.0), state["bound"][part].astype(np.float64)
+    return "law", bank.LAW[part], bank.LAW[part]
+
+
+def _cells(
+    state: States, view: int, evidence: FloatArray, whole: float, tolerance: float
+) -> Finding:
+    name = WATCHED_VIEWS[view]
+    part = WATCHED[name]
+    mine = evidence[part]
+    strongest = int(np.argmax(mine))
+    chosen = np.flatnonzero((mine >= COMPANION * mine[strongest]) & (state["run"][part] > 0))
+    chosen = chosen[np.argsort(-mine[chosen], kind="stable")]
+    if not chosen.size:
+        chosen = np.array([strongest])
+    label, share, bound = _reference(state, view)
+    onset = int(state["onset"][part][chosen].min()) or int(state["rows"])
+    first = chosen[np.argmin(state["onset"][part][chosen])]
+    since = int(state["rows"]) - onset + 1
+    hits = int(state["run"][part][chosen].sum())
+    expected = float(share[chosen].sum())
+    excess = max(hits - expected * since, 0.0)
+    spent = float(state["spent"][part][chosen].sum())
+    misses = int(state["clock"][view]) - int(state["hit"][part][strongest])
+    cusum = float(state["cusum"][part][strongest]) + misses * float(np.log(bank.CUSUM_RETAINED))
+    return Finding(
+        view=name,
+        pattern="cell",
+        cells=tuple(cell_label(part.start + int(k)) for k in chosen),
+        weight=float(mine.sum()) / whole,
+        onset_row=onset,
+        onset_at=int(state["onset_at"][part][first]),
+        observed=hits / since,
+        expected=expected,
+        bound=min(float(bound[chosen].sum()) * (1 + tolerance), 1.0),
+        reference=label,
+        severity=max(cusum, 0.0),
+        hits=hits,
+        excess=excess,
+        excess_amount=excess * spent / hits if hits else 0.0,
+    )
+
+
+def _shape(state: States, evidence: FloatArray, whole: float, tolerance: float) -> Finding:
+    j = int(np.argmax(evidence))
+    label, share, bound = _reference(state, 1)
+    q = bank.alternatives(share + 1e-12)[0][j]
+    most = np.argsort(-(q - share), kind="stable")[:9]
+    return Finding(
+        view="lead_pair",
+        pattern="shape",
+        cells=tuple(cell_label(LEAD_PAIR.start + int(k)) for k in most),
+        weight=float(evidence.sum()) / whole,
+        onset_row=max(int(state["shape_onset"][j]), 1),
+        onset_at=int(state["shape_onset_at"][j]) or int(state["first_at"]),
+        observed=float("nan"),
+        expected=float(share[most].sum()),
+        bound=min(float(bound[most].sum()) * (1 + tolerance), 1.0),
+        reference=label,
+        severity=float(state["shape_cusum"][j]),
+        shape="invented" if j < len(bank.INVENTED) else "shifted",
+    )

@@ -1,0 +1,261 @@
+"""The folded state of many streams: one record of arrays each, and sparse counts per bucket.
+
+A *snapshot* is a state written down: a header, the record with its zero words left out, and the
+stream's bucket counts. Reading and writing work on many streams at once.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from service.detection.bank import SHAPES
+from service.digits.significand import IntArray
+from service.digits.views import CELLS
+
+FORMAT = 1
+
+UNDECIDED, BY_LAW, BY_OWN = 0, 1, 2
+"""What a view is compared with; undecided while its baseline is being learned."""
+
+REFUTED_BY_CIRCLE, REFUTED_BY_CELL, REFUTED_BY_BANK = 1, 2, 4
+"""Why the law was not accepted for a view."""
+
+STATE = np.dtype(
+    [
+        # tallies
+        ("incarnation", "<u8"),
+        ("records", "<i8"),  # log records folded
+        ("rows", "<i8"),  # rows with an amount above zero
+        ("zero", "<i8"),
+        ("late", "<i8"),
+        ("first_at", "<i8"),
+        ("last_at", "<i8"),
+        ("last_arrived", "<i8"),
+        ("clock", "<i8", 3),  # rows seen by each watched view
+        ("circle", "<f8", 6),  # sums of cos, sin of 1 and 2 turns; log10 amount and its square
+        ("count", "<i8", CELLS),
+        # detectors
+        ("sums", "<f8", (3, 3)),  # weighted values of a view's cells, per contamination
+        ("shape", "<f8", SHAPES),
+        ("shape_cusum", "<f8", SHAPES),
+        ("shape_onset", "<i8", SHAPES),
+        ("shape_onset_at", "<i8", SHAPES),  # event time of the row before it
+        ("value", "<f8", (CELLS, 3)),  # of a cell's detectors right after its last hit
+        ("hit", "<i8", CELLS),  # the view's clock at the cell's last hit or the last restart
+        ("cusum", "<f8", CELLS),  # after the last hit
+        ("onset", "<i8", CELLS),  # row of the first hit since the CUSUM was last zero
+        ("onset_at", "<i8", CELLS),
+        ("run", "<i8", CELLS),  # hits since onset, and their amounts
+        ("spent", "<f8", CELLS),
+        # references
+        ("policy", "<u4"),
+        ("reference", "u1", 3),
+        ("refuted", "u1", 3),
+        ("block_level", "u1"),
+        ("relearns", "u1"),
+        ("base_rows", "<i8"),
+        ("base_first_at", "<i8"),
+        ("base_last_at", "<i8"),
+        ("base_circle", "<f8", 4),
+        ("base", "<u4", CELLS),  # the baseline's counts
+        ("bound", "<f4", CELLS),  # own upper bounds, before tolerance
+        ("shape_scale", "<f8", SHAPES),  # c of the projection; infinite for a dropped detector
+        ("shape_norm", "<f8", SHAPES),  # z of the alternative
+        # the open alarm
+        ("alarm", "S16"),  # id, binary; empty for none
+        ("alarm_crossings", "<u4"),
+        ("alarm_severity", "<f8"),
+    ],
+    align=True,
+)
+WORDS = STATE.itemsize // 8
+assert STATE.itemsize == WORDS * 8
+
+States = npt.NDArray[np.void]
+
+SNAPSHOT = np.dtype(
+    [
+        ("format", "<u4"),
+        ("generation", "<u4"),
+        ("incarnation", "<u8"),
+        ("records", "<u8"),
+        ("words", "<u4"),  # non-zero words of the record
+        ("buckets", "<u4"),  # entries of the bucket table
+        ("present", "u1", -(-WORDS // 8)),  # bitmap of the non-zero words
+    ]
+)
+
+_BUCKET_BITS, _CELL_BITS = 24, 8
+RUN_BLOCK = 1 << 22
+"""Bucket numbers from here on are baseline blocks of consecutive rows."""
+HOUR_BLOCK = 1 << 23
+"""Bucket numbers from here on are baseline blocks of the time of day."""
+
+
+@dataclass
+class Buckets:
+    """Sparse counts of (stream slot, bucket, cell), sorted by that key.
+
+    Attributes
+    ----------
+    key : int64 array (m,)
+        ``slot << 32 | bucket << 8 | cell``.
+    count : int64 array (m,)
+    """
+
+    key: IntArray
+    count: IntArray
+
+    @classmethod
+    def empty(cls) -> Buckets:
+        """Return a table without entries."""
+        return cls(np.empty(0, np.int64), np.empty(0, np.int64))
+
+    @property
+    def slot(self) -> IntArray:
+        """Slot of each entry."""
+        return self.key >> (_BUCKET_BITS + _CELL_BITS)
+
+    @property
+    def bucket(self) -> IntArray:
+        """Bucket of each entry."""
+        return (self.key >> _CELL_BITS) & ((1 << _BUCKET_BITS) - 1)
+
+    @property
+    def cell(self) -> IntArray:
+        """Cell of each entry."""
+        return self.key & ((1 << _CELL_BITS) - 1)
+
+    def plus(self, slot: IntArray, bucket: IntArray, cell: IntArray, count: IntArray) -> Buckets:
+        """Return the table with counts added; equal keys merge."""
+        key = (slot << (_BUCKET_BITS + _CELL_BITS)) | (bucket << _CELL_BITS) | cell
+        return _merged(np.concatenate([self.key, key]), np.concatenate([self.count, count]))
+
+    def where(self, keep: npt.NDArray[np.bool_]) -> Buckets:
+        """Return the entries selected by a mask."""
+        return Buckets(self.key[keep], self.count[keep])
+
+
+def _merged(key: IntArray, count: IntArray) -> Buckets:
+    if not key.size:
+        return Buckets(key, count)
+    order = np.argsort(key, kind="stable")
+    key, count = key[order], count[order]
+    first = np.flatnonzero(np.concatenate([[True], key[1:] != key[:-1]]))
+    return Buckets(key[first], np.add.reduceat(count, first))
+
+
+@dataclass
+class Folded:
+    """States of n streams, in the order of their slots.
+
+    Attributes
+    ----------
+    state : structured array (n,) of ``STATE``
+    buckets : Buckets
+    """
+
+    state: States
+    buckets: Buckets
+
+    @classmethod
+    def new(cls, n: int) -> Folded:
+        """Return n streams that never saw a row."""
+        return cls(np.zeros(n, STATE), Buckets.empty())
+
+    def only(self, slots: Sequence[int]) -> Folded:
+        """Return some of the streams, renumbered from 0 in the order given."""
+        chosen = np.asarray(slots, dtype=np.int64)
+        where = np.full(len(self.state), -1, np.int64)
+        where[chosen] = np.arange(len(chosen))
+        target = where[self.buckets.slot]
+        kept = self.buckets.where(target >= 0)
+        shift = _BUCKET_BITS + _CELL_BITS
+        key = (target[target >= 0] << shift) | (kept.key & ((1 << shift) - 1))
+        return Folded(self.state[chosen].copy(), _merged(key, kept.count))
+
+
+class CorruptSnapshot(ValueError):
+    """A snapshot that this version cannot read."""
+
+
+def write_snapshots(folded: Folded, generation: IntArray) -> list[bytes]:
+    """Return one snapshot per stream.
+
+    Parameters
+    ----------
+    folded : Folded
+    generation : int64 array (n,)
+        Number of compactions, this one included.
+    """
+    n = len(folded.state)
+    words = folded.state.view(np.uint64).reshape(n, WORDS)
+    present = words != 0
+    header = np.zeros(n, SNAPSHOT)
+    header["format"] = FORMAT
+    header["generation"] = generation
+    header["incarnation"] = folded.state["incarnation"]
+    header["records"] = folded.state["records"]
+    header["words"] = present.sum(axis=1)
+    edges = np.searchsorted(folded.buckets.slot, np.arange(n + 1))
+    header["buckets"] = np.diff(edges)
+    header["present"] = np.packbits(present, axis=1)
+    narrow = (folded.buckets.key & 0xFFFFFFFF).astype("<u4")
+    count = folded.buckets.count.astype("<u4")
+    return [
+        header[i].tobytes()
+        + words[i, present[i]].tobytes()
+        + narrow[edges[i] : edges[i + 1]].tobytes()
+        + count[edges[i] : edges[i + 1]].tobytes()
+        for i in range(n)
+    ]
+
+
+def read_snapshots(snapshots: Sequence[bytes | None]) -> tuple[Folded, IntArray]:
+    """Return the states of snapshots (None for a stream without one) and their generations.
+
+    Raises
+    ------
+    CorruptSnapshot
+        If a snapshot is torn, or of a format that this version does not know.
+    """
+    folded = Folded.new(len(snapshots))
+    generation = np.zeros(len(snapshots), np.int64)
+    slots = [i for i, blob in enumerate(snapshots) if blob is not None]
+    if not slots:
+        return folded, generation
+    blobs = [blob for blob in snapshots if blob is not None]
+    if min(map(len, blobs)) < SNAPSHOT.itemsize:
+        raise CorruptSnapshot("a snapshot is shorter than its header")
+    header = np.frombuffer(b"".join(b[: SNAPSHOT.itemsize] for b in blobs), SNAPSHOT)
+    if np.any(header["format"] != FORMAT):
+        raise CorruptSnapshot(f"snapshot format {int(header['format'].max())} is not {FORMAT}")
+    n_words = header["words"].astype(np.int64)
+    n_buckets = header["buckets"].astype(np.int64)
+    sizes = SNAPSHOT.itemsize + 8 * n_words + 8 * n_buckets
+    if np.any(sizes != [len(b) for b in blobs]):
+        raise CorruptSnapshot("a snapshot is not as long as its header says")
+    present = np.unpackbits(header["present"], axis=1, count=WORDS).astype(bool)
+    if np.any(present.sum(axis=1) != n_words):
+        raise CorruptSnapshot("a snapshot's bitmap does not match its words")
+    words = np.zeros((len(blobs), WORDS), np.uint64)
+    start = SNAPSHOT.itemsize
+    ends = start + 8 * n_words
+    words[present] = np.frombuffer(
+        b"".join(b[start:end] for b, end in zip(blobs, ends.tolist(), strict=True)), "<u8"
+    )
+    folded.state[slots] = words.view(STATE).reshape(-1)
+    middles = ends + 4 * n_buckets
+    parts = list(zip(blobs, ends.tolist(), middles.tolist(), strict=True))
+    narrow = np.frombuffer(b"".join(b[end:middle] for b, end, middle in parts), "<u4")
+    count = np.frombuffer(b"".join(b[middle:] for b, _, middle in parts), "<u4")
+    slot = np.repeat(np.asarray(slots, dtype=np.int64), n_buckets)
+    folded.buckets = Buckets(
+        (slot << (_BUCKET_BITS + _CELL_BITS)) | narrow.astype(np.int64), count.astype(np.int64)
+    )
+    generation[slots] = header["generation"]
+    return folded, generation

@@ -1,0 +1,88 @@
+"""The bank's promises: weights, and likelihood ratios that no member of the null can beat."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy.optimize import linprog
+
+from service.detection import bank
+from service.detection.paths import affine_path, cusum_path
+from service.digits.laws import leading_law
+
+
+def test_weights_sum_to_one() -> None:
+    assert bank.CELL_WEIGHTS.sum() + bank.SHAPE_WEIGHTS.sum() == pytest.approx(1, abs=1e-12)
+    assert bank.EPSILON_SHARES.sum() == pytest.approx(1)
+    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.12, 0.34, 0.42])
+
+
+@pytest.mark.parametrize("tolerance", [0.02, 0.1, 0.3])
+def test_no_member_of_the_null_beats_a_shape_detector(tolerance: float) -> None:
+    # the largest expectation of q/p* over {p <= u, sum p = 1}, by linear programming (SciPy)
+    law = leading_law(2)
+    u = law * (1 + tolerance)
+    q, _ = bank.alternatives(law)
+    c = bank.projection(q, u)
+    for j in range(bank.SHAPES):
+        projected = np.minimum(u, c[j] * q[j])
+        assert projected.sum() == pytest.approx(1, abs=1e-12)
+        ratio = q[j] / projected
+        worst = linprog(-ratio, A_eq=np.ones((1, 90)), b_eq=[1], bounds=list(zip(0 * u, u)))
+        assert -worst.fun == pytest.approx(1, abs=1e-9)
+
+
+def test_dividing_the_mixture_by_the_law_would_break_the_promise() -> None:
+    # why the projection is needed: the naive ratio has an expectation above 1 under the tolerance
+    law = leading_law(2)
+    q, _ = bank.alternatives(law)
+    worst = linprog(
+        -q[1] / law, A_eq=np.ones((1, 90)), b_eq=[1], bounds=[(0, 1.1 * p) for p in law]
+    )
+    assert -worst.fun > 1.01
+
+
+def test_a_shape_inside_the_null_projects_onto_itself() -> None:
+    law = leading_law(2)
+    q, _ = bank.alternatives(law)
+    np.testing.assert_allclose(bank.projection(q, np.minimum(20 * law, 1)), 1, atol=1e-12)
+
+
+def test_bounds_that_leave_no_room_are_refused() -> None:
+    law = leading_law(2)
+    with pytest.raises(ValueError, match="sum to at least 1"):
+        bank.projection(bank.alternatives(law)[0], 0.9 * law)
+
+
+def test_paths_equal_the_plain_recurrence_across_segments() -> None:
+    rng = np.random.default_rng(0)
+    lengths = [1, 7, 1, 64, 65, 3]
+    a = rng.uniform(0, 3, (4, sum(lengths)))
+    b = rng.uniform(0, 2, a.shape)
+    s = rng.normal(0, 1, a.shape)
+    start = rng.uniform(0, 5, (4, len(lengths)))
+    expected, expected_cusum = np.empty_like(a), np.empty_like(a)
+    position = 0
+    scan_a, scan_b, scan_s, scan_m = a.copy(), b.copy(), s.copy(), np.zeros_like(s)
+    for k, length in enumerate(lengths):
+        x, c = start[:, k], start[:, k]
+        scan_b[:, position] += scan_a[:, position] * x
+        scan_a[:, position] = 0
+        scan_m[:, position] = np.maximum(c + s[:, position], 0)
+        scan_s[:, position] = -np.inf
+        for i in range(position, position + length):
+            x = a[:, i] * x + b[:, i]
+            c = np.maximum(c + s[:, i], 0)
+            expected[:, i], expected_cusum[:, i] = x, c
+        position += length
+    np.testing.assert_allclose(affine_path(scan_a, scan_b, max(lengths)), expected, rtol=1e-12)
+    np.testing.assert_allclose(cusum_path(scan_s, scan_m, max(lengths)), expected_cusum, atol=1e-12)
+
+
+def test_enormous_values_stay_finite_and_above_every_threshold() -> None:
+    a = np.full((1, 400), 40.0)
+    b = np.full((1, 400), 40.0)
+    a[0, 0] = 0
+    path = affine_path(a, b, 400)
+    assert np.all(np.isfinite(path))
+    assert np.all(path[0, 60:] > 1e90)

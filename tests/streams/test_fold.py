@@ -1,0 +1,241 @@
+"""The fold agrees with a plain loop over rows, however the log is cut."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from service.detection import bank
+from service.detection.policy import Policy
+from service.digits.views import VIEW_OF_CELL
+from service.streams.findings import evidence_of_cells
+from service.streams.fold import Crossing, fold
+from service.streams.record import HISTORIC, RECORD
+from service.streams.state import (
+    BY_LAW,
+    BY_OWN,
+    UNDECIDED,
+    Folded,
+    read_snapshots,
+    write_snapshots,
+)
+from tests.streams.plain import PlainStream
+
+START = 1_790_000_000_000  # ms since 1970 UTC, September 2026
+LAW = Policy(reference="law", transactions_per_false_alarm=1e6)
+
+
+def records(amounts, *, at=None, arrived=None, policy=1, flags=0):
+    amounts = np.asarray(amounts, np.int64)
+    out = np.zeros(len(amounts), RECORD)
+    at = START + 60_000 * np.arange(len(amounts)) if at is None else np.asarray(at)
+    arrived = at if arrived is None else np.asarray(arrived)
+    out["amount"] = amounts
+    out["at_s"], out["at_ms"] = at // 1000, at % 1000
+    out["arrived_s"], out["arrived_ms"] = arrived // 1000, arrived % 1000
+    out["policy"] = policy
+    out["flags"] = flags
+    return out
+
+
+def run(logs, policies, *, cuts=None, snapshots=False) -> tuple[Folded, list[Crossing]]:
+    """Fold one log per stream, whole or in pieces; optionally through snapshots in between."""
+    folded = Folded.new(len(logs))
+    names = [f"t/m{i}".encode() for i in range(len(logs))]
+    flows = ["sale"] * len(logs)
+    crossings = []
+    edges = [[0, *c, len(log)] for c, log in zip(cuts or [[]] * len(logs), logs, strict=True)]
+    for k in range(max(map(len, edges)) - 1):
+        parts = [
+            log[e[k] : e[k + 1]] if k + 1 < len(e) else log[:0]
+            for e, log in zip(edges, logs, strict=True)
+        ]
+        slot = np.repeat(np.arange(len(logs)), [len(p) for p in parts])
+        crossings += fold(folded, np.concatenate(parts), slot, policies, flows, names)
+        if snapshots:
+            blobs = write_snapshots(folded, np.ones(len(logs), np.int64))
+            folded, _ = read_snapshots(blobs)
+    return folded, sorted(crossings, key=lambda c: (c.slot, c.record))
+
+
+def law_amounts(rng, n, low=1.5, high=6.5):
+    return np.maximum(1, 10 ** rng.uniform(low, high, n)).astype(np.int64)
+
+
+def with_fraud(rng, n, change, share):
+    amounts = law_amounts(rng, n)
+    bad = (np.arange(n) >= change) & (rng.random(n) < share)
+    amounts[bad] = rng.integers(490_000, 500_000, bad.sum())
+    return amounts
+
+
+def test_every_value_and_alarm_equals_the_plain_loop() -> None:
+    rng = np.random.default_rng(1)
+    logs = [
+        with_fraud(rng, 900, 500, 0.4),
+        law_amounts(rng, 1300),
+        rng.integers(1, 100, 300),  # too small for a tail pair, some without a lead pair
+        np.full(60, 4900),
+        with_fraud(rng, 5, 0, 1.0),
+    ]
+    folded, crossings = run([records(a) for a in logs], {1: LAW})
+    bounds = bank.LAW * (1 + np.array(LAW.tolerances())[VIEW_OF_CELL])
+    assert len(crossings) > 20
+    for s, amounts in enumerate(logs):
+        plain = PlainStream(bounds, bank.LAW[9:99], 1e6)
+        for amount in amounts.tolist():
+            plain.add(amount)
+        state = folded.state[s]
+        mine = [c for c in crossings if c.slot == s]
+        assert [c.rows for c in mine] == [row for row, _ in plain.crossings]
+        np.testing.assert_allclose(
+            [c.evidence for c in mine], np.log10([t for _, t in plain.crossings]), rtol=1e-9
+        )
+        np.testing.assert_array_equal(state["count"], plain.count)
+        np.testing.assert_allclose(
+            evidence_of_cells(state),
+            (bank.CELL_WEIGHTS[:, None] * bank.EPSILON_SHARES * plain.value).sum(axis=1),
+            rtol=1e-9,
+        )
+        np.testing.assert_allclose(
+            state["shape"][plain.shape_on], plain.shape[plain.shape_on], rtol=1e-7
+        )
+        by_view = [
+            (bank.CELL_WEIGHTS[:, None] * plain.value)[v == VIEW_OF_CELL].sum(axis=0)
+            * bank.EPSILON_SHARES
+            for v in range(3)
+        ]
+        np.testing.assert_allclose(state["sums"], by_view, rtol=1e-9, atol=1e-300)
+        misses = state["clock"][VIEW_OF_CELL] - state["hit"]
+        cusum = np.maximum(state["cusum"] + misses * np.log(bank.CUSUM_RETAINED), 0)
+        np.testing.assert_allclose(cusum, plain.cusum, atol=1e-9)
+        running = (plain.cusum > 0) & (state["cusum"] > 0)
+        np.testing.assert_array_equal(state["onset"][running], plain.onset[running])
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_cuts_and_snapshots_change_nothing(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    policies = {
+        1: Policy(baseline_size=400, baseline_days=1.0),
+        2: LAW,
+        3: Policy(baseline_size=300, baseline_days=0, tolerance=0.2, version=3),
+    }
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], 2500)
+    lengths = (2500, 2000, 700, 40)
+    logs = [
+        records(np.where(rng.random(2500) < 0.03, 0, shop), policy=1),
+        records(with_fraud(rng, 2000, 1200, 0.3), policy=np.repeat([1, 3, 2], (1500, 300, 200))),
+        records(with_fraud(rng, 700, 0, 0.5), policy=np.repeat([2, 1], (600, 100))),
+        records(np.full(40, 123_400), policy=2),
+    ]
+    for log in logs:  # arrival out of step with event time, some rows late
+        shift = rng.choice([0, 1, 40], len(log), p=[0.6, 0.3, 0.1]) * 6 * 3600
+        log["arrived_s"] += shift.astype(np.uint32)
+    whole, expected = run(logs, policies)
+    assert expected
+    cuts = [sorted(rng.integers(0, n + 1, rng.integers(1, 60)).tolist()) for n in lengths]
+    pieces, crossings = run(logs, policies, cuts=cuts, snapshots=True)
+    assert [(c.slot, c.record, c.alarm, c.ordinal, c.rows, c.historic) for c in crossings] == [
+        (c.slot, c.record, c.alarm, c.ordinal, c.rows, c.historic) for c in expected
+    ]
+    for mine, other in zip(crossings, expected, strict=True):
+        assert mine.evidence == pytest.approx(other.evidence, rel=1e-9)
+        assert [f.cells for f in mine.findings] == [f.cells for f in other.findings]
+        assert [f.onset_row for f in mine.findings] == [f.onset_row for f in other.findings]
+    for name in whole.state.dtype.names or ():
+        mine, other = pieces.state[name], whole.state[name]
+        if mine.dtype.kind == "f":
+            np.testing.assert_allclose(mine, other, rtol=1e-9, atol=1e-9, err_msg=name)
+        else:
+            np.testing.assert_array_equal(mine, other, err_msg=name)
+    np.testing.assert_array_equal(pieces.buckets.key, whole.buckets.key)
+    np.testing.assert_array_equal(pieces.buckets.count, whole.buckets.count)
+
+
+def test_zero_is_counted_in_zero_and_in_nothing_else() -> None:
+    rng = np.random.default_rng(3)
+    amounts = law_amounts(rng, 500)
+    with_zeros = np.insert(amounts, [0, 10, 10, 499, 500], 0)
+    plain, _ = run([records(amounts, at=np.full(500, START))], {1: LAW})
+    other, _ = run([records(with_zeros, at=np.full(505, START))], {1: LAW})
+    assert other.state["zero"][0] == 5
+    assert other.state["records"][0] == 505
+    for name in whole_names(plain):
+        np.testing.assert_array_equal(other.state[name], plain.state[name], err_msg=name)
+
+
+def whole_names(folded: Folded) -> list[str]:
+    return [n for n in folded.state.dtype.names or () if n not in ("zero", "records")]
+
+
+def test_late_rows_count_for_lifetime_and_detectors_but_not_for_the_window() -> None:
+    day = 86_400_000
+    amounts = [1234, 1234, 1234]
+    at = np.array([START - 8 * day, START - 6 * day, START])
+    folded, _ = run([records(amounts, at=at, arrived=np.full(3, START))], {1: LAW})
+    assert folded.state["late"][0] == 1
+    assert folded.state["rows"][0] == 3
+    assert folded.state["count"][0, 0] == 3
+    assert folded.buckets.count[folded.buckets.cell == 0].sum() == 2
+
+
+def test_a_law_like_merchant_is_accepted_and_a_price_point_shop_is_not() -> None:
+    rng = np.random.default_rng(4)
+    n = 3000
+    at = START + np.linspace(0, 20 * 86_400_000, n).astype(np.int64)
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], n)
+    folded, crossings = run(
+        [records(law_amounts(rng, n, 2, 6), at=at), records(shop, at=at)], {1: Policy()}
+    )
+    assert crossings == []
+    np.testing.assert_array_equal(folded.state["reference"][0], BY_LAW)
+    np.testing.assert_array_equal(folded.state["reference"][1], BY_OWN)
+
+
+def test_a_baseline_needs_both_its_rows_and_its_days() -> None:
+    rng = np.random.default_rng(5)
+    day = 86_400_000
+    few_days = START + np.linspace(0, 10 * day, 2000).astype(np.int64)
+    few_rows = START + np.linspace(0, 30 * day, 900).astype(np.int64)
+    both = START + np.linspace(0, 15 * day, 1100).astype(np.int64)
+    folded, _ = run(
+        [records(law_amounts(rng, len(at), 2, 6), at=at) for at in (few_days, few_rows, both)],
+        {1: Policy()},
+    )
+    learning = (folded.state["reference"] == UNDECIDED).any(axis=1)
+    np.testing.assert_array_equal(learning, [True, True, False])
+
+
+def test_a_cheat_against_the_own_baseline_is_found() -> None:
+    rng = np.random.default_rng(6)
+    n = 4000
+    at = START + np.linspace(0, 40 * 86_400_000, n).astype(np.int64)
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], n)
+    shop[(np.arange(n) > 3000) & (rng.random(n) < 0.2)] = 4900
+    folded, crossings = run([records(shop, at=at)], {1: Policy()})
+    first = crossings[0]
+    assert 3000 < first.rows < 3200
+    assert 2950 < first.findings[0].onset_row <= first.rows
+    assert "00" in {c for f in first.findings for c in f.cells}
+    assert {f.reference for f in first.findings} == {"own"}
+    assert first.evidence >= 6
+    assert folded.state["alarm"][0]
+
+
+def test_history_marks_its_alarms() -> None:
+    logs = [records(np.full(50, 4900), flags=HISTORIC)]
+    _, crossings = run(logs, {1: LAW})
+    assert crossings
+    assert all(c.historic for c in crossings)
+    assert [c.ordinal for c in crossings] == list(range(len(crossings)))
+    assert len({c.alarm for c in crossings}) == 1
+
+
+def test_quiet_flows_are_tallied_but_raise_nothing() -> None:
+    folded = Folded.new(1)
+    log = records(np.full(500, 4900))
+    slot = np.zeros(500, np.int64)
+    assert fold(folded, log, slot, {1: LAW}, ["chargeback"], [b"x"]) == []
+    assert folded.state["rows"][0] == 500
+    assert folded.state["sums"][0].sum() > 1e6
