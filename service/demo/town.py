@@ -117,7 +117,7 @@ def _shops() -> tuple[Merchant, ...]:
     }  # fmt: skip
     return (
         Merchant("kestrel-market", "supermarket", "5411",
-                 price_list(shelf, items=(6, 8, 9, 9, 9, 8, 8, 7, 6, 6, 5, 5, 4, 4, 3, 3)),
+                 price_list(shelf, items=(8, 9, 9, 8, 7, 5, 4, 3, 2, 1)),
                  daily=110, refunds=0.01, names_flow=False),
         Merchant("rising-crust", "bakery", "5462",
                  price_list({65: 6, 120: 9, 185: 5, 240: 6, 320: 7, 390: 4, 450: 2},
