@@ -125,7 +125,7 @@ def _shops() -> tuple[Merchant, ...]:
         Merchant("lighthouse-screen", "cinema", "7832",
                  price_list({750: 3, 950: 6, 1150: 8, 1350: 3}, items=(3, 8, 2, 2), together=True),
                  opening=((14.0, 22.5, 1.0),), refunds=0.01),
-        Merchant("harbour-books", "bookshop", "5942",
+        Merchant("foghorn-books", "bookshop", "5942",
                  price_list({599: 2, 799: 4, 999: 8, 1099: 5, 1249: 4, 1299: 7, 1495: 6, 1699: 4,
                              1999: 5, 2249: 3, 2495: 3, 2999: 2, 3495: 1}, items=(7, 2, 1)),
                  refunds=0.02, decimals=True),

@@ -90,10 +90,10 @@ def test_the_report_passes_on_explanations_and_says_what_was_found(story: Scenar
 
 
 def test_the_report_hides_neither_a_miss_nor_a_wrong(story: Scenario) -> None:
-    text = told(story, [*all_caught(story)[1:], alarm("harbour-books", 2000)])
+    text = told(story, [*all_caught(story)[1:], alarm("foghorn-books", 2000)])
     assert f"MISSED: {story.cheats[0].merchant}" in text
     assert "Cheats found: 2 of 3." in text
-    assert "WRONGLY ALARMED: harbour-books" in text
+    assert "WRONGLY ALARMED: foghorn-books" in text
     assert "Honest merchants without an alarm: 32 of 33." in text
 
 
