@@ -68,7 +68,8 @@ def clopper_pearson_lower(
 
 def clopper_pearson(counts: npt.ArrayLike, n: npt.ArrayLike, alpha: npt.ArrayLike) -> Interval:
     """Return the exact two-sided interval, alpha / 2 on each side; arguments as the bounds'."""
-    half = np.asarray(alpha, dtype=np.float64) / 2
+    _, _, a = _checked_shares(counts, n, alpha)
+    half = a / 2
     return Interval(clopper_pearson_lower(counts, n, half), clopper_pearson_upper(counts, n, half))
 
 
