@@ -10,6 +10,7 @@ from service.settings import Settings
 from service.tallies import Tallies
 from service.web import headers, problems
 from service.web.alarms import alarms
+from service.web.batches import batches
 from service.web.checks import checks
 from service.web.documentation import documentation
 from service.web.health import health
@@ -18,7 +19,7 @@ from service.web.openapi import Api
 from service.web.parts import assemble
 from service.web.policies import policies
 
-RESOURCES = (merchants, alarms, policies, checks, health, documentation)
+RESOURCES = (batches, merchants, alarms, policies, checks, health, documentation)
 
 
 def create_app(settings: Settings | None = None, tallies: Tallies | None = None) -> Flask:

@@ -1,4 +1,4 @@
-"""JSON bodies read strictly: no name twice, no NaN, no half characters; faults with their place."""
+"""Bodies read whole or not at all, and JSON read strictly: no name twice, no NaN."""
 
 from __future__ import annotations
 
@@ -6,8 +6,31 @@ import json
 from collections.abc import Iterator
 from typing import Any
 
+from flask import current_app, request
+
 from service.batches.document import Members, parse
-from service.web.problems import Problem, faults, invalid
+from service.web.problems import Problem, faults, invalid, too_large
+
+
+def read_body() -> bytes:
+    """Return the current request's body as it was sent, all of it.
+
+    Raises
+    ------
+    Problem
+        413 above the limit, 400 where the body broke off.
+    """
+    limit: int = current_app.config["MAX_CONTENT_LENGTH"]
+    # The stream of a body without a length ends at its limit as if that were all, and that of a
+    # caller who hung up ends early; a batch cut at a line's end would look whole.
+    request.max_content_length = limit + 1
+    body = request.get_data(cache=False)
+    if len(body) > limit:
+        raise too_large(limit)
+    said = request.content_length
+    if said is not None and len(body) != said:
+        raise Problem(400, f"The body broke off after {len(body):,} of {said:,} bytes.")
+    return body
 
 
 def strict_json(body: bytes) -> Any:

@@ -36,7 +36,7 @@ def check_amounts(request: dict[str, Any]) -> Response:
     try:
         decimals = exponent(currency)
     except ValueError as error:
-        raise invalid([{"pointer": "/currency", "detail": f"The currency {error}."}]) from error
+        raise invalid([{"pointer": "/currency", "detail": str(error)}]) from error
     amounts = _minor_units(request["amounts"], decimals)
     return reply({"currency": currency, **check(amounts), "warning": ONE_LOOK})
 
@@ -51,7 +51,7 @@ def _minor_units(given: list[int | str], decimals: int) -> IntArray:
         if 0 <= number <= MAX_AMOUNT:
             amounts[i] = number
         else:
-            errors[i] = "must be 0 to 10^15 minor units"
+            errors[i] = "Expected 0 to 10^15 minor units."
     values, ok = minor_units_column([text for _, text in texts], decimals)
     for (i, text), value, fine in zip(texts, values.tolist(), ok.tolist(), strict=True):
         if fine and value >= 0:
@@ -68,10 +68,10 @@ def _why(text: str, decimals: int) -> str:
         minor_units(text, decimals)
     except ValueError as error:
         return str(error)
-    return "must be 0 to 10^15 minor units"
+    return "Expected 0 to 10^15 minor units."
 
 
 def _refused(errors: dict[int, str]) -> Problem:
     return invalid(
-        [{"pointer": f"/amounts/{i}", "detail": f"The amount {errors[i]}."} for i in sorted(errors)]
+        [{"pointer": f"/amounts/{i}", "detail": errors[i]} for i in sorted(errors)]
     )

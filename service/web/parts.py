@@ -8,6 +8,7 @@ from typing import cast
 
 from flask import current_app
 
+from service.batches.limits import Defaults, Limits
 from service.settings import Settings
 from service.tallies import Tallies
 from service.web.keyring import Keyring, keyring
@@ -22,12 +23,16 @@ class Parts:
     seats : BoundedSemaphore
         One for each request that may wait for an alarm: half the threads, so that posting never
         starves.
+    limits, defaults
+        What a batch may hold, and what its rows mean where they leave a field out.
     """
 
     settings: Settings
     tallies: Tallies
     keyring: Keyring
     seats: threading.BoundedSemaphore
+    limits: Limits
+    defaults: Defaults
 
 
 def parts() -> Parts:
@@ -43,4 +48,12 @@ def tallies() -> Tallies:
 def assemble(settings: Settings, tallies: Tallies) -> Parts:
     """Return the parts of a new app."""
     seats = threading.BoundedSemaphore(max(1, settings.threads // 2))
-    return Parts(settings, tallies, keyring(settings.admin_key), seats)
+    limits = Limits(
+        max_rows=settings.max_rows,
+        max_body=settings.max_body,
+        max_expanded=settings.max_expanded,
+        max_streams=settings.max_streams,
+        horizon_ms=settings.horizon_days * 24 * 3600 * 1000,
+    )
+    defaults = Defaults(currency=settings.currency)
+    return Parts(settings, tallies, keyring(settings.admin_key), seats, limits, defaults)

@@ -121,12 +121,14 @@ def register(app: Flask) -> None:
 
 
 def _said(detail: str) -> str:
-    return f"{detail[:1].upper()}{detail[1:]}."
+    """Return a reason as a sentence."""
+    return f"{detail[:1].upper()}{detail[1:].rstrip('.')}."
 
 
 def _of_unreadable(error: Unreadable) -> Response:
     place = f" (line {error.line}, column {error.column})" if error.line is not None else ""
-    return problem_response(Problem(400, f"The body cannot be read: {error.detail}{place}."))
+    reason = error.detail.rstrip(".")
+    return problem_response(Problem(400, f"The body cannot be read: {reason}{place}."))
 
 
 def _of_invalid(error: Invalid) -> Response:

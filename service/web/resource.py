@@ -17,7 +17,7 @@ from flask import Request, Response
 from flask_smorest.utils import deepupdate
 from webargs.flaskparser import FlaskParser
 
-from service.web.bodies import strict_json
+from service.web.bodies import read_body, strict_json
 from service.web.problems import Problem, faults, invalid
 
 View = TypeVar("View", bound=Callable[..., Any])
@@ -38,7 +38,7 @@ class StrictParser(FlaskParser):
             raise Problem(415, "Send the body as application/json.")
         if req.headers.get("Content-Encoding", "identity").strip().lower() != "identity":
             raise Problem(415, "This path takes no Content-Encoding.")
-        return strict_json(req.get_data(cache=False))
+        return strict_json(read_body())
 
     def load_querystring(self, req: Request, schema: ma.Schema) -> Any:
         """Return the query parameters; one given twice is refused, as it is ambiguous."""
@@ -87,6 +87,10 @@ class Resource(flask_smorest.Blueprint):  # type: ignore[misc]
     def asks(self, schema: type[ma.Schema]) -> Callable[[View], View]:
         """Hand the query parameters to the view, checked by a schema."""
         return cast(Callable[[View], View], self.arguments(schema, location="query"))
+
+    def query(self, schema: type[ma.Schema]) -> dict[str, Any]:
+        """Return the current request's query parameters, for views that read them themselves."""
+        return cast(dict[str, Any], self.ARGUMENTS_PARSER.parse(schema(), location="query"))
 
     def answers(
         self, schema: type[ma.Schema], description: str, status: int = 200, **kwargs: Any

@@ -1,0 +1,141 @@
+"""Posting: bytes of a request to a receipt, by way of one batch."""
+
+from __future__ import annotations
+
+import hashlib
+import re
+from typing import Any
+
+from flask import Response, request
+
+from schemas.batch import BatchQuery, Receipt
+from schemas.transaction import BatchSchema, TransactionSchema
+from service.batches.batch import Batch, Rejection
+from service.batches.body import expand
+from service.batches.read import read_batch
+from service.tallies import Conflict, Document, Posted
+from service.web.access import principal, requires
+from service.web.bodies import read_body
+from service.web.clock import now
+from service.web.parts import parts
+from service.web.problems import Problem, invalid
+from service.web.resource import Resource, documents, reply
+
+batches = Resource("batches", __name__, description="Posting transactions.")
+
+NDJSON = {"application/json": False, "application/x-ndjson": True}
+"""Content types that are taken, and whether they hold a transaction a line."""
+
+_KEY = re.compile(r"[\x20-\x7e]{1,128}")
+_PLAIN: dict[str, Any] = BatchQuery().load({})
+
+
+def _describe(doc: dict[str, Any]) -> None:
+    """Describe what the view reads by itself: query, headers and body."""
+    manual = doc.setdefault("manual_doc", {})
+    manual["parameters"] = [
+        {"in": "query", "schema": BatchQuery},
+        {
+            "in": "header",
+            "name": "Idempotency-Key",
+            "description": "Identifies the rows that have no identity of their own, by their "
+            "position. The same key with another body is 422.",
+            "schema": {"type": "string", "pattern": f"^{_KEY.pattern}$"},
+        },
+        {
+            "in": "header",
+            "name": "Content-Encoding",
+            "description": "How the body is packed; its size is bounded after unpacking too.",
+            "schema": {"type": "string", "enum": ["identity", "gzip"], "default": "identity"},
+        },
+    ]
+    manual["requestBody"] = {
+        "required": True,
+        "description": "A batch, or one transaction a line (`application/x-ndjson`).",
+        "content": {
+            "application/json": {"schema": BatchSchema},
+            "application/x-ndjson": {"schema": TransactionSchema},
+        },
+    }
+
+
+@batches.path("/v1/batches", "POST")
+@requires("post")
+@batches.answers(Receipt, "What became of the batch.")
+@batches.fails(400, 413, 415, 422, 503)
+@documents(_describe)
+def post_batch() -> Response:
+    """Post a batch of transactions.
+
+    Post each sale once: the capture, not also its authorisation; the amount that the merchant
+    priced, before currency conversion, tip and cash-back. A negative amount without a flow is a
+    refund of its absolute value. Detectors see a stream's rows in the order given.
+
+    A row is counted exactly once, however often it is sent and however batches are cut, if it
+    has an identity: `source` and `offset`, or `id`, or the request's `Idempotency-Key` and its
+    position. After a 503 or a lost answer, send the same batch again: it is completed, and
+    nothing is doubled.
+    """
+    ndjson = NDJSON.get(request.mimetype)
+    if ndjson is None:
+        raise Problem(415, f"Send a batch as {' or '.join(NDJSON)}.")
+    query = _PLAIN if not request.query_string else batches.query(BatchQuery)
+    idempotency_key = _idempotency_key()
+    here, arrived = parts(), now()
+    tallies, tenant = here.tallies, principal().tenant
+    body = expand(read_body(), request.headers.get("Content-Encoding"), here.limits)
+    batch = read_batch(
+        body,
+        ndjson=ndjson,
+        limits=here.limits,
+        defaults=here.defaults,
+        now=arrived,
+        ident_key=tallies.ident_key(),
+        idempotency_key=idempotency_key,
+        skip_invalid=query["invalid"] == "skip",
+    )
+    if idempotency_key is not None:
+        try:
+            tallies.claim(tenant, idempotency_key, hashlib.sha256(body).hexdigest())
+        except Conflict as conflict:
+            fault = {"header": "Idempotency-Key", "detail": str(conflict.args[0])}
+            raise invalid([fault]) from conflict
+    posted = tallies.post(
+        tenant, batch, historic="mode" in query, reply=query["reply"], now=arrived
+    )
+    return reply(_receipt(batch, posted, tallies.durability, query["reply"]))
+
+
+def _idempotency_key() -> str | None:
+    key = request.headers.get("Idempotency-Key")
+    if key is not None and _KEY.fullmatch(key) is None:
+        expected = "Expected 1 to 128 printable ASCII characters."
+        raise invalid([{"header": "Idempotency-Key", "detail": expected}])
+    return key
+
+
+def _receipt(batch: Batch, posted: Posted, durability: str, wanted: str) -> Document:
+    receipt: Document = {
+        "accepted": posted.accepted,
+        "duplicates": posted.duplicates,
+        "late": posted.late,
+        "zero": posted.zero,
+        "unverified": posted.unverified,
+        "rejected": [_rejected(rejection) for rejection in batch.rejected],
+        "exactly_once": batch.exactly_once,
+        "durability": durability,
+        "alarms": posted.alarms,
+    }
+    if wanted != "alarms":
+        receipt["merchants"] = posted.entries
+    return receipt
+
+
+def _rejected(rejection: Rejection) -> Document:
+    return {
+        "index": rejection.index,
+        "id": rejection.id,
+        "pointer": rejection.pointer,
+        "detail": rejection.detail,
+        "retryable": rejection.retryable,
+    }

@@ -1,0 +1,1 @@
+"""The web, as its callers meet it."""
