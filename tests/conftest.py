@@ -18,6 +18,26 @@ import redis
 from service.store.embedded import EmbeddedStore, find_server
 from service.store.errors import StoreError
 
+NO_SKIP = "TALLYWARD_CHECK_NO_SKIP"
+_no_skip = os.environ.get(NO_SKIP, "") not in ("", "0")
+
+
+def pytest_configure() -> None:
+    """Keep the settings of whoever runs the tests out of them, and of the services they start."""
+    for name in list(os.environ):
+        if name.startswith("TALLYWARD_"):
+            del os.environ[name]
+
+
+@pytest.hookimpl(tryfirst=True)
+def pytest_sessionfinish(session: pytest.Session) -> None:
+    """Where nothing may be missing, a skipped test is a failure; ``-rs`` lists them by name."""
+    reporter = session.config.pluginmanager.get_plugin("terminalreporter")
+    skipped = reporter.stats.get("skipped", []) if reporter else []
+    if _no_skip and skipped and session.exitstatus == pytest.ExitCode.OK:
+        reporter.write_line(f"\n{NO_SKIP} is set and {len(skipped)} were skipped: failed")
+        session.exitstatus = pytest.ExitCode.TESTS_FAILED
+
 
 @pytest.fixture(scope="session", params=["redis", "valkey"])
 def store_binary(request: pytest.FixtureRequest) -> Path:
@@ -64,10 +84,3 @@ def fresh_store(_emptied_store: tuple[redis.Redis, str, dict[str, str]]) -> str:
 def lone_store(store_binary: Path, tmp_path: Path) -> Iterator[EmbeddedStore]:
     with EmbeddedStore(tmp_path / "store", store_binary) as store:
         yield store
-
-
-@pytest.fixture(autouse=True)
-def _no_settings_from_outside(monkeypatch: pytest.MonkeyPatch) -> None:
-    for name in list(os.environ):
-        if name.startswith("TALLYWARD_") and not name.startswith("TALLYWARD_CHECK_"):
-            monkeypatch.delenv(name)

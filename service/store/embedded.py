@@ -15,7 +15,6 @@ import shutil
 import signal
 import socket
 import subprocess
-import sys
 import tempfile
 import threading
 import time
@@ -24,8 +23,8 @@ from types import TracebackType
 from typing import IO, Literal
 from urllib.parse import quote
 
-from service.store import tether
 from service.store.errors import StoreError
+from service.store.tether import tethered
 
 log = logging.getLogger(__name__)
 
@@ -337,7 +336,7 @@ class EmbeddedStore:
         command = [str(binary), *(part for k, v in options.items() for part in (f"--{k}", v))]
         with open(self.data / "server.log", "ab", opener=_private) as said:
             child = subprocess.Popen(
-                [sys.executable, "-I", "-S", tether.__file__, str(os.getpid()), *command],
+                tethered(command),
                 cwd=self.data,
                 stdin=subprocess.DEVNULL,
                 stdout=said,

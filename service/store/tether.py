@@ -14,6 +14,11 @@ import sys
 PR_SET_PDEATHSIG = 1
 
 
+def tethered(command: list[str]) -> list[str]:
+    """Return a command line that runs ``command`` tethered to the calling thread."""
+    return [sys.executable, "-I", "-S", __file__, str(os.getpid()), *command]
+
+
 def main(parent: int, command: list[str]) -> None:
     """Ask for a SIGTERM at the parent's end, then become ``command``.
 
