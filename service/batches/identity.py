@@ -12,6 +12,7 @@ set keeps them as integers and their width tells nothing.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import lru_cache
 from hashlib import blake2b
 
 import numpy as np
@@ -69,8 +70,7 @@ def row_idents(ids: Sequence[str], key: tuple[int, int]) -> Words:
     words = np.ascontiguousarray(padded.view("<u8").T.astype(np.uint64, copy=False))
     keys = _keys(key, _ROW)
     mixed = _mix(words ^ keys[:used, None]).sum(axis=0, dtype=np.uint64)
-    # The words of an id beyond the longest one of this batch are zero: add what they come to.
-    mixed += _mix(keys[used:_WORDS]).sum(dtype=np.uint64)
+    mixed += _zeros(key)[used]
     return _decimal(_mix(np.bitwise_xor(mixed, keys[_WORDS])))
 
 
@@ -103,12 +103,25 @@ def position_idents(
     return _decimal(_mix(mixed ^ keys[_WORDS]))
 
 
+@lru_cache(maxsize=8)
+def _zeros(key: tuple[int, int]) -> Words:
+    """Return what the words from each place on come to when they are zero.
+
+    An id's words beyond the longest id of its batch are not hashed, but added from here.
+    """
+    mixed = _mix(_keys(key, _ROW)[:_WORDS])
+    return np.array([mixed[used:].sum(dtype=np.uint64) for used in range(_WORDS + 1)])
+
+
+@lru_cache(maxsize=16)
 def _keys(key: tuple[int, int], domain: int) -> Words:
     """Return one key for each word and one for the sum; different in each domain."""
     first, second = key
     steps = [(first + _GOLDEN * (domain * 16 + place)) & _MASK for place in range(_WORDS)]
     steps.append((second + _GOLDEN * domain) & _MASK)
-    return _mix(np.array(steps, dtype=np.uint64) ^ np.uint64(second & _MASK))
+    keys = _mix(np.array(steps, dtype=np.uint64) ^ np.uint64(second & _MASK))
+    keys.flags.writeable = False  # shared by all callers
+    return keys
 
 
 def _mix(words: Words) -> Words:

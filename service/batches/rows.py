@@ -55,20 +55,31 @@ def typed_rows(body: bytes, *, ndjson: bool) -> list[Row] | None:
     try:
         if not ndjson:
             return _document.decode(body).transactions
-        newlines = body.count(b"\n")
-        if body.count(b"}\n") != newlines or not body.endswith((b"}", b"}\n")):
+        tidy, lines = _one_a_line(body)
+        if not tidy:
             body = b"\n".join([line[0].rstrip(_BLANK) for line in LINE.finditer(body)])
-            newlines = body.count(b"\n")
-        rows = _lines.decode_lines(body)
+            tidy, lines = _one_a_line(body)
+        rows = _lines.decode_lines(body) if tidy else []
     except (msgspec.DecodeError, UnicodeDecodeError, RecursionError):
         return None
-    # The decoder also takes two objects on a line, and one that spans lines. As no field of a
-    # row holds an object, a line break after a brace is between rows; if all breaks are, and
-    # there are as many lines as rows, then every line holds one.
-    lines = newlines + (0 if body.endswith(b"\n") or not body else 1)
-    if body.count(b"}\n") != newlines or lines != len(rows):
-        return None
-    return rows
+    return rows if tidy and len(rows) == lines else None
+
+
+def _one_a_line(body: bytes) -> tuple[bool, int]:
+    """Tell whether every line break follows a brace, and how many lines there are.
+
+    The decoder also takes two objects on a line, and one that spans lines. As no field of a row
+    holds an object, a line break after a brace is between rows; if all breaks are, and there are
+    as many lines as rows, then every line holds one.
+    """
+    if not body:
+        return True, 0
+    characters = np.frombuffer(body, dtype=np.uint8)
+    breaks = np.flatnonzero(characters == ord("\n"))
+    if breaks.size == 0:
+        return True, 1
+    tidy = breaks[0] > 0 and bool((characters[breaks - 1] == ord("}")).all())
+    return tidy, breaks.size + (0 if breaks[-1] == len(body) - 1 else 1)
 
 
 def unrepeated(body: bytes, *, ndjson: bool, names: int, texts: int) -> bool:
