@@ -2,32 +2,44 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import hashlib
+import time
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
+import redis
+from redis.exceptions import RedisError
+
 from service.batches.batch import Batch
+from service.settings import Settings
+from service.store.catalogue import Catalogue, Policies
+from service.store.charter import charter
+from service.store.connection import StoreFacts, connect, inspect
+from service.store.directory import Directory
+from service.store.errors import Conflict, StoreError, Unavailable, Unknown
+from service.store.feed import Feed
+from service.store.judge import Judge, Judged
+from service.store.keys import Tenant, path
+from service.store.loading import kept_records
+from service.store.logs import Appended, Logs
+from service.store.sweep import Sweep
+from service.streams import record
+from service.streams.detail import detail
+from service.streams.entries import entries, utc
+from service.streams.fold import WINDOW_MS
 from service.streams.record import Stream
+from service.streams.table import digits
+
+__all__ = ["Conflict", "Posted", "StoreError", "Tallies", "Unavailable", "Unknown"]
 
 Document = dict[str, Any]
 """A JSON-ready mapping, with the names of the API."""
 
-
-class Unknown(LookupError):
-    """What was asked for does not exist; ``args[0]`` says what does."""
-
-
-class Unavailable(Exception):
-    """The store cannot answer now; sending the same again later is safe.
-
-    ``args[0]`` says what was and what was not applied; ``retry_after`` is in seconds.
-    """
-
-    retry_after: int = 1
-
-
-class Conflict(Exception):
-    """The request contradicts what is stored; ``args[0]`` says how."""
+CATEGORIES_KNOWN = 100_000
+"""Merchants whose category a worker remembers, so as not to write it again with every batch."""
 
 
 @dataclass(frozen=True)
@@ -54,76 +66,346 @@ class Posted:
 
 
 class Tallies:
-    """The tallies of all tenants in one store."""
+    """The tallies of all tenants in one store.
 
-    durability: str
-    """What a 200 means: ``none``, ``everysec``, ``always``."""
+    Parameters
+    ----------
+    settings : Settings
+        ``redis_url`` must name a running store.
+
+    Raises
+    ------
+    StoreError
+        If the store was made with other partitions, or by another format.
+    """
+
+    def __init__(self, settings: Settings) -> None:
+        assert settings.redis_url is not None
+        self.client: redis.Redis = connect(settings.redis_url, settings.store_timeout)
+        self.horizon_s = settings.horizon_days * 86_400
+        self.sweep_seconds = settings.sweep_seconds
+        with _answering():
+            fixed = charter(self.client, settings.partitions)
+        self._ident_key = fixed.ident_key
+        self.catalogue = Catalogue(self.client)
+        self.feed = Feed(self.client)
+        self.logs = Logs(self.client, fixed.partitions, self.horizon_s)
+        self.judge = Judge(self.client, self.logs, self.feed, self.catalogue)
+        self.directory = Directory(self.client, self.logs, self.judge, self.catalogue)
+        self.sweep = Sweep(
+            self.client, self.logs, self.judge, self.feed, self.directory, self.sweep_seconds
+        )
+        self._facts: tuple[float, StoreFacts] | None = None
+        self._categories: dict[tuple[str, str], str] = {}
+
+    def facts(self, fresh_seconds: float = 5.0) -> StoreFacts:
+        """Return what the store says about itself, at most some seconds old."""
+        now = time.monotonic()
+        if self._facts is None or now - self._facts[0] > fresh_seconds:
+            self._facts = (now, inspect(self.client))
+        return self._facts[1]
+
+    @property
+    def durability(self) -> str:
+        """What a 200 means: ``none``, ``everysec``, ``always``, or ``unknown``."""
+        with _answering():
+            return self.facts().durability
 
     def ident_key(self) -> tuple[int, int]:
         """Return the random key of identities (two 64-bit integers), kept in the store."""
-        raise NotImplementedError
+        return self._ident_key
 
     def claim(self, tenant: str, idempotency_key: str, body_digest: str) -> None:
         """Remember the body of an Idempotency-Key; raise Conflict when it had another body."""
-        raise NotImplementedError
+        name = hashlib.blake2b(idempotency_key.encode(), digest_size=16).hexdigest()
+        with _answering():
+            before: Any = self.client.set(
+                Tenant(tenant).claim(name),
+                body_digest,
+                nx=True,
+                get=True,
+                ex=self.horizon_s + 86_400,
+            )
+        if before is not None and before.decode() != body_digest:
+            raise Conflict("this Idempotency-Key came with another body before")
 
     def post(self, tenant: str, batch: Batch, *, historic: bool, reply: str, now: int) -> Posted:
-        """Count a batch exactly once and judge its streams. Raises Unavailable."""
-        raise NotImplementedError
+        """Count a batch exactly once and judge its streams.
 
-    def stream_of(
-        self, tenant: str, merchant: str, flow: str, currency: str | None
-    ) -> Stream:
+        Parameters
+        ----------
+        historic : bool
+            Rows of the past: alarms they cause stay off the feed.
+        reply : {'alarms', 'merchants', 'full'}
+        now : int
+            Arrival, ms since 1970 UTC.
+
+        Raises
+        ------
+        Unavailable
+            If the store did not take everything; sending the batch again completes it.
+        """
+        if not batch.streams:
+            return Posted(0, 0, 0, 0, 0, [], [])
+        with _answering():
+            policies = self.catalogue.of(tenant)
+            self._remember_categories(tenant, batch.categories)
+            versions = policies.versions_for([s.merchant for s in batch.streams])
+            calls = self.logs.calls(tenant, batch, versions, now=now, historic=historic)
+            appended = self.logs.append(calls, batch)
+        try:
+            with _answering():
+                judged = self.judge.judge(tenant, appended.blobs)
+                self.logs.judged(calls)
+                alarms = self._raised(tenant, judged, appended)
+                found = self._entries(tenant, judged, reply, now)
+        except Unavailable:
+            # counted; the sweep judges it, and the feed tells its alarms
+            alarms, found = [], []
+        return _posted(batch, appended, alarms, found, now)
+
+    def _raised(self, tenant: str, judged: Judged, appended: Appended) -> list[Document]:
+        """Return the alarms raised by the rows of one call."""
+        first = appended.first[judged.index]
+        end = first + appended.count[judged.index]
+        mine = [
+            c.alarm.hex()
+            for c in judged.crossings
+            if c.ordinal == 0 and 0 <= first[c.slot] <= c.record < end[c.slot]
+        ]
+        return [a for a in self.feed.alarms(tenant, mine) if a is not None] if mine else []
+
+    def _entries(self, tenant: str, judged: Judged, reply: str, now: int) -> list[Document]:
+        versions = self.catalogue.of(tenant).by_version
+        if reply == "merchants":
+            return entries(judged.folded, judged.streams, versions, now)
+        if reply == "full":
+            return [
+                self._detail(tenant, stream, judged.folded.only([slot]), False, now)
+                for slot, stream in enumerate(judged.streams)
+            ]
+        return []
+
+    def _remember_categories(self, tenant: str, categories: dict[str, str]) -> None:
+        new = {m: c for m, c in categories.items() if self._categories.get((tenant, m)) != c}
+        if not new:
+            return
+        pipe: Any = self.client.pipeline(transaction=False)
+        for merchant, category in new.items():
+            pipe.hset(self.logs.partition(tenant, merchant).categories(tenant), merchant, category)
+        pipe.execute()
+        if len(self._categories) > CATEGORIES_KNOWN:
+            self._categories.clear()
+        self._categories.update({(tenant, m): c for m, c in new.items()})
+
+    def stream_of(self, tenant: str, merchant: str, flow: str, currency: str | None) -> Stream:
         """Return the named stream, or the merchant's busiest one of a flow; raises Unknown."""
-        raise NotImplementedError
+        with _answering():
+            known = self.directory.streams(tenant, merchant)
+            if not known:
+                raise Unknown(f"there is no merchant {merchant!r}")
+            there = ", ".join(f"{f} in {c}" for f, c in known)
+            mine = [Stream(merchant, f, c) for f, c in known if f == flow and currency in (None, c)]
+            if not mine:
+                wanted = f"{flow!r}" + (f" in {currency}" if currency else "")
+                raise Unknown(f"merchant {merchant!r} has no flow {wanted}; it has {there}")
+            if len(mine) == 1:
+                return mine[0]
+            judged = self._read(tenant, mine)
+            rows = judged.folded.state["rows"]
+            return judged.streams[int(np.argmax(rows))]
 
-    def detail(
-        self, tenant: str, stream: Stream, *, measures: bool, now: int
+    def _read(self, tenant: str, streams: Sequence[Stream]) -> Judged:
+        blobs = self.logs.read(
+            [(self.logs.partition(tenant, s.merchant), path(tenant, s)) for s in streams]
+        )
+        return self.judge.judge(tenant, blobs)
+
+    def _one(self, tenant: str, stream: Stream) -> Judged:
+        judged = self._read(tenant, [stream])
+        if not judged.index:
+            raise Unavailable("this stream is in quarantine; the operators are told by readiness")
+        return judged
+
+    def _detail(
+        self, tenant: str, stream: Stream, folded: Any, measures: bool, now: int
     ) -> Document:
+        partition = self.logs.partition(tenant, stream.merchant)
+        category: Any = self.client.hget(partition.categories(tenant), stream.merchant)
+        return detail(
+            folded,
+            stream,
+            self.catalogue.of(tenant).by_version,
+            now,
+            category=category.decode() if category else None,
+            all_measures=measures,
+        )
+
+    def detail(self, tenant: str, stream: Stream, *, measures: bool, now: int) -> Document:
         """Return what GET /v1/merchants/{merchant} says."""
-        raise NotImplementedError
+        with _answering():
+            judged = self._one(tenant, stream)
+            return self._detail(tenant, stream, judged.folded, measures, now)
 
-    def digits(
-        self, tenant: str, stream: Stream, view: str, span: str, *, now: int
-    ) -> Document:
+    def digits(self, tenant: str, stream: Stream, view: str, span: str, *, now: int) -> Document:
         """Return what GET /v1/merchants/{merchant}/digits says."""
-        raise NotImplementedError
+        with _answering():
+            judged = self._one(tenant, stream)
+            return digits(judged.folded, self.catalogue.of(tenant).by_version, view, span, now)
 
     def rows(self, tenant: str, stream: Stream) -> list[Document]:
         """Return the last rows kept, oldest first: id, amount, currency, at."""
-        raise NotImplementedError
+        partition = self.logs.partition(tenant, stream.merchant)
+        with _answering():
+            log, ids = self.logs.ids(partition, path(tenant, stream))
+        records = kept_records(log or b"")
+        at = record.at(records).tolist()
+        return [
+            {"id": i, "amount": int(amount), "currency": stream.currency, "at": utc(t)}
+            for i, amount, t, kind in zip(ids, records["amount"], at, records["kind"], strict=True)
+            if kind == record.ROW
+        ]
 
-    def merchants(self, tenant: str) -> list[Document]:
+    def merchants(self, tenant: str, *, now: int | None = None) -> list[Document]:
         """Return the entries of all streams of a tenant, with ``category`` and ``updated``."""
-        raise NotImplementedError
+        with _answering():
+            return self.directory.entries(tenant, now=now or time.time_ns() // 1_000_000)
 
-    def alarms(
-        self, tenant: str, *, after: str | None, limit: int
-    ) -> tuple[list[Document], str]:
+    def alarms(self, tenant: str, *, after: str | None, limit: int) -> tuple[list[Document], str]:
         """Return alarms of the feed after a cursor, oldest first, and the last position read.
 
         Raises ValueError for a cursor that was never given out.
         """
-        raise NotImplementedError
+        with _answering():
+            return self.feed.after(tenant, after, limit)
 
     def alarm(self, tenant: str, alarm_id: str) -> Document:
         """Return one alarm; raises Unknown."""
-        raise NotImplementedError
+        with _answering():
+            return self.feed.alarm(tenant, alarm_id)
 
     def policies(self, tenant: str) -> dict[str, Document]:
         """Return all policies by name; ``standard`` always exists."""
-        raise NotImplementedError
+        with _answering():
+            known: Policies = self.catalogue.of(tenant, fresh=True)
+        return {
+            name: known.by_version[version].document()
+            for name, version in sorted(known.newest.items())
+        }
 
     def put_policy(self, tenant: str, name: str, settings: Document) -> Document:
         """Store a policy (already checked by its schema) as a new version and return it."""
-        raise NotImplementedError
+        with _answering():
+            return self.catalogue.put(tenant, name, settings).document()
 
     def assign(
         self, tenant: str, merchant: str, *, policy: str | None, category: str | None
     ) -> Document:
         """Assign a merchant's policy or category; raises Unknown for a policy that is not there."""
-        raise NotImplementedError
+        with _answering():
+            if policy is not None:
+                self.catalogue.assign(tenant, merchant, policy)
+            if category is not None:
+                self._remember_categories(tenant, {merchant: category})
+            partition = self.logs.partition(tenant, merchant)
+            stored: Any = self.client.hget(partition.categories(tenant), merchant)
+            known = self.catalogue.of(tenant, fresh=True)
+        return {
+            "merchant": merchant,
+            "policy": known.assigned.get(merchant, "standard"),
+            "category": stored.decode() if stored else None,
+        }
 
     def checks(self) -> Sequence[Document]:
         """Return readiness checks: ``name``, ``status`` (pass, warn, fail), ``detail``."""
-        raise NotImplementedError
+        return list(self._checks())
+
+    def _checks(self) -> Iterator[Document]:
+        began = time.perf_counter()
+        try:
+            facts = self.facts(0)
+        except (RedisError, OSError) as error:
+            yield _check("store", "fail", f"does not answer ({type(error).__name__})")
+            return
+        took = (time.perf_counter() - began) * 1000
+        yield _check("store", "pass", f"{facts.server} {facts.version} answers in {took:.1f} ms")
+        master = facts.role == "master" and not facts.loading
+        yield _check(
+            "role",
+            "pass" if master else "fail",
+            f"role {facts.role}" + (", still loading" if facts.loading else ""),
+        )
+        keeps = facts.maxmemory_policy in ("noeviction", "unknown")
+        yield _check(
+            "eviction",
+            "pass" if facts.maxmemory_policy == "noeviction" else "warn" if keeps else "fail",
+            f"maxmemory-policy is {facts.maxmemory_policy}, must be noeviction",
+        )
+        yield _check(
+            "durability",
+            "fail" if not facts.persisting else "pass" if facts.durability != "none" else "warn",
+            f"{facts.durability}" + ("" if facts.persisting else ", the last write failed"),
+        )
+        used = facts.used_memory / facts.maxmemory if facts.maxmemory else 0.0
+        yield _check(
+            "memory",
+            "fail" if used > 0.98 else "warn" if used > 0.85 else "pass",
+            f"{facts.used_memory >> 20} MiB used"
+            + (f" of {facts.maxmemory >> 20}" if facts.maxmemory else ", no limit set"),
+        )
+        yield from self._backlog()
+
+    def _backlog(self) -> Iterator[Document]:
+        pipe: Any = self.client.pipeline(transaction=False)
+        for p in self.logs.partitions:
+            pipe.hlen(p.quarantine)
+            pipe.zrange(p.pending, 0, 0, withscores=True)
+        pipe.time()
+        try:
+            *replies, (seconds, _) = pipe.execute()
+        except (RedisError, OSError) as error:
+            yield _check("backlog", "fail", f"cannot be read ({type(error).__name__})")
+            return
+        quarantined = sum(replies[::2])
+        oldest = min((z[0][1] for z in replies[1::2] if z), default=seconds * 1000)
+        age = max(seconds - oldest / 1000, 0)
+        yield _check(
+            "quarantine",
+            "warn" if quarantined else "pass",
+            f"{quarantined} streams cannot be folded",
+        )
+        yield _check(
+            "unjudged",
+            "warn" if age > 60 else "pass",
+            f"the oldest unjudged call is {age:.0f} s old",
+        )
+
+
+def _check(name: str, status: str, detail: str) -> Document:
+    return {"name": name, "status": status, "detail": detail}
+
+
+@contextmanager
+def _answering() -> Iterator[None]:
+    """Turn what the client raises into Unavailable."""
+    try:
+        yield
+    except (RedisError, OSError) as error:
+        raise Unavailable("the store does not answer; send the same again later") from error
+
+
+def _posted(
+    batch: Batch, appended: Appended, alarms: list[Document], found: list[Document], now: int
+) -> Posted:
+    taken = appended.taken
+    accepted = int(taken.sum())
+    positive = batch.amount > 0
+    return Posted(
+        accepted=accepted,
+        duplicates=len(taken) - accepted,
+        late=int((taken & positive & (batch.at < now - WINDOW_MS)).sum()),
+        zero=int((taken & ~positive).sum()),
+        unverified=int((taken & batch.unverified).sum()),
+        alarms=alarms,
+        entries=found,
+    )

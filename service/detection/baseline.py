@@ -3,8 +3,6 @@
 Learned frequencies plugged in as if they were known destroy the false-alarm promise; bounds that
 hold with a stated confidence keep it. Time structure counts: a cell whose share differs between
 blocks of the baseline gets the largest of its blocks' bounds.
-
-Clopper & Pearson (1934), *Biometrika* 26, 404-413.
 """
 
 from __future__ import annotations
@@ -16,6 +14,7 @@ import numpy.typing as npt
 from scipy import special
 
 from service.detection.bank import LAW
+from service.digits.intervals import clopper_pearson_lower, clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED
 
@@ -33,29 +32,6 @@ def spent_alpha(confidence: float, relearns: int) -> float:
     """
     i = relearns + 1
     return (1 - confidence) / (i * (i + 1))
-
-
-def upper_bound(count: npt.ArrayLike, rows: npt.ArrayLike, alpha: float) -> FloatArray:
-    """Return the Clopper-Pearson upper bound of a share at one-sided error ``alpha``.
-
-    A cell never seen in n rows gets ``1 - alpha**(1/n)``; no rows give 1.
-    """
-    c, n = np.broadcast_arrays(
-        np.asarray(count, dtype=np.float64), np.asarray(rows, dtype=np.float64)
-    )
-    some = c < n
-    safe = np.where(some, n - c, 1.0)
-    return np.where(some, special.betaincinv(c + 1, safe, 1 - alpha), 1.0)
-
-
-def lower_bound(count: npt.ArrayLike, rows: npt.ArrayLike, alpha: float) -> FloatArray:
-    """Return the Clopper-Pearson lower bound of a share at one-sided error ``alpha``."""
-    c, n = np.broadcast_arrays(
-        np.asarray(count, dtype=np.float64), np.asarray(rows, dtype=np.float64)
-    )
-    some = c > 0
-    safe = np.where(some, c, 1.0)
-    return np.where(some, special.betaincinv(safe, n - c + 1, alpha), 0.0)
 
 
 def own_bounds(
@@ -92,7 +68,7 @@ def own_bounds(
         raise ValueError(f"alpha must be between 0 and 1, got {alpha}")
     n = rows[VIEW_OF_CELL]
     level = alpha / CELLS
-    pooled = upper_bound(count, n, level)
+    pooled = clopper_pearson_upper(count, n, level)
     if not len(block_rows):
         return pooled
     nb = block_rows[:, VIEW_OF_CELL].astype(np.float64)
@@ -106,7 +82,7 @@ def own_bounds(
     dispersed = scatter > special.chdtri(freedom, DISPERSION_LEVEL)
     if not dispersed.any():
         return pooled
-    blocks = upper_bound(block_count[:, dispersed], nb[:, dispersed], level)
+    blocks = clopper_pearson_upper(block_count[:, dispersed], nb[:, dispersed], level)
     largest = np.where(nb[:, dispersed] > 0, blocks, 0).max(axis=0)
     pooled[dispersed] = np.maximum(pooled[dispersed], largest)
     return pooled
@@ -150,7 +126,7 @@ def law_verdict(
     """
     tol = np.asarray(tolerances)
     n = rows[VIEW_OF_CELL]
-    lower = lower_bound(count, n, alpha / CELLS)
+    lower = clopper_pearson_lower(count, n, alpha / CELLS)
     too_much = lower > LAW * (1 + tol[VIEW_OF_CELL])
     cell = np.array([bool(too_much[cells].any()) for cells in WATCHED.values()])
     off_circle = np.zeros(3, dtype=bool)

@@ -83,3 +83,20 @@ def surely_not_applied(exc: BaseException) -> bool:
         return False
     found = _CODE.match(str(exc))
     return found is not None and found[0] in _REFUSALS
+
+
+class Unavailable(Exception):
+    """The store cannot answer now; sending the same again later is safe.
+
+    ``args[0]`` says what was and what was not applied; ``retry_after`` is in seconds.
+    """
+
+    retry_after: int = 1
+
+
+class Unknown(LookupError):
+    """What was asked for does not exist; ``args[0]`` says what does."""
+
+
+class Conflict(Exception):
+    """The request contradicts what is stored; ``args[0]`` says how."""

@@ -1,0 +1,157 @@
+"""The feed of alarms: crossings go from the outboxes to the tenant's slot, once each."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import msgspec
+import redis
+
+from service.store.errors import Unknown
+from service.store.keys import Partition, Tenant, stream_of
+from service.store.logs import checked
+from service.store.script import PUBLISH, run
+from service.streams.alarms import alarm_document, crossing_document
+from service.streams.fold import Crossing
+
+CURSOR = re.compile(r"\d{1,20}-\d{1,20}")
+START = "0-0"
+
+Document = dict[str, Any]
+
+
+@dataclass(frozen=True)
+class Outgoing:
+    """A crossing on its way to the feed.
+
+    Attributes
+    ----------
+    path : str
+        The stream.
+    alarm : str
+        Alarm id, hex.
+    ordinal : int
+    historic : bool
+    document : bytes
+        JSON of the crossing.
+    """
+
+    path: str
+    alarm: str
+    ordinal: int
+    historic: bool
+    document: bytes
+
+    @classmethod
+    def of(cls, path: str, crossing: Crossing) -> Outgoing:
+        """Write a crossing down."""
+        return cls(
+            path,
+            crossing.alarm.hex(),
+            crossing.ordinal,
+            crossing.historic,
+            msgspec.json.encode(crossing_document(crossing)),
+        )
+
+    @property
+    def field(self) -> str:
+        """Name in an outbox."""
+        return f"{self.alarm}:{self.ordinal}"
+
+    def boxed(self) -> bytes:
+        """Return what an outbox holds."""
+        return msgspec.msgpack.encode(
+            (self.path, self.alarm, self.ordinal, self.historic, self.document)
+        )
+
+    @classmethod
+    def unboxed(cls, boxed: bytes) -> Outgoing:
+        """Read what an outbox holds."""
+        return cls(*msgspec.msgpack.decode(boxed))
+
+
+class Feed:
+    """Alarms of all tenants."""
+
+    def __init__(self, client: redis.Redis) -> None:
+        self.client = client
+
+    def publish(self, partition: Partition, outgoing: Sequence[Outgoing]) -> None:
+        """Publish crossings of one partition, then clear them from its outbox.
+
+        Published before is not published again, whoever does it.
+        """
+        by_tenant: dict[str, list[Outgoing]] = {}
+        for crossing in outgoing:
+            by_tenant.setdefault(stream_of(crossing.path)[0], []).append(crossing)
+        for tenant, mine in by_tenant.items():
+            keys = Tenant(tenant)
+            arguments: list[str | bytes | int] = []
+            for c in mine:
+                arguments += [c.alarm, c.ordinal, int(c.historic), c.document, c.path]
+            script = PUBLISH.call([keys.feed, *(keys.alarm(c.alarm) for c in mine)], arguments)
+            checked(run(self.client, [[script]]))
+        if outgoing:
+            self.client.hdel(partition.outbox, *(c.field for c in outgoing))
+
+    def left(self, partition: Partition) -> list[Outgoing]:
+        """Return what an outbox still holds, after a worker died between its two steps."""
+        boxed: Any = self.client.hvals(partition.outbox)
+        return [Outgoing.unboxed(b) for b in boxed]
+
+    def alarms(self, tenant: str, ids: Sequence[str]) -> list[Document | None]:
+        """Return alarms by id; None for one that does not exist."""
+        keys = Tenant(tenant)
+        groups = [[("HGETALL", keys.alarm(i))] for i in ids]
+        out: list[Document | None] = []
+        for alarm_id, (reply,) in zip(ids, checked(run(self.client, groups)), strict=True):
+            out.append(_document(alarm_id, reply))
+        return out
+
+    def alarm(self, tenant: str, alarm_id: str) -> Document:
+        """Return one alarm; raises Unknown."""
+        found = (
+            self.alarms(tenant, [alarm_id])[0] if re.fullmatch("[0-9a-f]{32}", alarm_id) else None
+        )
+        if found is None:
+            raise Unknown(f"there is no alarm {alarm_id!r}")
+        return found
+
+    def after(self, tenant: str, cursor: str | None, limit: int) -> tuple[list[Document], str]:
+        """Return alarms after a cursor, oldest first, and the last position read.
+
+        Raises
+        ------
+        ValueError
+            For a cursor that no feed can have given out.
+        """
+        if cursor is not None and not CURSOR.fullmatch(cursor):
+            raise ValueError(f"{cursor!r} is not a cursor of the feed, such as '1790000000000-0'")
+        position = cursor or START
+        entries: Any = self.client.xrange(
+            Tenant(tenant).feed, min=f"({position}", max="+", count=limit
+        )
+        if not entries:
+            return [], position
+        ids = [fields[b"alarm"].decode() for _, fields in entries]
+        found = [a for a in self.alarms(tenant, ids) if a is not None]
+        return found, entries[-1][0].decode()
+
+
+def _document(alarm_id: str, reply: Any) -> Document | None:
+    flat = reply if isinstance(reply, dict) else dict(zip(reply[::2], reply[1::2], strict=True))
+    if not flat:
+        return None
+    crossings = {int(k): v for k, v in flat.items() if k.isdigit()}
+    crossings[int(flat[b"latest_ordinal"])] = flat[b"latest"]
+    _, stream = stream_of(flat[b"path"].decode())
+    cursor = flat.get(b"cursor")
+    return alarm_document(
+        alarm_id,
+        stream,
+        [msgspec.json.decode(crossings[k]) for k in sorted(crossings)],
+        cursor=cursor.decode() if cursor else None,
+    )

@@ -1,0 +1,126 @@
+"""From logs to verdicts: load, fold, compact what is due, publish what crossed."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import redis
+
+from service.store.catalogue import Catalogue
+from service.store.feed import Feed, Outgoing
+from service.store.keys import stream_of
+from service.store.loading import Loaded, load
+from service.store.logs import COMPACT_ROWS, Blobs, Logs
+from service.streams.fold import Crossing, fold
+from service.streams.record import Stream
+from service.streams.state import Folded, write_snapshots
+
+log = logging.getLogger(__name__)
+
+
+@dataclass(frozen=True)
+class Judged:
+    """Streams folded up to the last record read.
+
+    Attributes
+    ----------
+    index : list of int
+        Which of the streams asked for these are; quarantined ones are left out.
+    streams : list of Stream
+    folded : Folded
+    crossings : list of Crossing
+        By slot of ``folded``, those of other calls' rows included.
+    """
+
+    index: list[int]
+    streams: list[Stream]
+    folded: Folded
+    crossings: list[Crossing]
+
+
+class Judge:
+    """Folds streams and makes known what follows."""
+
+    def __init__(self, client: redis.Redis, logs: Logs, feed: Feed, catalogue: Catalogue) -> None:
+        self.client = client
+        self.logs = logs
+        self.feed = feed
+        self.catalogue = catalogue
+
+    def judge(self, tenant: str, blobs: Sequence[Blobs], *, publish: bool = True) -> Judged:
+        """Fold streams of one tenant; with ``publish`` compact and publish what is due.
+
+        A stream that cannot be folded is put in quarantine and left out, and does not keep the
+        others from being judged.
+        """
+        index = list(range(len(blobs)))
+        try:
+            loaded, crossings = self._fold(tenant, blobs)
+        except (ValueError, LookupError, ArithmeticError):
+            index = self._healthy(tenant, blobs)
+            blobs = [blobs[i] for i in index]
+            loaded, crossings = self._fold(tenant, blobs)
+        if publish:
+            self._settle(blobs, loaded, crossings)
+        streams = [stream_of(b.path)[1] for b in blobs]
+        return Judged(index, streams, loaded.folded, crossings)
+
+    def _fold(self, tenant: str, blobs: Sequence[Blobs]) -> tuple[Loaded, list[Crossing]]:
+        loaded = load(blobs)
+        policies = self.catalogue.of(tenant).by_version
+        named = set(np.unique(loaded.records["policy"]).tolist())
+        named |= set(np.unique(loaded.folded.state["policy"]).tolist()) - {0}
+        if not named <= policies.keys():
+            policies = self.catalogue.of(tenant, fresh=True).by_version
+        crossings = fold(
+            loaded.folded,
+            loaded.records,
+            loaded.slot,
+            policies,
+            [stream_of(b.path)[1].flow for b in blobs],
+            [b.path.encode() for b in blobs],
+        )
+        return loaded, crossings
+
+    def _healthy(self, tenant: str, blobs: Sequence[Blobs]) -> list[int]:
+        """Fold streams one by one; quarantine those that fail and return the others."""
+        index = []
+        for i, blob in enumerate(blobs):
+            try:
+                self._fold(tenant, [blob])
+                index.append(i)
+            except (ValueError, LookupError, ArithmeticError) as error:
+                log.error("a stream cannot be folded and is in quarantine: %s", error)
+                self.client.hset(
+                    blob.partition.quarantine, blob.path, f"{type(error).__name__}: {error}"
+                )
+        return index
+
+    def _settle(
+        self, blobs: Sequence[Blobs], loaded: Loaded, crossings: Sequence[Crossing]
+    ) -> None:
+        """Compact streams with a crossing or a long tail, then publish the crossings."""
+        tail = np.bincount(loaded.slot, minlength=len(blobs))
+        crossed = {c.slot for c in crossings}
+        due = sorted(crossed | set(np.flatnonzero(tail >= COMPACT_ROWS).tolist()))
+        if not due:
+            return
+        outgoing: dict[int, list[Outgoing]] = {slot: [] for slot in due}
+        for c in crossings:
+            outgoing[c.slot].append(Outgoing.of(blobs[c.slot].path, c))
+        chosen = loaded.folded.only(due)
+        won = self.logs.compact(
+            [blobs[i] for i in due],
+            write_snapshots(chosen, loaded.generation[due] + 1),
+            chosen.state["records"].tolist(),
+            [{o.field: o.boxed() for o in outgoing[i]} for i in due],
+        )
+        by_partition: dict[int, list[Outgoing]] = {}
+        for slot, ok in zip(due, won, strict=True):
+            if ok and outgoing[slot]:
+                by_partition.setdefault(blobs[slot].partition.number, []).extend(outgoing[slot])
+        for number, mine in by_partition.items():
+            self.feed.publish(self.logs.partitions[number], mine)

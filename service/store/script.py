@@ -1,0 +1,88 @@
+"""Lua scripts as resources, and pipelines that bring a script along when the server lost it."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Sequence
+from dataclasses import dataclass
+from importlib.resources import files
+from typing import Any
+
+import redis
+from redis.exceptions import NoScriptError, RedisError
+
+Argument = str | bytes | int
+Command = tuple[Argument, ...]
+
+
+@dataclass(frozen=True)
+class Script:
+    """One script of ``scripts/``; its header says what its keys, arguments and reply are."""
+
+    source: bytes
+    sha: str
+
+    @classmethod
+    def named(cls, name: str) -> Script:
+        """Read a script from the package."""
+        source = files("service.store").joinpath("scripts", f"{name}.lua").read_bytes()
+        return cls(source, hashlib.sha1(source, usedforsecurity=False).hexdigest())
+
+    def call(self, keys: Sequence[str], arguments: Sequence[Argument]) -> Command:
+        """Return the command that runs the script by its digest."""
+        return ("EVALSHA", self.sha, len(keys), *keys, *arguments)
+
+
+APPEND = Script.named("append")
+COMPACT = Script.named("compact")
+PUBLISH = Script.named("publish")
+SETTLE = Script.named("settle")
+
+_SOURCES = {s.sha: s.source for s in (APPEND, COMPACT, PUBLISH, SETTLE)}
+
+Reply = Any
+
+
+def run(client: redis.Redis, groups: Sequence[Sequence[Command]]) -> list[list[Reply]]:
+    """Send groups of commands in one round trip and return their replies, group by group.
+
+    An error of one command takes the place of its reply. A group whose script the server did not
+    know is sent again with the source; the other groups are not touched.
+
+    Raises
+    ------
+    redis.exceptions.RedisError
+        If the connection fails; whether commands were applied is then unknown unless
+        `errors.surely_not_applied` says so.
+    """
+    replies = _send(client, groups)
+    lost = [i for i, group in enumerate(replies) if any(_lost(r) for r in group)]
+    if lost:
+        again = _send(client, [[_with_source(c) for c in groups[i]] for i in lost])
+        for i, group in zip(lost, again, strict=True):
+            replies[i] = group
+    return replies
+
+
+def _send(client: redis.Redis, groups: Sequence[Sequence[Command]]) -> list[list[Reply]]:
+    pipe: Any = client.pipeline(transaction=False)
+    for group in groups:
+        for command in group:
+            pipe.execute_command(*command)
+    flat = iter(pipe.execute(raise_on_error=False))
+    return [[next(flat) for _ in group] for group in groups]
+
+
+def _lost(reply: Reply) -> bool:
+    return isinstance(reply, NoScriptError)
+
+
+def _with_source(command: Command) -> Command:
+    if command[0] != "EVALSHA":
+        return command
+    return ("EVAL", _SOURCES[str(command[1])], *command[2:])
+
+
+def first_error(replies: Sequence[Reply]) -> RedisError | None:
+    """Return the first error among replies."""
+    return next((r for r in replies if isinstance(r, RedisError)), None)

@@ -1,0 +1,205 @@
+#!lua
+-- Append one call's rows to the logs of a partition, leaving out rows seen before.
+--
+-- Invariant: a row's identity and its record are written together or not at all, and a call that
+-- is sent again gets the reply of its first run. All reads come before the first write, since a
+-- script is not rolled back.
+--
+-- KEYS[i]   log of stream i, i = 1..n ("{tag}log/<path>"); all other keys lie under the same tag
+-- ARGV[1]   tag
+-- ARGV[2]   this call
+-- ARGV[3]   calls judged since, 16 bytes each, to be forgotten
+-- ARGV[4]   per stream: rows, bytes of ids (u32 each), incarnation if it is new (8 bytes)
+-- ARGV[5]   records, 32 bytes a row, streams in the order of KEYS
+-- ARGV[6]   idents in decimal, 19 characters a row, or zeros
+-- ARGV[7]   ids, each after its length in one byte
+-- ARGV[8]   sources: "" or, per row, index (u16, 0 for none) and offset (double)
+-- ARGV[9]   names of the sources (msgpack list)
+-- ARGV[10]  horizon of ids in seconds
+--
+-- Reply     {mask, first}: mask has a byte a row, "1" for taken and "0" for seen before; first has
+--           per stream the row number of its first taken row, or -1
+local tag, call = ARGV[1], ARGV[2]
+local calls = tag .. 'calls'
+local before = redis.call('HGET', calls, call)
+if before then
+  local reply = cmsgpack.unpack(before)
+  return {reply[1], reply[2]}
+end
+
+local NONE = '0000000000000000000'
+local SHARD, SPREAD = 400, 8
+local counts, records, decimals, ids = ARGV[4], ARGV[5], ARGV[6], ARGV[7]
+local places, sources = ARGV[8], cmsgpack.unpack(ARGV[9])
+local horizon = tonumber(ARGV[10])
+local time = redis.call('TIME')
+local now = tonumber(time[1])
+local epoch = math.floor(now / horizon)
+local n = #KEYS
+local prefix = #tag + 5
+
+-- Sets of idents: per epoch, level l has 8^l shards and is filled after the levels below it.
+local function levels(count)
+  local level, room = 0, SHARD
+  while count >= room do
+    level = level + 1
+    room = room + SHARD * SPREAD ^ level
+  end
+  return level
+end
+
+local function shard(seen, at, level, ident)
+  local number = tonumber(string.sub(ident, -9)) % (SPREAD ^ level)
+  return string.format('%s/%d/%d/%d', seen, at, level, number)
+end
+
+local function in_log(log, bytes)
+  local at = string.find(log, bytes, 33, true)
+  while at do
+    if (at - 33) % 32 == 8 then return true end
+    at = string.find(log, bytes, at + 1, true)
+  end
+  return false
+end
+
+local mask, first, plans = {}, {}, {}
+local row, ids_at = 0, 1
+for i = 1, n do
+  local rows, ids_size = struct.unpack('<I4I4', string.sub(counts, 16 * i - 15, 16 * i - 8))
+  local key = KEYS[i]
+  local path = string.sub(key, prefix)
+  local header = redis.call('GETRANGE', key, 0, 31)
+  local plan = {new = header == '', path = path, taken = 0, marks = nil, adds = nil}
+  local generation, base, length = 0, 0, 0
+  if not plan.new then
+    generation = struct.unpack('<I4', string.sub(header, 5, 8))
+    base = struct.unpack('<I8', string.sub(header, 17, 24))
+    length = (redis.call('STRLEN', key) - 32) / 32
+  end
+  if generation == 0 and not plan.new then plan.log = redis.call('GET', key) end
+  plan.generation = generation
+  local seen = tag .. 'seen/' .. path
+  local in_call, epochs = {}, nil
+  for j = row + 1, row + rows do
+    local source, offset = 0, 0
+    if places ~= '' then
+      source, offset = struct.unpack('<I2d', string.sub(places, 10 * j - 9, 10 * j))
+    end
+    local known = false
+    if source > 0 then
+      plan.marks = plan.marks or {}
+      local mark = plan.marks[source]
+      if mark == nil then
+        mark = tonumber(redis.call('HGET', tag .. 'marks/' .. path, sources[source]) or -1)
+      end
+      known = offset <= mark
+      plan.marks[source] = known and mark or offset
+    else
+      local ident = string.sub(decimals, 19 * j - 18, 19 * j)
+      if ident ~= NONE then
+        known = in_call[ident]
+        if not known and plan.log then
+          known = in_log(plan.log, string.sub(records, 32 * j - 23, 32 * j - 16))
+        elseif not known and generation > 0 then
+          if not epochs then
+            epochs = {}
+            for e = epoch - 1, epoch + 1 do
+              local count = tonumber(redis.call('HGET', seen, e) or 0)
+              if count > 0 then epochs[#epochs + 1] = {e, levels(count)} end
+            end
+          end
+          for _, e in ipairs(epochs) do
+            for level = 0, e[2] do
+              if redis.call('SISMEMBER', shard(seen, e[1], level, ident), ident) == 1 then
+                known = true
+                break
+              end
+            end
+            if known then break end
+          end
+        end
+        in_call[ident] = true
+        if not known and generation > 0 then
+          plan.adds = plan.adds or {}
+          plan.adds[#plan.adds + 1] = ident
+        end
+      end
+    end
+    mask[j] = known and '0' or '1'
+    if not known then plan.taken = plan.taken + 1 end
+  end
+  first[i] = plan.taken > 0 and base + length or -1
+  if plan.taken == rows then
+    plan.chunk = string.sub(records, 32 * row + 1, 32 * (row + rows))
+    plan.ids = string.sub(ids, ids_at, ids_at + ids_size - 1)
+  elseif plan.taken > 0 then
+    local kept, kept_ids, at = {}, {}, ids_at
+    for j = row + 1, row + rows do
+      local size = string.byte(ids, at) + 1
+      if mask[j] == '1' then
+        kept[#kept + 1] = string.sub(records, 32 * j - 31, 32 * j)
+        kept_ids[#kept_ids + 1] = string.sub(ids, at, at + size - 1)
+      end
+      at = at + size
+    end
+    plan.chunk, plan.ids = table.concat(kept), table.concat(kept_ids)
+  end
+  plans[i] = plan
+  row = row + rows
+  ids_at = ids_at + ids_size
+end
+
+local dirty, paths = {}, {}
+for i = 1, n do
+  local plan = plans[i]
+  paths[i] = plan.path
+  if plan.taken > 0 then
+    local key = KEYS[i]
+    if plan.new then
+      local header = struct.pack('<I4I4', 1, 0) .. string.sub(counts, 16 * i - 7, 16 * i)
+        .. string.rep('\0', 16)
+      redis.call('SET', key, header .. plan.chunk)
+      local tenant, merchant, rest = string.match(plan.path, '^([^/]*)/([^/]*)/(.*)$')
+      redis.call('SADD', tag .. 'of/' .. tenant .. '/' .. merchant, rest)
+    elseif plan.log then
+      redis.call('SET', key, plan.log .. plan.chunk)  -- APPEND would over-allocate
+    else
+      redis.call('APPEND', key, plan.chunk)
+    end
+    redis.call('APPEND', tag .. 'ids/' .. plan.path, plan.ids)
+    for source, mark in pairs(plan.marks or {}) do
+      redis.call('HSET', tag .. 'marks/' .. plan.path, sources[source],
+        string.format('%.0f', mark))
+    end
+    if plan.adds then
+      local seen = tag .. 'seen/' .. plan.path
+      local count = redis.call('HINCRBY', seen, epoch, #plan.adds)
+      local keeps = (epoch + 2) * horizon + 86400 - now
+      redis.call('EXPIRE', seen, keeps)
+      local sets = {}
+      for k, ident in ipairs(plan.adds) do
+        local name = shard(seen, epoch, levels(count - #plan.adds + k - 1), ident)
+        sets[name] = sets[name] or {}
+        table.insert(sets[name], ident)
+      end
+      for name, members in pairs(sets) do
+        redis.call('SADD', name, unpack(members))
+        redis.call('EXPIRE', name, keeps)
+      end
+    end
+    dirty[#dirty + 1] = plan.path
+    dirty[#dirty + 1] = call
+  end
+end
+local joined = table.concat(mask)
+redis.call('HSET', calls, call, cmsgpack.pack({joined, first, paths}))
+redis.call('ZADD', tag .. 'pending', time[1] * 1000 + math.floor(time[2] / 1000), call)
+for k = 1, #dirty, 4000 do
+  redis.call('HSET', tag .. 'dirty', unpack(dirty, k, math.min(k + 3999, #dirty)))
+end
+for k = 1, #ARGV[3], 16 do
+  local judged = string.sub(ARGV[3], k, k + 15)
+  redis.call('HDEL', calls, judged)
+  redis.call('ZREM', tag .. 'pending', judged)
+end
+return {joined, first}

@@ -1,0 +1,84 @@
+#!lua
+-- Put a snapshot in place of the records it was folded from, alarms first.
+--
+-- Invariant: a log's generation counts its compactions, so that of several workers that folded the
+-- same log only one gets through; a crossing is in the outbox before the snapshot that forgets it.
+--
+-- KEYS[1]   log
+-- KEYS[2]   snapshot
+-- KEYS[3]   the new snapshot, under a temporary key
+-- KEYS[4]   ids of the rows in the log
+-- KEYS[5]   outbox
+-- ARGV[1]   tag
+-- ARGV[2]   generation and incarnation that were folded (12 bytes as in the header)
+-- ARGV[3]   records folded: the first row number that the new snapshot does not hold
+-- ARGV[4]   folded records to keep as evidence
+-- ARGV[5]   horizon of ids in seconds
+-- ARGV[6..] pairs of outbox field and document
+--
+-- Reply     1, or 0 if the log was compacted or forgotten since
+local tag, key = ARGV[1], KEYS[1]
+local header = redis.call('GETRANGE', key, 0, 31)
+if header == '' or string.sub(header, 5, 16) ~= ARGV[2] or redis.call('EXISTS', KEYS[3]) == 0 then
+  redis.call('DEL', KEYS[3])
+  return 0
+end
+local generation = struct.unpack('<I4', string.sub(header, 5, 8))
+local base = struct.unpack('<I8', string.sub(header, 17, 24))
+local new_base = math.max(base, tonumber(ARGV[3]) - tonumber(ARGV[4]))
+local drop = new_base - base
+local log = redis.call('GET', key)
+local path = string.sub(key, #tag + 5)
+
+-- Until now duplicates were found in the log itself; from now on in sets of all idents.
+local adds = {}
+if generation == 0 then
+  local function decimal(at)
+    local low, middle, high = 0, 0, 0
+    for b = at + 7, at, -1 do
+      low = low * 256 + string.byte(log, b)
+      middle = middle * 256 + math.floor(low / 1e7)
+      low = low % 1e7
+      high = high * 256 + math.floor(middle / 1e7)
+      middle = middle % 1e7
+    end
+    return string.format('%.0f%07.0f%07.0f', high, middle, low)
+  end
+  for at = 33, #log, 32 do
+    if string.sub(log, at + 8, at + 15) ~= '\0\0\0\0\0\0\0\0' then
+      adds[#adds + 1] = decimal(at + 8)
+    end
+  end
+end
+
+local ids, skip = nil, 1
+if drop > 0 then
+  ids = redis.call('GET', KEYS[4]) or ''
+  for _ = 1, drop do
+    skip = skip + 1 + (string.byte(ids, skip) or 0)
+  end
+end
+
+for k = 6, #ARGV, 2 do redis.call('HSET', KEYS[5], ARGV[k], ARGV[k + 1]) end
+redis.call('RENAME', KEYS[3], KEYS[2])
+redis.call('PERSIST', KEYS[2])
+redis.call('SET', key, string.sub(header, 1, 4) .. struct.pack('<I4', generation + 1)
+  .. string.sub(header, 9, 16) .. struct.pack('<I8', new_base) .. string.rep('\0', 8)
+  .. string.sub(log, 33 + 32 * drop))
+if ids then redis.call('SET', KEYS[4], string.sub(ids, skip)) end
+if #adds > 0 then
+  local time = redis.call('TIME')
+  local horizon = tonumber(ARGV[5])
+  local epoch = math.floor(time[1] / horizon)
+  local keeps = (epoch + 2) * horizon + 86400 - time[1]
+  local seen = tag .. 'seen/' .. path
+  -- level 0 has one shard; append.lua counts on 400 ids in it before it opens the next level
+  local shard = string.format('%s/%d/0/0', seen, epoch)
+  for k = 1, #adds, 1000 do
+    redis.call('SADD', shard, unpack(adds, k, math.min(k + 999, #adds)))
+  end
+  redis.call('EXPIRE', shard, keeps)
+  redis.call('HINCRBY', seen, epoch, #adds)
+  redis.call('EXPIRE', seen, keeps)
+end
+return 1

@@ -1,0 +1,130 @@
+"""The sweep: whatever a worker left half done is finished by another within seconds.
+
+Every worker runs one; a lease per partition lets one of them work at a time. Calls not judged in
+time are folded and published, outboxes are emptied, directory entries are brought up to date.
+"""
+
+from __future__ import annotations
+
+import logging
+import os
+import random
+import threading
+import time
+from typing import Any
+
+import msgspec
+import redis
+from redis.exceptions import RedisError
+
+from service.store.directory import Directory
+from service.store.errors import Unavailable
+from service.store.feed import Feed
+from service.store.judge import Judge
+from service.store.keys import Partition
+from service.store.logs import Logs
+
+log = logging.getLogger(__name__)
+
+LATE_MS = 5000
+"""A call is swept when its worker has not judged it for so long."""
+CALLS_AT_ONCE = 50
+RETRY_QUARANTINE_S = 300
+
+
+class Sweep:
+    """Background work of one worker.
+
+    Parameters
+    ----------
+    seconds : float
+        Pause between rounds; the lease lasts ten rounds.
+    """
+
+    def __init__(
+        self,
+        client: redis.Redis,
+        logs: Logs,
+        judge: Judge,
+        feed: Feed,
+        directory: Directory,
+        seconds: float,
+    ) -> None:
+        self.client = client
+        self.logs = logs
+        self.judge = judge
+        self.feed = feed
+        self.directory = directory
+        self.seconds = seconds
+        self.last_round = time.monotonic()
+        self._name = os.urandom(8).hex()
+        self._stop = threading.Event()
+
+    def start(self) -> None:
+        """Sweep in a thread until `stop`."""
+        threading.Thread(target=self._run, name="sweep", daemon=True).start()
+
+    def stop(self) -> None:
+        """End the thread after its present round."""
+        self._stop.set()
+
+    def _run(self) -> None:
+        while not self._stop.wait(self.seconds * random.uniform(0.5, 1.0)):
+            try:
+                self.round()
+            except (RedisError, Unavailable) as error:
+                log.warning("the sweep will try again: %s", error)
+            except Exception:
+                log.exception("the sweep failed")
+
+    def round(self) -> None:
+        """Sweep every partition whose lease is free."""
+        self.logs.flush_judged()
+        for partition in self.logs.partitions:
+            if self._leased(partition):
+                self.sweep(partition)
+        self.last_round = time.monotonic()
+
+    def sweep(self, partition: Partition) -> None:
+        """Finish what is left in one partition."""
+        left = self.feed.left(partition)
+        if left:
+            self.feed.publish(partition, left)
+        self._judge_late(partition)
+        self.directory.refresh(partition, now=time.time_ns() // 1_000_000)
+
+    def _leased(self, partition: Partition) -> bool:
+        span = int(self.seconds * 10_000)
+        if self.client.set(partition.lease, self._name, nx=True, px=span):
+            return True
+        if self.client.get(partition.lease) == self._name.encode():
+            self.client.pexpire(partition.lease, span)
+            return True
+        return False
+
+    def _judge_late(self, partition: Partition) -> None:
+        now: Any = self.client.time()
+        before = now[0] * 1000 + now[1] // 1000 - LATE_MS
+        while True:
+            tokens: Any = self.client.zrange(
+                partition.pending, "-inf", before, byscore=True, offset=0, num=CALLS_AT_ONCE
+            )
+            if not tokens:
+                return
+            registered: Any = self.client.hmget(partition.calls, tokens)
+            by_tenant: dict[str, set[str]] = {}
+            for blob in registered:
+                for path in _paths(blob) if blob else ():
+                    by_tenant.setdefault(path.split("/", 1)[0], set()).add(path)
+            for tenant, paths in by_tenant.items():
+                blobs = self.logs.read([(partition, p) for p in sorted(paths)])
+                self.judge.judge(tenant, blobs)
+            self.client.hdel(partition.calls, *tokens)
+            self.client.zrem(partition.pending, *tokens)
+            log.info("judged %d calls that their workers had left", len(tokens))
+
+
+def _paths(registered: bytes) -> list[str]:
+    """Return the streams of a registered call: ``{mask, first, paths}`` as the script packed it."""
+    paths = msgspec.msgpack.decode(registered, strict=False)[2]
+    return [p if isinstance(p, str) else p.decode() for p in paths]
