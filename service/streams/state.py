@@ -14,7 +14,7 @@ import numpy.typing as npt
 
 from service.detection.bank import SHAPES
 from service.digits.significand import IntArray
-from service.digits.views import CELLS
+from service.digits.views import CELLS, VIEW_OF_CELL
 
 FORMAT = 1
 
@@ -259,3 +259,19 @@ def read_snapshots(snapshots: Sequence[bytes | None]) -> tuple[Folded, IntArray]
     )
     generation[slots] = header["generation"]
     return folded, generation
+
+
+def restart(state: States, s: int, at: int) -> None:
+    """Set every detector of a stream back to zero, after a row with event time ``at``."""
+    state["sums"][s] = 0
+    state["shape"][s] = 0
+    state["shape_cusum"][s] = 0
+    state["shape_onset"][s] = state["rows"][s] + 1
+    state["shape_onset_at"][s] = at
+    state["value"][s] = 0
+    state["hit"][s] = state["clock"][s][VIEW_OF_CELL]
+    state["cusum"][s] = 0
+    state["run"][s] = 0
+    state["spent"][s] = 0
+    state["onset"][s] = 0
+    state["onset_at"][s] = 0

@@ -1,0 +1,149 @@
+"""A stream learns its baseline, in blocks, until it is complete and decides what to trust."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from service.detection.baseline import law_verdict, own_bounds, spent_alpha
+from service.detection.policy import Policy
+from service.digits.significand import IntArray
+from service.digits.views import CELLS, WATCHED
+from service.streams.rows import Rows
+from service.streams.rules import DAY_MS, Rules, choose_references
+from service.streams.state import (
+    HOUR_BLOCK,
+    REFUTED_BY_CELL,
+    REFUTED_BY_CIRCLE,
+    RUN_BLOCK,
+    UNDECIDED,
+    Buckets,
+    Folded,
+    States,
+    restart,
+)
+from service.streams.window import counted
+
+RUN_BLOCKS = 32
+"""A baseline has at most so many blocks of consecutive rows; they pair up as it grows."""
+FIRST_BLOCK_LEVEL = 5
+HOUR_BLOCK_MS = 3 * 3600 * 1000
+"""Blocks of the time of day (UTC), so that lunch and dinner are told apart at any volume."""
+
+
+def until_complete(state: States, rules: Rules, part: Rows) -> tuple[Rows, IntArray]:
+    """Cut each learning stream's rows after the one that completes its baseline.
+
+    Returns the rows kept and the indices among them of the completing rows.
+    """
+    learning = np.any(state["reference"] == UNDECIDED, axis=1)[part.slot]
+    if not learning.any():
+        return part, np.empty(0, np.int64)
+    first = np.searchsorted(part.slot, part.slot)
+    index = np.arange(len(part.slot))
+    rank = index - first + 1
+    wide = np.int64(1) << 44  # above any time in ms, so that streams do not mix in the scan
+    known = state["base_rows"][part.slot] > 0
+    low = np.where(known, np.minimum(part.at, state["base_first_at"][part.slot]), part.at)
+    high = np.where(known, np.maximum(part.at, state["base_last_at"][part.slot]), part.at)
+    oldest = np.minimum.accumulate(low - part.slot * wide) + part.slot * wide
+    newest = np.maximum.accumulate(high + part.slot * wide) - part.slot * wide
+    complete = (
+        learning
+        & (state["base_rows"][part.slot] + rank >= rules.size[part.slot])
+        & (newest - oldest >= rules.span[part.slot])
+    )
+    if not complete.any():
+        return part, np.empty(0, np.int64)
+    done_before = np.cumsum(complete) - complete
+    kept = np.flatnonzero(done_before == done_before[first])
+    return part.take(kept), np.flatnonzero(complete[kept])
+
+
+def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts: IntArray) -> None:
+    """Add consumed rows to the baselines of the streams that are still learning."""
+    state = folded.state
+    learning = np.any(state["reference"] == UNDECIDED, axis=1)
+    if not learning[streams].any():
+        return
+    slot = part.slot[rows]
+    which = learning[streams]
+    pupils = streams[which]
+    at = part.at[rows]
+    low = np.minimum.reduceat(at, starts)[which]
+    high = np.maximum.reduceat(at, starts)[which]
+    new = state["base_rows"][pupils] == 0
+    state["base_first_at"][pupils] = np.where(
+        new, low, np.minimum(low, state["base_first_at"][pupils])
+    )
+    state["base_last_at"][pupils] = np.where(
+        new, high, np.maximum(high, state["base_last_at"][pupils])
+    )
+    sums = np.add.reduceat(part.wave[:4][:, rows], starts, axis=1).T
+    state["base_circle"][pupils] += sums[which]
+    rank = np.arange(len(slot)) - np.searchsorted(slot, slot)
+    position = state["base_rows"][slot] + rank
+    grown = state["base_rows"] + np.bincount(slot, minlength=len(state)) * learning
+    _pair_up(folded, pupils, grown)
+    mine = learning[slot]
+    chosen = rows[mine]
+    cell = part.cell[:, chosen]
+    run = RUN_BLOCK + (position[mine] >> state["block_level"][slot[mine]].astype(np.int64))
+    hour = HOUR_BLOCK + part.at[chosen] % DAY_MS // HOUR_BLOCK_MS
+    folded.buckets = counted(folded.buckets, slot[mine], run, cell)
+    folded.buckets = counted(folded.buckets, slot[mine], hour, cell)
+    view, row = np.nonzero(cell >= 0)
+    np.add.at(state["base"], (slot[mine][row], cell[view, row]), 1)
+    state["base_rows"] = grown
+
+
+def _pair_up(folded: Folded, pupils: IntArray, grown: IntArray) -> None:
+    """Join neighbouring blocks of rows until a baseline has at most ``RUN_BLOCKS``."""
+    state = folded.state
+    level = np.maximum(state["block_level"][pupils].astype(np.int64), FIRST_BLOCK_LEVEL)
+    needed = level.copy()
+    while True:
+        more = (grown[pupils] - 1) >> needed >= RUN_BLOCKS
+        if not more.any():
+            break
+        needed += more
+    state["block_level"][pupils] = needed
+    shift = np.zeros(len(state), np.int64)
+    shift[pupils] = needed - level
+    if not shift.any():
+        return
+    buckets = folded.buckets
+    bucket = buckets.bucket
+    is_run = (bucket >= RUN_BLOCK) & (bucket < HOUR_BLOCK)
+    moved = np.where(is_run, RUN_BLOCK + ((bucket - RUN_BLOCK) >> shift[buckets.slot]), bucket)
+    folded.buckets = Buckets.empty().plus(buckets.slot, moved, buckets.cell, buckets.count)
+
+
+def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
+    """Complete a baseline: accept the law for a view, or bound the merchant's own cells."""
+    state = folded.state
+    alpha = spent_alpha(policy.baseline_confidence, int(state["relearns"][s]))
+    count = state["base"][s].astype(np.int64)
+    rows = np.array([int(count[cells].sum()) for cells in WATCHED.values()])
+    mine = folded.buckets.slot == s
+    blocks = mine & (folded.buckets.bucket >= RUN_BLOCK)
+    table, number = np.unique(folded.buckets.bucket[blocks], return_inverse=True)
+    per_block = np.zeros((len(table), CELLS), np.int64)
+    per_block[number, folded.buckets.cell[blocks]] = folded.buckets.count[blocks]
+    seen = np.stack([per_block[:, cells].sum(axis=1) for cells in WATCHED.values()], axis=1)
+    bounds = own_bounds(count, rows, per_block, seen, alpha)
+    rounded = bounds.astype(np.float32)
+    state["bound"][s] = np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)
+    verdict = law_verdict(
+        count,
+        rows,
+        state["base_circle"][s],
+        int(state["base_rows"][s]),
+        policy.tolerances(),
+        alpha,
+    )
+    state["refuted"][s] |= (
+        REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell
+    ).astype(np.uint8)
+    folded.buckets = folded.buckets.where(~blocks)
+    choose_references(state, np.array([s]), policy)
+    restart(state, s, at)

@@ -1,0 +1,115 @@
+"""What the policies in force mean for the detectors of each stream."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from functools import cache
+
+import numpy as np
+import numpy.typing as npt
+
+from service.detection import bank
+from service.detection.baseline import own_shares
+from service.detection.policy import Policy
+from service.digits.significand import FloatArray, IntArray
+from service.digits.views import LEAD_PAIR, VIEW_OF_CELL
+from service.streams.in_force import weights
+from service.streams.state import BY_LAW, BY_OWN, UNDECIDED, States
+
+DAY_MS = 86_400_000
+
+
+@dataclass
+class Rules:
+    """Per stream, what the policy in force means for the detectors; refreshed between passes."""
+
+    tolerance: FloatArray  # (n, 3), by view
+    threshold: FloatArray  # (n,)
+    watching: npt.NDArray[np.bool_]  # (n,) flows that may raise alarms
+    active: FloatArray  # (n, 3), 1 for a view that counts
+    shapes: FloatArray  # (n, 14), weights of the shape detectors
+    size: IntArray  # (n,) rows and span of a complete baseline
+    span: IntArray
+
+    @classmethod
+    def empty(cls, n: int) -> Rules:
+        return cls(
+            np.zeros((n, 3)),
+            np.full(n, np.inf),
+            np.zeros(n, bool),
+            np.zeros((n, 3)),
+            np.zeros((n, bank.SHAPES)),
+            np.zeros(n, np.int64),
+            np.zeros(n, np.int64),
+        )
+
+
+def adopt(
+    state: States,
+    slots: IntArray,
+    versions: IntArray,
+    rules: Rules,
+    policies: Mapping[int, Policy],
+    flows: Sequence[str],
+) -> None:
+    """Put policy versions into force for some streams (version 0: none yet)."""
+    for version in np.unique(versions[versions > 0]).tolist():
+        mine = slots[versions == version]
+        changed = mine[np.not_equal(state["policy"][mine], version)]
+        if changed.size:
+            state["policy"][changed] = version
+            choose_references(state, changed, policies[version])
+        refresh(state, mine, rules, policies[version], flows)
+
+
+def choose_references(state: States, slots: IntArray, policy: Policy) -> None:
+    """Set what the views are compared with, and the shape detectors that follow from it."""
+    learned = np.any(state["bound"][slots], axis=1)[:, None]
+    own = (policy.reference == "own") | (state["refuted"][slots] > 0)
+    state["reference"][slots] = (
+        BY_LAW
+        if policy.reference == "law"
+        else np.where(learned, np.where(own, BY_OWN, BY_LAW), UNDECIDED)
+    )
+    tolerance = policy.tolerances()[1]
+    state["shape_scale"][slots], state["shape_norm"][slots] = _law_shapes(tolerance)
+    for s in slots[state["reference"][slots, 1] == BY_OWN].tolist():
+        shares = own_shares(state["base"][s])[LEAD_PAIR]
+        bounds = state["bound"][s, LEAD_PAIR].astype(np.float64)
+        state["shape_scale"][s], state["shape_norm"][s] = _shapes(shares, bounds, tolerance)
+
+
+def _shapes(
+    shares: FloatArray, bounds: FloatArray, tolerance: float
+) -> tuple[FloatArray, FloatArray]:
+    """Return scale and norm of the shape detectors; an infinite scale drops a detector."""
+    bounds = np.minimum(bounds * (1 + tolerance), 1)
+    q, norm = bank.alternatives(shares)
+    inside = np.all(q <= bounds, axis=-1)
+    return np.where(inside, np.inf, bank.projection(q, bounds)), norm
+
+
+@cache
+def _law_shapes(tolerance: float) -> tuple[FloatArray, FloatArray]:
+    return _shapes(bank.LAW[LEAD_PAIR], bank.LAW[LEAD_PAIR], tolerance)
+
+
+def refresh(
+    state: States, slots: IntArray, rules: Rules, policy: Policy, flows: Sequence[str]
+) -> None:
+    """Recompute the rules of streams under one policy."""
+    rules.tolerance[slots] = policy.tolerances()
+    rules.threshold[slots] = policy.transactions_per_false_alarm
+    rules.watching[slots] = [policy.watches(flows[s]) for s in slots.tolist()]
+    rules.active[slots], rules.shapes[slots] = weights(state, slots, policy)
+    rules.size[slots] = policy.baseline_size
+    rules.span[slots] = int(policy.baseline_days * DAY_MS)
+
+
+def bounds(state: States, rules: Rules, slot: IntArray, cell: IntArray) -> FloatArray:
+    """Return the bound u of (stream, cell) pairs, tolerance included."""
+    view = VIEW_OF_CELL[cell]
+    own = state["reference"][slot, view] == BY_OWN
+    reference = np.where(own, state["bound"][slot, cell], bank.LAW[cell])
+    return np.minimum(reference * (1 + rules.tolerance[slot, view]), 1.0)
