@@ -1,0 +1,90 @@
+"""What counts towards a stream's evidence: the one rule that fold, entries and details share."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import NamedTuple
+
+import numpy as np
+
+from service.detection import bank
+from service.detection.policy import Policy
+from service.digits.significand import FloatArray, IntArray
+from service.digits.views import WATCHED_VIEWS
+from service.streams.state import REFUTED_BY_BANK, UNDECIDED, States
+
+_LEAD_PAIR = WATCHED_VIEWS.index("lead_pair")
+
+
+class Weights(NamedTuple):
+    """Weights of the detectors of n streams.
+
+    Attributes
+    ----------
+    views : float64 array (n, 3)
+        1 for a watched view whose cells count, else 0.
+    shapes : float64 array (n, 14)
+        Of the shape detectors, 0 for those that are dropped.
+    """
+
+    views: FloatArray
+    shapes: FloatArray
+
+
+def policy_of(policies: Mapping[int, Policy], version: int) -> Policy:
+    """Return the policy in force; the default one for version 0, a stream without a counted row.
+
+    Raises
+    ------
+    KeyError
+        If the version is missing.
+    """
+    return policies[version] if version else Policy()
+
+
+def weights(state: States, slots: IntArray, policy: Policy) -> Weights:
+    """Return the weights in force for some streams under one policy.
+
+    A view counts if the policy names it and its own baseline rows did not cross while it was
+    being learned. Shapes count with the lead pair, unless their alternative lies in the null.
+
+    Parameters
+    ----------
+    state : array of ``STATE``
+    slots : int64 array (n,)
+    policy : Policy
+    """
+    learning = np.any(state["reference"][slots] == UNDECIDED, axis=1)
+    silenced = learning[:, None] & ((state["refuted"][slots] & REFUTED_BY_BANK) > 0)
+    active = np.array([view in policy.views for view in WATCHED_VIEWS]) & ~silenced
+    counts = np.isfinite(state["shape_scale"][slots]) & active[:, _LEAD_PAIR, None]
+    return Weights(active.astype(np.float64), np.where(counts, bank.SHAPE_WEIGHTS, 0.0))
+
+
+def evidence(state: States, policies: Mapping[int, Policy]) -> FloatArray:
+    """Return log10 of the weighted sum of every stream's detectors, 0 where it is below 1.
+
+    Parameters
+    ----------
+    state : array (n,) of ``STATE``
+    policies : mapping
+        Every policy version in force.
+
+    Returns
+    -------
+    float64 array (n,)
+
+    Raises
+    ------
+    KeyError
+        If a policy version is missing.
+    """
+    total = np.zeros(len(state))
+    versions = state["policy"]
+    for version in np.unique(versions[versions > 0]).tolist():
+        slots = np.flatnonzero(versions == version)
+        weight = weights(state, slots, policies[version])
+        cells = state["sums"][slots].sum(axis=2)
+        total[slots] = (cells * weight.views).sum(axis=1)
+        total[slots] += (state["shape"][slots] * weight.shapes).sum(axis=1)
+    return np.asarray(np.log10(np.maximum(total, 1.0)))

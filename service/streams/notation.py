@@ -1,0 +1,45 @@
+"""How times, shares and other figures are written in documents: RFC 3339, rounded, never NaN."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import numpy.typing as npt
+
+from service.digits.significand import IntArray
+
+
+def moment(ms: int) -> str | None:
+    """Return a time as RFC 3339 in UTC with milliseconds; None for 0, a time never set."""
+    return moments(np.array([ms], dtype=np.int64))[0]
+
+
+def moments(ms: IntArray) -> list[str | None]:
+    """Return many times as `moment` does.
+
+    Parameters
+    ----------
+    ms : int64 array (n,)
+        Milliseconds since 1970 UTC.
+    """
+    texts: list[str] = np.datetime_as_string(ms.astype("M8[ms]"), timezone="UTC").tolist()
+    return [text if given else None for text, given in zip(texts, ms.tolist(), strict=True)]
+
+
+def share(value: npt.ArrayLike) -> float | None:
+    """Return a share, statistic or p-value with 6 significant digits; None where not finite."""
+    plain = float(np.asarray(value, dtype=np.float64))
+    return float(f"{plain:.6g}") if math.isfinite(plain) else None
+
+
+def decimal(value: npt.ArrayLike, places: int) -> float | None:
+    """Return a value with so many decimal places; None where it is not finite."""
+    plain = float(np.asarray(value, dtype=np.float64))
+    return round(plain, places) + 0.0 if math.isfinite(plain) else None  # + 0.0: never -0.0
+
+
+def decimals(values: npt.NDArray[np.float64], places: int) -> list[float | None]:
+    """Return many values as `decimal` does."""
+    rounded: list[float] = (np.round(values, places) + 0.0).tolist()
+    return [value if math.isfinite(value) else None for value in rounded]
