@@ -71,9 +71,7 @@ def standings(state: States) -> list[str]:
 
 def open_alarms(state: States) -> list[str | None]:
     """Return the open alarm's id as 32 hexadecimal digits, None where there is none."""
-    return [
-        alarm.ljust(16, b"\0").hex() if alarm else None for alarm in state["alarm"].tolist()
-    ]
+    return [alarm.ljust(16, b"\0").hex() if alarm else None for alarm in state["alarm"].tolist()]
 
 
 def entries(
