@@ -62,7 +62,7 @@ def typed_rows(body: bytes, *, ndjson: bool) -> list[Row] | None:
         rows = _lines.decode_lines(body) if tidy else []
     except (msgspec.DecodeError, UnicodeDecodeError, RecursionError):
         return None
-    return rows if tidy and len(rows) == lines else None
+    return rows if len(rows) == lines else None  # never so for an untidy body
 
 
 def _one_a_line(body: bytes) -> tuple[bool, int]:
