@@ -63,9 +63,7 @@ def instant(text: str) -> int:
     """
     match = _RFC3339.fullmatch(text) if len(text) <= _LONGEST_TIME else None
     if match is None:
-        raise ValueError(
-            "Expected an RFC 3339 time with its offset, such as 2026-11-30T12:00:00Z."
-        )
+        raise ValueError("Expected an RFC 3339 time with its offset, such as 2026-11-30T12:00:00Z.")
     year, month, day, hour, minute, second = (int(part) for part in match.groups()[:6])
     fraction, _, sign, offset_hour, offset_minute = match.groups()[6:]
     if second == 60:
@@ -134,9 +132,9 @@ _MESSAGES: dict[str, Any] = {
 }
 
 
-def _text(pattern: re.Pattern[str], expected: str, *, required: bool = False, **more: Any) -> (
-    fields.String
-):
+def _text(
+    pattern: re.Pattern[str], expected: str, *, required: bool = False, **more: Any
+) -> fields.String:
     """Return a field whose whole text matches a pattern."""
 
     def check(value: str) -> None:
@@ -231,9 +229,7 @@ class TransactionSchema(Asked):
     )
 
     @validates_schema(pass_original=True, skip_on_field_errors=False)
-    def check_together(
-        self, data: Mapping[str, Any], original_data: Any, **kwargs: Any
-    ) -> None:
+    def check_together(self, data: Mapping[str, Any], original_data: Any, **kwargs: Any) -> None:
         """Check what one field alone does not show."""
         if not isinstance(original_data, Mapping):
             return

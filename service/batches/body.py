@@ -52,9 +52,7 @@ def expand(body: bytes, encoding: str | None, limits: Limits) -> bytes:
 
 
 def _too_large(limit: int) -> TooLarge:
-    return TooLarge(
-        "max_expanded", limit, f"the decompressed body may have at most {limit} bytes"
-    )
+    return TooLarge("max_expanded", limit, f"the decompressed body may have at most {limit} bytes")
 
 
 def _inflate(body: bytes, limit: int) -> bytes:

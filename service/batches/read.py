@@ -142,8 +142,7 @@ def _checked(values: Sequence[Any], request: Request, skip_invalid: bool) -> Bat
             rejections.append(_one(index, value, found))
         elif len(rejections) < _LISTED:
             rejections += [
-                _rejection(index, value, finding)
-                for finding in found[: _LISTED - len(rejections)]
+                _rejection(index, value, finding) for finding in found[: _LISTED - len(rejections)]
             ]
     if rejections and not skip_invalid:
         raise Invalid(rejections, count)

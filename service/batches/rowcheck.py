@@ -103,9 +103,7 @@ def _from_schema(row: Any, messages: Mapping[str, Any]) -> list[Finding]:
     return found
 
 
-def _of_money(
-    clean: Mapping[str, Any], *, named: bool, default: str | None
-) -> list[Finding]:
+def _of_money(clean: Mapping[str, Any], *, named: bool, default: str | None) -> list[Finding]:
     code = clean.get("currency", None if named else default)
     if code is None:
         return [] if named else [Finding("currency", "Expected a value: there is no default.")]
