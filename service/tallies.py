@@ -20,18 +20,19 @@ from service.store.charter import charter
 from service.store.connection import StoreFacts, connect, inspect
 from service.store.directory import Directory
 from service.store.errors import Conflict, StoreError, Unavailable, Unknown
-from service.store.feed import Feed
+from service.store.feed import Feed, Stored
 from service.store.judge import Judge, Judged
-from service.store.keys import Tenant, path
+from service.store.keys import Tenant, path, stream_of
 from service.store.loading import kept_records
 from service.store.logs import Appended, Logs
 from service.store.sweep import Sweep
 from service.streams import record
 from service.streams.detail import detail
-from service.streams.entries import entries, utc
-from service.streams.fold import WINDOW_MS
+from service.streams.entries import entries
+from service.streams.notation import moment
 from service.streams.record import Stream
 from service.streams.table import digits
+from service.streams.window import WINDOW_MS
 
 __all__ = ["Conflict", "Posted", "StoreError", "Tallies", "Unavailable", "Unknown"]
 
@@ -173,7 +174,11 @@ class Tallies:
             for c in judged.crossings
             if c.ordinal == 0 and 0 <= first[c.slot] <= c.record < end[c.slot]
         ]
-        return [a for a in self.feed.alarms(tenant, mine) if a is not None] if mine else []
+        rows = {
+            path(tenant, stream): int(count)
+            for stream, count in zip(judged.streams, judged.folded.state["rows"], strict=True)
+        }
+        return [a.document(rows.get(a.path)) for a in self.feed.stored(tenant, mine)]
 
     def _entries(self, tenant: str, judged: Judged, reply: str, now: int) -> list[Document]:
         versions = self.catalogue.of(tenant).by_version
@@ -261,7 +266,7 @@ class Tallies:
         records = kept_records(log or b"")
         at = record.at(records).tolist()
         return [
-            {"id": i, "amount": int(amount), "currency": stream.currency, "at": utc(t)}
+            {"id": i, "amount": int(amount), "currency": stream.currency, "at": moment(t)}
             for i, amount, t, kind in zip(ids, records["amount"], at, records["kind"], strict=True)
             if kind == record.ROW
         ]
@@ -277,12 +282,22 @@ class Tallies:
         Raises ValueError for a cursor that was never given out.
         """
         with _answering():
-            return self.feed.after(tenant, after, limit)
+            stored, position = self.feed.after(tenant, after, limit)
+            return self._documents(tenant, stored), position
 
     def alarm(self, tenant: str, alarm_id: str) -> Document:
         """Return one alarm; raises Unknown."""
         with _answering():
-            return self.feed.alarm(tenant, alarm_id)
+            return self._documents(tenant, [self.feed.one(tenant, alarm_id)])[0]
+
+    def _documents(self, tenant: str, stored: Sequence[Stored]) -> list[Document]:
+        """Return alarms in the names of the API, as their streams are now."""
+        streams = list(dict.fromkeys(stream_of(a.path)[1] for a in stored))
+        if not streams:
+            return []
+        judged = self._read(tenant, streams)
+        rows = dict(zip(judged.streams, judged.folded.state["rows"].tolist(), strict=True))
+        return [a.document(rows.get(stream_of(a.path)[1])) for a in stored]
 
     def policies(self, tenant: str) -> dict[str, Document]:
         """Return all policies by name; ``standard`` always exists."""

@@ -10,6 +10,7 @@ from typing import Any
 import msgspec
 import redis
 
+from service.batches.currencies import exponent
 from service.store.errors import Unknown
 from service.store.keys import Partition, Tenant, stream_of
 from service.store.logs import checked
@@ -17,6 +18,7 @@ from service.store.script import PUBLISH, run
 from service.streams.alarms import alarm_document, crossing_document
 from service.streams.fold import Crossing
 
+ALARM = re.compile("[0-9a-f]{32}")
 CURSOR = re.compile(r"\d{1,20}-\d{1,20}")
 START = "0-0"
 
@@ -73,6 +75,60 @@ class Outgoing:
         return cls(*msgspec.msgpack.decode(boxed))
 
 
+@dataclass(frozen=True)
+class Stored:
+    """An alarm as stored.
+
+    Attributes
+    ----------
+    alarm : str
+        Id, hex.
+    path : str
+        The stream.
+    cursor : str or None
+        Place in the feed; None while all crossings are of history.
+    crossings : list of Document
+        The first ones and the last, ordinals ascending.
+    """
+
+    alarm: str
+    path: str
+    cursor: str | None
+    crossings: list[Document]
+
+    @classmethod
+    def read(cls, alarm: str, flat: Any) -> Stored:
+        """Read an alarm's hash."""
+        pairs = flat if isinstance(flat, dict) else dict(zip(flat[::2], flat[1::2], strict=True))
+        crossings = {int(k): v for k, v in pairs.items() if k.isdigit()}
+        crossings[int(pairs[b"latest_ordinal"])] = pairs[b"latest"]
+        cursor = pairs.get(b"cursor")
+        return cls(
+            alarm,
+            pairs[b"path"].decode(),
+            cursor.decode() if cursor else None,
+            [msgspec.json.decode(crossings[k]) for k in sorted(crossings)],
+        )
+
+    def document(self, rows: int | None) -> Document:
+        """Return the alarm in the names of the API.
+
+        Parameters
+        ----------
+        rows : int or None
+            The stream's rows with an amount by now, None where unknown.
+        """
+        stream = stream_of(self.path)[1]
+        return alarm_document(
+            self.alarm,
+            stream,
+            self.crossings,
+            cursor=self.cursor,
+            exponent=exponent(stream.currency),
+            rows=rows,
+        )
+
+
 class Feed:
     """Alarms of all tenants."""
 
@@ -102,25 +158,25 @@ class Feed:
         boxed: Any = self.client.hvals(partition.outbox)
         return [Outgoing.unboxed(b) for b in boxed]
 
-    def alarms(self, tenant: str, ids: Sequence[str]) -> list[Document | None]:
-        """Return alarms by id; None for one that does not exist."""
+    def stored(self, tenant: str, ids: Sequence[str]) -> list[Stored]:
+        """Return those of some alarms that exist."""
         keys = Tenant(tenant)
         groups = [[("HGETALL", keys.alarm(i))] for i in ids]
-        out: list[Document | None] = []
-        for alarm_id, (reply,) in zip(ids, checked(run(self.client, groups)), strict=True):
-            out.append(_document(alarm_id, reply))
-        return out
+        replies = checked(run(self.client, groups)) if groups else []
+        return [
+            Stored.read(alarm_id, flat)
+            for alarm_id, (flat,) in zip(ids, replies, strict=True)
+            if flat
+        ]
 
-    def alarm(self, tenant: str, alarm_id: str) -> Document:
+    def one(self, tenant: str, alarm_id: str) -> Stored:
         """Return one alarm; raises Unknown."""
-        found = (
-            self.alarms(tenant, [alarm_id])[0] if re.fullmatch("[0-9a-f]{32}", alarm_id) else None
-        )
-        if found is None:
+        found = self.stored(tenant, [alarm_id]) if ALARM.fullmatch(alarm_id) else []
+        if not found:
             raise Unknown(f"there is no alarm {alarm_id!r}")
-        return found
+        return found[0]
 
-    def after(self, tenant: str, cursor: str | None, limit: int) -> tuple[list[Document], str]:
+    def after(self, tenant: str, cursor: str | None, limit: int) -> tuple[list[Stored], str]:
         """Return alarms after a cursor, oldest first, and the last position read.
 
         Raises
@@ -137,21 +193,4 @@ class Feed:
         if not entries:
             return [], position
         ids = [fields[b"alarm"].decode() for _, fields in entries]
-        found = [a for a in self.alarms(tenant, ids) if a is not None]
-        return found, entries[-1][0].decode()
-
-
-def _document(alarm_id: str, reply: Any) -> Document | None:
-    flat = reply if isinstance(reply, dict) else dict(zip(reply[::2], reply[1::2], strict=True))
-    if not flat:
-        return None
-    crossings = {int(k): v for k, v in flat.items() if k.isdigit()}
-    crossings[int(flat[b"latest_ordinal"])] = flat[b"latest"]
-    _, stream = stream_of(flat[b"path"].decode())
-    cursor = flat.get(b"cursor")
-    return alarm_document(
-        alarm_id,
-        stream,
-        [msgspec.json.decode(crossings[k]) for k in sorted(crossings)],
-        cursor=cursor.decode() if cursor else None,
-    )
+        return self.stored(tenant, ids), entries[-1][0].decode()
