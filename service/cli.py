@@ -112,4 +112,4 @@ def _post_demo(url: str, key: str) -> bool:
 
 
 if __name__ == "__main__":
-    main()
+    main(prog_name="tallyward")
