@@ -7,7 +7,7 @@ from marshmallow import fields
 from schemas import words
 from schemas.alarm import Alarm
 from schemas.base import Answer, Asked, Flag, Whole, said
-from schemas.merchant import Entry
+from schemas.stream import DETAILS, Touched
 
 
 class BatchQuery(Asked):
@@ -76,10 +76,11 @@ class Receipt(Answer):
     )
     durability = fields.String(
         required=True,
-        validate=words.one_of("none", "everysec", "always"),
+        validate=words.one_of("none", "everysec", "always", "unknown"),
         metadata=said(
             "What this answer means when the store's machine fails: none: kept in memory; "
-            "everysec: at most about the last second is lost; always: written to disk."
+            "everysec: at most about the last second is lost; always: written to disk; "
+            "unknown: the store does not say."
         ),
     )
     alarms = fields.List(
@@ -88,6 +89,6 @@ class Receipt(Answer):
         metadata=said("Alarms raised by rows of this request; the feed is the complete record."),
     )
     merchants = fields.List(
-        fields.Nested(Entry),
+        fields.Nested(Touched(partial=DETAILS)),
         metadata=said("With reply=merchants or full: one entry per stream touched."),
     )

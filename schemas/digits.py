@@ -12,7 +12,7 @@ from schemas.merchant import StreamQuery
 class DigitsQuery(StreamQuery):
     """Which stream, view and span."""
 
-    view = words.view(load_default="lead_digit")
+    view = words.celled_view(load_default="lead_digit")
     span = words.span(load_default="window")
 
 
@@ -58,10 +58,7 @@ class Cell(Answer):
 class Digits(Answer):
     """One view of a stream over one span."""
 
-    merchant = words.merchant()
-    flow = words.flow()
-    currency = words.currency()
-    view = words.view(required=True)
+    view = words.celled_view(required=True)
     span = words.span(required=True)
     count = Whole(required=True, metadata=said("Amounts that the view sees.", minimum=0))
     reference = fields.String(

@@ -24,9 +24,12 @@ class Entry(Answer):
     merchant = words.merchant(required=True)
     flow = words.flow(required=True)
     currency = words.currency(required=True)
-    count = Whole(required=True, metadata=said("Rows tallied over the stream's life.", minimum=0))
+    count = Whole(
+        required=True, metadata=said("Amounts above zero over the stream's life.", minimum=0)
+    )
+    zero = Whole(required=True, metadata=said("Rows with amount 0.", minimum=0))
     window_count = Whole(
-        required=True, metadata=said("Rows tallied in the rolling window.", minimum=0)
+        required=True, metadata=said("Amounts above zero in the rolling window.", minimum=0)
     )
     score = Number(required=True, allow_none=True, metadata=said(SCORE, minimum=0, maximum=100))
     score_low = Number(
@@ -69,13 +72,13 @@ class Entry(Answer):
     open_alarm = fields.String(
         required=True, allow_none=True, metadata=said("Id of the open alarm.")
     )
+    updated = words.moment("When the last row arrived.", required=True, allow_none=True)
 
 
 class Listed(Entry):
     """One stream in a listing."""
 
     category = words.category(required=True, allow_none=True)
-    updated = words.moment("When the last row arrived.", required=True, allow_none=True)
 
 
 class MerchantsQuery(Asked):

@@ -87,14 +87,14 @@ def policy(**kwargs: Any) -> fields.String:
     return fields.String(validate=_POLICY, metadata=metadata, **kwargs)
 
 
-def view(**kwargs: Any) -> fields.String:
-    """Any view of the digits."""
+def celled_view(**kwargs: Any) -> fields.String:
+    """A view that has cells."""
     return fields.String(
-        validate=one_of(*VIEWS),
+        validate=one_of(*(view for view in VIEWS if view != "circle")),
         metadata=said(
             "How an amount's digits are read: lead_digit (first significant digit), second_digit, "
             "lead_pair (first two digits), tail_pair (last two digits of the minor-unit integer, "
-            "amounts of at least 1000 minor units), circle (fractional part of log10 amount)."
+            "amounts of at least 1000 minor units)."
         ),
         **kwargs,
     )

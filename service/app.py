@@ -6,7 +6,7 @@ import os
 
 from flask import Flask
 
-from service.settings import Settings
+from service.settings import Settings, SettingsError
 from service.tallies import Tallies
 from service.web import headers, problems
 from service.web.alarms import alarms
@@ -30,16 +30,32 @@ def create_app(settings: Settings | None = None, tallies: Tallies | None = None)
     settings : Settings, optional
         Read from the environment where not given.
     tallies : Tallies, optional
-        Opened by the settings where not given.
+        Opened by the settings where not given, with its sweep.
+
+    Raises
+    ------
+    SettingsError
+        If the settings are wrong, or name no store to open.
+    StoreError
+        If the store does not fit.
     """
     settings = settings or Settings.from_environment(os.environ)
     app = Flask(__name__, static_folder=None)
     app.config["MAX_CONTENT_LENGTH"] = settings.max_body
     app.url_map.merge_slashes = False
-    app.extensions["tallyward"] = assemble(settings, tallies or Tallies())
+    app.extensions["tallyward"] = assemble(settings, tallies or _opened(settings))
     headers.register(app)
     problems.register(app)
     api = Api(app)
     for resource in RESOURCES:
         api.register_blueprint(resource)
     return app
+
+
+def _opened(settings: Settings) -> Tallies:
+    if settings.redis_url is None:
+        fault = "TALLYWARD_REDIS_URL is not set; `tallyward serve` starts a store and sets it"
+        raise SettingsError([fault])
+    tallies = Tallies(settings)
+    tallies.sweep.start()
+    return tallies

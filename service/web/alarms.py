@@ -12,7 +12,7 @@ from service.tallies import Document
 from service.web.access import principal, requires
 from service.web.following import Wanted, read
 from service.web.parts import parts, tallies
-from service.web.problems import Problem, invalid
+from service.web.problems import Problem, invalid, sentence
 from service.web.resource import Resource, path_parameter, reply
 
 alarms = Resource(
@@ -70,4 +70,4 @@ def _page(wanted: Wanted, after: str | None, limit: int) -> tuple[list[Document]
     try:
         return read(lambda a, n: tallies().alarms(tenant, after=a, limit=n), wanted, after, limit)
     except ValueError as error:
-        raise invalid([{"parameter": "after", "detail": str(error)}]) from error
+        raise invalid([{"parameter": "after", "detail": sentence(str(error))}]) from error

@@ -18,7 +18,7 @@ from service.web.access import principal, requires
 from service.web.bodies import read_body
 from service.web.clock import now
 from service.web.parts import parts
-from service.web.problems import Problem, invalid
+from service.web.problems import Problem, invalid, sentence
 from service.web.resource import Resource, documents, reply
 
 batches = Resource("batches", __name__, description="Posting transactions.")
@@ -98,12 +98,13 @@ def post_batch() -> Response:
         try:
             tallies.claim(tenant, idempotency_key, hashlib.sha256(body).hexdigest())
         except Conflict as conflict:
-            fault = {"header": "Idempotency-Key", "detail": str(conflict.args[0])}
+            fault = {"header": "Idempotency-Key", "detail": sentence(conflict.args[0])}
             raise invalid([fault]) from conflict
+    durability = tallies.durability  # asked before: once rows are counted, nothing may fail
     posted = tallies.post(
         tenant, batch, historic="mode" in query, reply=query["reply"], now=arrived
     )
-    return reply(_receipt(batch, posted, tallies.durability, query["reply"]))
+    return reply(_receipt(batch, posted, durability, query["reply"]))
 
 
 def _idempotency_key() -> str | None:

@@ -31,6 +31,4 @@ def _mark(response: Response) -> Response:
     headers["X-Content-Type-Options"] = "nosniff"
     if request.path.startswith(("/v1/", "/health/")):
         headers.setdefault("Cache-Control", "no-store")
-        headers.setdefault("Content-Security-Policy", "default-src 'none'; frame-ancestors 'none'")
-        headers.setdefault("Referrer-Policy", "no-referrer")
     return response

@@ -26,7 +26,7 @@ from service.web import paging
 from service.web.access import principal, requires
 from service.web.clock import now
 from service.web.parts import tallies
-from service.web.problems import Problem, invalid
+from service.web.problems import Problem, invalid, sentence
 from service.web.resource import Resource, path_parameter, reply
 
 merchants = Resource("merchants", __name__, description="Merchants and their streams.")
@@ -98,7 +98,7 @@ def put_merchant(assignment: dict[str, str], merchant: str) -> Response:
             )
         )
     except Unknown as error:
-        raise invalid([{"pointer": "/policy", "detail": str(error.args[0])}]) from error
+        raise invalid([{"pointer": "/policy", "detail": sentence(error.args[0])}]) from error
 
 
 @merchants.path("/v1/merchants/<merchant>/digits", parameters=[NAME])

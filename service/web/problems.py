@@ -108,21 +108,23 @@ def register(app: Flask) -> None:
     """Answer every error of an app with problem details."""
     app.register_error_handler(Problem, problem_response)
     app.register_error_handler(HTTPException, _of_http)
-    app.register_error_handler(Unknown, lambda e: problem_response(Problem(404, str(e.args[0]))))
-    app.register_error_handler(Conflict, lambda e: problem_response(Problem(409, str(e.args[0]))))
+    app.register_error_handler(Unknown, lambda e: _told(404, e.args[0]))
+    app.register_error_handler(Conflict, lambda e: _told(409, e.args[0]))
     app.register_error_handler(Unavailable, _of_store)
     app.register_error_handler(Unreadable, _of_unreadable)
     app.register_error_handler(Invalid, _of_invalid)
-    app.register_error_handler(TooLarge, lambda e: problem_response(Problem(413, _said(e.detail))))
-    app.register_error_handler(
-        UnknownEncoding, lambda e: problem_response(Problem(415, _said(e.detail)))
-    )
+    app.register_error_handler(TooLarge, lambda e: _told(413, e.detail))
+    app.register_error_handler(UnknownEncoding, lambda e: _told(415, e.detail))
     app.register_error_handler(Exception, _of_fault)
 
 
-def _said(detail: str) -> str:
+def sentence(detail: str) -> str:
     """Return a reason as a sentence."""
     return f"{detail[:1].upper()}{detail[1:].rstrip('.')}."
+
+
+def _told(status: int, detail: str) -> Response:
+    return problem_response(Problem(status, sentence(detail)))
 
 
 def _of_unreadable(error: Unreadable) -> Response:
@@ -138,7 +140,7 @@ def _of_invalid(error: Invalid) -> Response:
 
 def _of_store(error: Unavailable) -> Response:
     headers = {"Retry-After": str(error.retry_after)}
-    return problem_response(Problem(503, str(error.args[0]), headers=headers))
+    return problem_response(Problem(503, sentence(error.args[0]), headers=headers))
 
 
 _DETAILS = {

@@ -16,6 +16,11 @@ from tests.web.described import KEY, DescribedClient, described_client
 class Absent(Tallies):
     """Tallies whose store is away."""
 
+    durability = "everysec"
+
+    def __init__(self) -> None:
+        """Open nothing."""
+
     def policies(self, tenant: str) -> dict[str, Document]:
         """Fail as a store does that does not answer."""
         error = Unavailable("The store does not answer; nothing was read.")
@@ -37,7 +42,7 @@ class Absent(Tallies):
             {"name": "store", "status": "fail", "detail": "It does not answer."},
         ]
 
-    def merchants(self, tenant: str) -> list[Document]:
+    def merchants(self, tenant: str, **kwargs: object) -> list[Document]:
         """Fail as code does that nobody foresaw."""
         raise RuntimeError("secret-host:6379 has a bug")
 
