@@ -67,12 +67,15 @@ def by_own(state: States, view: int) -> npt.NDArray[np.bool_]:
 
 
 def expected(state: States, view: int) -> FloatArray:
-    """Return the reference's shares of a watched view, float64 (..., K)."""
+    """Return the reference's shares of a watched view, float64 (..., K).
+
+    NaN where an own baseline holds no row that the view sees.
+    """
     cells = WATCHED[WATCHED_VIEWS[view]]
     base = state["base"][..., cells].astype(np.float64)
     rows = base.sum(axis=-1, keepdims=True)
-    own = by_own(state, view)[..., None] & (rows > 0)
-    return np.where(own, base / np.maximum(rows, 1), LAW[cells])
+    own = by_own(state, view)[..., None]
+    return np.where(own, base / np.where(rows > 0, rows, np.nan), LAW[cells])
 
 
 def bounds(state: States, view: int, tolerance: float) -> FloatArray:
@@ -101,7 +104,7 @@ def fit(state: States, view: int, counts: IntArray, lifetime: npt.NDArray[np.boo
     """
     cells = WATCHED[WATCHED_VIEWS[view]]
     law = excess_mad(counts, LAW[cells])
-    own = np.flatnonzero(by_own(state, view) & (state["base"][:, cells].sum(axis=1) > 0))
+    own = np.flatnonzero(by_own(state, view))
     if not own.size:
         return Fit(law, law)
     learned = excess_of_learned(counts[own], state["base"][own][:, cells], lifetime[own])
@@ -127,14 +130,14 @@ def excess_of_learned(
     Parameters
     ----------
     counts, base : int arrays (..., K)
-        Rows in each cell of the span, and of the baseline (not empty).
+        Rows in each cell of the span, and of the baseline.
     nested : bool array (...)
         Whether the baseline's rows are among those of the span.
 
     Returns
     -------
     Estimate
-        Arrays (...), each 0 to 2/K with low <= value <= high; NaN where the span is empty.
+        Arrays (...), each 0 to 2/K with low <= value <= high; NaN where span or baseline is empty.
     """
     c = np.asarray(counts, dtype=np.float64)
     b = np.asarray(base, dtype=np.float64)
@@ -142,6 +145,7 @@ def excess_of_learned(
     n = c.sum(axis=-1)
     n = np.where(n > 0, n, np.nan)
     m = b.sum(axis=-1)
+    m = np.where(m > 0, m, np.nan)
     q, p = c / n[..., None], b / m[..., None]
     raw = np.abs(q - p).mean(axis=-1)
     apart = 1 / n + 1 / m

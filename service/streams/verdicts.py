@@ -10,7 +10,7 @@ from service.detection.baseline import HARMONICS_FROM, law_verdict, spent_alpha
 from service.detection.policy import Policy
 from service.digits.intervals import always_valid
 from service.digits.significand import IntArray
-from service.digits.views import WATCHED, WATCHED_VIEWS, cell_label
+from service.digits.views import TAIL_PAIR, WATCHED, WATCHED_VIEWS, cell_label
 from service.streams.explanation import percent
 from service.streams.fit import bounds
 from service.streams.record import Stream
@@ -76,9 +76,11 @@ def law_applies(state: States, policy: Policy) -> dict[str, str]:
         ``status``, one of ``yes``, ``no``, ``unknown``, and ``reason``.
     """
     if learned(state):
-        return _judged(state["refuted"], int(state["base_rows"]), "baseline's")
+        tails = int(state["base"][TAIL_PAIR].sum())
+        return _judged(state["refuted"], int(state["base_rows"]), tails, "baseline's")
     if not np.any(state["reference"] == UNDECIDED):  # the policy takes the law for granted
-        return _judged(_refuted_now(state, policy), int(state["rows"]), "stream's")
+        tails = int(state["clock"][_TAIL])
+        return _judged(_refuted_now(state, policy), int(state["rows"]), tails, "stream's")
     if np.any(state["refuted"][:_TAIL] & REFUTED_BY_BANK):
         return {
             "status": "no",
@@ -201,7 +203,7 @@ def _refuted_now(state: States, policy: Policy) -> IntArray:
     return np.asarray(flags | state["refuted"], dtype=np.int64)
 
 
-def _judged(refuted: IntArray, rows: int, whose: str) -> dict[str, str]:
+def _judged(refuted: IntArray, rows: int, tails: int, whose: str) -> dict[str, str]:
     flags = int(np.bitwise_or.reduce(refuted[:_TAIL]))
     reasons = []
     if flags & REFUTED_BY_CELL:
@@ -210,11 +212,12 @@ def _judged(refuted: IntArray, rows: int, whose: str) -> dict[str, str]:
         reasons.append("its detectors would have raised an alarm")
     if flags & REFUTED_BY_CIRCLE and rows >= HARMONICS_FROM:
         reasons.append("the logarithms of the amounts are not spread evenly over a decade")
-    tail = (
-        "The tail pair is not spread evenly."
-        if refuted[_TAIL]
-        else "Nothing speaks against an evenly spread tail pair."
-    )
+    if refuted[_TAIL]:
+        tail = "The tail pair is not spread evenly."
+    elif tails:
+        tail = f"Nothing in {tails:,} tail pairs speaks against their being spread evenly."
+    else:
+        tail = "No amount was large enough to have a tail pair."
     if reasons:
         status, reason = "no", f"Over the {whose} {rows:,} amounts {'; '.join(reasons)}."
     elif flags:
