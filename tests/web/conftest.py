@@ -55,3 +55,15 @@ def app() -> Flask:
 @pytest.fixture
 def client(app: Flask) -> DescribedClient:
     return described_client(app)
+
+
+@pytest.fixture
+def served(fresh_store: str) -> Flask:
+    """The service over a real and empty store."""
+    settings = Settings(admin_key=KEY, redis_url=fresh_store, partitions=2)
+    return create_app(settings, Tallies(settings))
+
+
+@pytest.fixture
+def caller(served: Flask) -> DescribedClient:
+    return described_client(served)
