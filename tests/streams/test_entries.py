@@ -251,3 +251,24 @@ def test_the_interval_allows_for_the_error_of_the_baseline(moved: float) -> None
 def test_history_counts_as_any_row() -> None:
     amounts = law_amounts(np.random.default_rng(17), 300)
     assert one(records(amounts, flags=HISTORIC)) == one(records(amounts))
+
+
+def test_a_view_that_crossed_while_learning_no_longer_counts() -> None:
+    log = records(np.full(20, 4900))
+    folded, crossings = run([log], {1: AUTO})
+    assert not crossings
+    state = folded.state[0]
+    crossed = (state["refuted"] & 4) > 0
+    assert crossed.any()
+    everything = math.log10(
+        (evidence_of_cells(state)).sum() + (state["shape"] * bank.SHAPE_WEIGHTS).sum()
+    )
+    assert everything > 2
+    kept = ~crossed
+    counted = (evidence_of_cells(state) * kept[VIEW_OF_CELL]).sum()
+    if kept[1]:
+        on = np.isfinite(state["shape_scale"])
+        counted += (state["shape"] * bank.SHAPE_WEIGHTS)[on].sum()
+    got = float(evidence(folded.state, {1: AUTO})[0])
+    assert got == pytest.approx(math.log10(max(1.0, counted)))
+    assert got < everything - 0.3
