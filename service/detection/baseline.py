@@ -21,6 +21,9 @@ from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED
 DISPERSION_LEVEL = 0.001
 """A cell is over-dispersed when its shares differ between blocks at this level (chi-square)."""
 
+ROWS_FROM = 500
+"""Rows of a view below which its cells say too little for the law to be accepted."""
+
 HARMONICS_FROM = 1000
 """Rows below which the circle says nothing about the law."""
 
@@ -94,6 +97,7 @@ class LawVerdict:
 
     circle: npt.NDArray[np.bool_]
     cell: npt.NDArray[np.bool_]
+    few: npt.NDArray[np.bool_]
 
 
 def law_verdict(
@@ -108,7 +112,8 @@ def law_verdict(
 
     Two of the three parts of the acceptance: the harmonics of the circle
     (``|phi_h|^2 - 1/n > (tol/2)^2`` for h = 1 or 2, or fewer than 1000 rows), and cells whose
-    lower confidence bound exceeds the law's bound. The third, a silent detector bank over the
+    lower confidence bound exceeds the law's bound; a view that saw too few rows is not judged
+    for the law either. The third, a silent detector bank over the
     baseline's own rows, is kept by the fold.
 
     Parameters
@@ -135,7 +140,7 @@ def law_verdict(
     else:
         power = (circle.reshape(2, 2) ** 2).sum(axis=1) / circle_rows**2 - 1 / circle_rows
         off_circle[:2] = power.max() > (tol[:2] / 2) ** 2
-    return LawVerdict(circle=off_circle, cell=cell)
+    return LawVerdict(circle=off_circle, cell=cell, few=np.asarray(rows) < ROWS_FROM)
 
 
 def own_shares(count: npt.ArrayLike) -> FloatArray:

@@ -36,8 +36,9 @@ class Finding:
     onset_at : int
         Event time of that row, ms since 1970 UTC.
     observed, expected, bound : float
-        Share of the cells since the onset (selected by the alarm, so biased upwards), under the
-        reference, and the most that is taken as ordinary. NaN observed for a shape.
+        Share of the cells among the amounts that the view sees since the onset (selected by the
+        alarm, so biased upwards), under the reference, and the most that is taken as ordinary.
+        NaN observed for a shape.
     reference : str
         ``law`` or ``own``.
     severity : float
@@ -130,7 +131,7 @@ def _cells(
     label, share, bound = _reference(state, view)
     onset = int(state["onset"][part][chosen].min()) or int(state["rows"])
     first = chosen[np.argmin(state["onset"][part][chosen])]
-    since = int(state["rows"]) - onset + 1
+    since = int(state["clock"][view]) - int(state["onset_clock"][part][first]) + 1
     hits = int(state["run"][part][chosen].sum())
     expected = float(share[chosen].sum())
     excess = max(hits - expected * since, 0.0)

@@ -214,6 +214,7 @@ def _apply(
         np.where(carried, state["spent"][at], 0) + so_far[final] - so_far[begin] + amount[begin]
     )
     state["onset"][at] = np.where(carried, state["onset"][at], number[path.hit_row[begin]])
+    state["onset_clock"][at] = np.where(carried, state["onset_clock"][at], path.clock[begin])
     state["onset_at"][at] = np.where(carried, state["onset_at"][at], part.at[path.hit_row[begin]])
 
     counts = state["count"]

@@ -15,6 +15,7 @@ from service.streams.state import (
     REFUTED_BY_CELL,
     REFUTED_BY_CIRCLE,
     RUN_BLOCK,
+    TOO_FEW,
     UNDECIDED,
     Buckets,
     Folded,
@@ -142,7 +143,7 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
         alpha,
     )
     state["refuted"][s] |= (
-        REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell
+        REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell + TOO_FEW * verdict.few
     ).astype(np.uint8)
     folded.buckets = folded.buckets.where(~blocks)
     choose_references(state, np.array([s]), policy)

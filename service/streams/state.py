@@ -21,7 +21,7 @@ FORMAT = 1
 UNDECIDED, BY_LAW, BY_OWN = 0, 1, 2
 """What a view is compared with; undecided while its baseline is being learned."""
 
-REFUTED_BY_CIRCLE, REFUTED_BY_CELL, REFUTED_BY_BANK = 1, 2, 4
+REFUTED_BY_CIRCLE, REFUTED_BY_CELL, REFUTED_BY_BANK, TOO_FEW = 1, 2, 4, 8
 """Why the law was not accepted for a view."""
 
 STATE = np.dtype(
@@ -47,7 +47,8 @@ STATE = np.dtype(
         ("value", "<f8", (CELLS, 3)),  # of a cell's detectors right after its last hit
         ("hit", "<i8", CELLS),  # the view's clock at the cell's last hit or the last restart
         ("cusum", "<f8", CELLS),  # after the last hit
-        ("onset", "<i8", CELLS),  # row of the first hit since the CUSUM was last zero
+        ("onset", "<u4", CELLS),  # row of the first hit since the CUSUM was last zero
+        ("onset_clock", "<u4", CELLS),  # and the view's clock at it
         ("onset_at", "<i8", CELLS),
         ("run", "<i8", CELLS),  # hits since onset, and their amounts
         ("spent", "<f8", CELLS),
@@ -274,4 +275,5 @@ def restart(state: States, s: int, at: int) -> None:
     state["run"][s] = 0
     state["spent"][s] = 0
     state["onset"][s] = 0
+    state["onset_clock"][s] = 0
     state["onset_at"][s] = 0

@@ -21,6 +21,7 @@ from service.streams.state import (
     REFUTED_BY_BANK,
     REFUTED_BY_CELL,
     REFUTED_BY_CIRCLE,
+    TOO_FEW,
     UNDECIDED,
     States,
 )
@@ -199,7 +200,9 @@ def _refuted_now(state: States, policy: Policy) -> IntArray:
         policy.tolerances(),
         1 - policy.baseline_confidence,
     )
-    flags = REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell
+    flags = (
+        REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell + TOO_FEW * verdict.few
+    )
     return np.asarray(flags | state["refuted"], dtype=np.int64)
 
 
@@ -212,12 +215,14 @@ def _judged(refuted: IntArray, rows: int, tails: int, whose: str) -> dict[str, s
         reasons.append("its detectors would have raised an alarm")
     if flags & REFUTED_BY_CIRCLE and rows >= HARMONICS_FROM:
         reasons.append("the logarithms of the amounts are not spread evenly over a decade")
-    if refuted[_TAIL]:
-        tail = "The tail pair is not spread evenly."
-    elif tails:
-        tail = f"Nothing in {tails:,} tail pairs speaks against their being spread evenly."
-    else:
+    if not tails:
         tail = "No amount was large enough to have a tail pair."
+    elif refuted[_TAIL] & (REFUTED_BY_CELL | REFUTED_BY_BANK):
+        tail = "The tail pair is not spread evenly."
+    elif refuted[_TAIL]:
+        tail = f"{tails:,} tail pairs are too few to say whether they are spread evenly."
+    else:
+        tail = f"Nothing in {tails:,} tail pairs speaks against their being spread evenly."
     if reasons:
         status, reason = "no", f"Over the {whose} {rows:,} amounts {'; '.join(reasons)}."
     elif flags:

@@ -193,6 +193,17 @@ def test_a_law_like_merchant_is_accepted_and_a_price_point_shop_is_not() -> None
     np.testing.assert_array_equal(folded.state["reference"][1], BY_OWN)
 
 
+def test_endings_that_a_baseline_never_saw_are_not_taken_to_be_even() -> None:
+    rng = np.random.default_rng(8)
+    n = 2600
+    at = START + np.linspace(0, 40 * 86_400_000, n).astype(np.int64)
+    amounts = np.where(np.arange(n) < 1600, rng.integers(100, 1000, n), 1299)
+    folded, _ = run([records(amounts, at=at)], {1: Policy()})
+    np.testing.assert_array_equal(folded.state["reference"][0, 2], BY_OWN)
+    only_tail = Policy(views=("tail_pair",))
+    assert run([records(amounts, at=at)], {1: only_tail})[1] == []
+
+
 def test_a_baseline_needs_both_its_rows_and_its_days() -> None:
     rng = np.random.default_rng(5)
     day = 86_400_000
