@@ -91,7 +91,7 @@ def _settings() -> Settings:
 
 
 def _announce(running: Running) -> None:
-    click.echo(f"Tallyward listens on {running.url} (console: /console, manual: /docs).")
+    click.echo(f"Tallyward listens on {running.url} (open it to see what is there).")
     if running.key_file is not None:
         click.echo(f"The admin key is in {running.key_file}")
     elif running.admin_key is None:

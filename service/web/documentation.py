@@ -7,10 +7,34 @@ from typing import cast
 import msgspec
 from flask import Response, current_app
 
+from schemas.front import Front
+from service import __version__
 from service.web.openapi import Api
-from service.web.resource import Resource
+from service.web.resource import Resource, reply
 
 documentation = Resource("documentation", __name__, description="This document. No key is needed.")
+
+
+CAUTION = (
+    "An alarm is a reason to look, never proof of fraud. A person reviews it, on lawful grounds, "
+    "within local law, card-scheme rules and data protection."
+)
+LINKS = {
+    "merchants": "/v1/merchants?sort=evidence",
+    "alarms": "/v1/alarms",
+    "policies": "/v1/policies",
+    "description": "/v1/openapi.json",
+    "health": "/health/ready",
+}
+
+
+@documentation.path("/")
+@documentation.answers(Front, "Where to go from here.")
+def front_door() -> Response:
+    """Say what is here; no key is needed."""
+    return reply(
+        {"service": "Tallyward", "version": __version__, "caution": CAUTION, "links": LINKS}
+    )
 
 
 @documentation.path("/v1/openapi.json")
