@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import logging
 import time
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
@@ -25,7 +26,7 @@ from service.store.judge import Judge, Judged
 from service.store.keys import Tenant, path, stream_of
 from service.store.loading import kept_records
 from service.store.logs import Appended, Logs
-from service.store.sweep import Sweep
+from service.store.sweep import LATE_MS, Sweep
 from service.streams import record
 from service.streams.detail import detail
 from service.streams.entries import entries
@@ -39,8 +40,14 @@ __all__ = ["Conflict", "Posted", "StoreError", "Tallies", "Unavailable", "Unknow
 Document = dict[str, Any]
 """A JSON-ready mapping, with the names of the API."""
 
+log = logging.getLogger(__name__)
+
 CATEGORIES_KNOWN = 100_000
 """Merchants whose category a worker remembers, so as not to write it again with every batch."""
+CATEGORIES_SECONDS = 60.0
+"""... and for how long: another worker may have written another one since."""
+
+QUARANTINED = "this stream is in quarantine; the operators are told by readiness"
 
 
 @dataclass(frozen=True)
@@ -94,10 +101,17 @@ class Tallies:
         self.judge = Judge(self.client, self.logs, self.feed, self.catalogue)
         self.directory = Directory(self.client, self.logs, self.judge, self.catalogue)
         self.sweep = Sweep(
-            self.client, self.logs, self.judge, self.feed, self.directory, self.sweep_seconds
+            self.client,
+            self.logs,
+            self.judge,
+            self.feed,
+            self.directory,
+            self.sweep_seconds,
+            late_ms=max(LATE_MS, int(3000 * settings.store_timeout)),
         )
         self._facts: tuple[float, StoreFacts] | None = None
         self._categories: dict[tuple[str, str], str] = {}
+        self._categories_until = 0.0
 
     def facts(self, fresh_seconds: float = 5.0) -> StoreFacts:
         """Return what the store says about itself, at most some seconds old."""
@@ -155,13 +169,14 @@ class Tallies:
             calls = self.logs.calls(tenant, batch, versions, now=now, historic=historic)
             appended = self.logs.append(calls, batch)
         try:
-            with _answering():
-                judged = self.judge.judge(tenant, appended.blobs)
-                self.logs.judged(calls)
-                alarms = self._raised(tenant, judged, appended)
-                found = self._entries(tenant, judged, reply, now)
-        except Unavailable:
-            # counted; the sweep judges it, and the feed tells its alarms
+            judged = self.judge.judge(tenant, appended.blobs)
+            self.logs.judged(calls)
+            alarms = self._raised(tenant, judged, appended)
+            found = self._entries(tenant, judged, reply, now)
+        except Exception:
+            # The rows are counted, and whatever fails now must not say that they are not: the
+            # sweep judges them, and the feed tells their alarms.
+            log.warning("a batch was counted and is judged later", exc_info=True)
             alarms, found = [], []
         return _posted(batch, appended, alarms, found, now)
 
@@ -192,16 +207,23 @@ class Tallies:
         return []
 
     def _remember_categories(self, tenant: str, categories: dict[str, str]) -> None:
-        new = {m: c for m, c in categories.items() if self._categories.get((tenant, m)) != c}
-        if not new:
+        if not categories:
             return
+        now = time.monotonic()
+        if now > self._categories_until or len(self._categories) > CATEGORIES_KNOWN:
+            self._categories.clear()
+            self._categories_until = now + CATEGORIES_SECONDS
+        known = self._categories
+        new = {m: c for m, c in categories.items() if known.get((tenant, m)) != c}
+        if new:
+            self._write_categories(tenant, new)
+
+    def _write_categories(self, tenant: str, categories: dict[str, str]) -> None:
         pipe: Any = self.client.pipeline(transaction=False)
-        for merchant, category in new.items():
+        for merchant, category in categories.items():
             pipe.hset(self.logs.partition(tenant, merchant).categories(tenant), merchant, category)
         pipe.execute()
-        if len(self._categories) > CATEGORIES_KNOWN:
-            self._categories.clear()
-        self._categories.update({(tenant, m): c for m, c in new.items()})
+        self._categories.update({(tenant, m): c for m, c in categories.items()})
 
     def stream_of(self, tenant: str, merchant: str, flow: str, currency: str | None) -> Stream:
         """Return the named stream, or the merchant's busiest one of a flow; raises Unknown."""
@@ -217,6 +239,8 @@ class Tallies:
             if len(mine) == 1:
                 return mine[0]
             judged = self._read(tenant, mine)
+            if not judged.index:
+                raise Unavailable(QUARANTINED)
             rows = judged.folded.state["rows"]
             return judged.streams[int(np.argmax(rows))]
 
@@ -229,7 +253,7 @@ class Tallies:
     def _one(self, tenant: str, stream: Stream) -> Judged:
         judged = self._read(tenant, [stream])
         if not judged.index:
-            raise Unavailable("this stream is in quarantine; the operators are told by readiness")
+            raise Unavailable(QUARANTINED)
         return judged
 
     def _detail(
@@ -262,8 +286,11 @@ class Tallies:
         """Return the last rows kept, oldest first: id, amount, currency, at."""
         partition = self.logs.partition(tenant, stream.merchant)
         with _answering():
-            log, ids = self.logs.ids(partition, path(tenant, stream))
-        records = kept_records(log or b"")
+            kept, ids = self.logs.ids(partition, path(tenant, stream))
+        try:
+            records = kept_records(kept or b"")
+        except ValueError as error:  # torn
+            raise Unavailable(QUARANTINED) from error
         at = record.at(records).tolist()
         return [
             {"id": i, "amount": int(amount), "currency": stream.currency, "at": moment(t)}
@@ -321,7 +348,7 @@ class Tallies:
             if policy is not None:
                 self.catalogue.assign(tenant, merchant, policy)
             if category is not None:
-                self._remember_categories(tenant, {merchant: category})
+                self._write_categories(tenant, {merchant: category})
             partition = self.logs.partition(tenant, merchant)
             stored: Any = self.client.hget(partition.categories(tenant), merchant)
             known = self.catalogue.of(tenant, fresh=True)

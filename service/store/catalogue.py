@@ -18,7 +18,6 @@ import redis
 from service.detection.policy import Policy
 from service.store.errors import Conflict, Unknown
 from service.store.keys import Tenant
-from service.store.script import run
 
 STANDARD = "standard"
 FRESH_SECONDS = 1.0
@@ -78,7 +77,9 @@ class Catalogue:
         else:
             policies = self._load(keys)
         with self._lock:
-            self._cache[tenant] = (now, policies)
+            known = self._cache.get(tenant)
+            if known is None or known[0] <= now:  # a slow thread does not bring back what was
+                self._cache[tenant] = (now, policies)
         return policies
 
     def _load(self, keys: Tenant) -> Policies:
@@ -115,6 +116,7 @@ class Catalogue:
         pipe.hset(keys.policies, name, version)
         pipe.incr(keys.revision)
         pipe.execute()
+        self.of(tenant, fresh=True)
         return policy
 
     def assign(self, tenant: str, merchant: str, policy: str) -> None:
@@ -123,12 +125,11 @@ class Catalogue:
         names = self.of(tenant, fresh=True).newest
         if policy not in names:
             raise Unknown(f"there is no policy {policy!r}; there are {', '.join(sorted(names))}")
-        change = (
-            ("HDEL", keys.assignments, merchant)
-            if policy == STANDARD
-            else ("HSET", keys.assignments, merchant, policy)
-        )
-        for reply in run(self.client, [[change, ("INCR", keys.revision)]])[0]:
-            if isinstance(reply, Exception):
-                raise reply
+        pipe: Any = self.client.pipeline(transaction=True)
+        if policy == STANDARD:
+            pipe.hdel(keys.assignments, merchant)
+        else:
+            pipe.hset(keys.assignments, merchant, policy)
+        pipe.incr(keys.revision)
+        pipe.execute()
         self.of(tenant, fresh=True)

@@ -32,12 +32,11 @@ class Directory:
 
     def refresh(self, partition: Partition, *, now: int, most: int = 10 * BATCH) -> int:
         """Bring at most ``most`` changed streams of a partition up to date; return how many."""
-        done = 0
-        while done < most:
-            reply: Any = self.client.hscan(partition.dirty, 0, count=BATCH)
-            dirty: dict[bytes, bytes] = reply[1]
-            if not dirty:
-                break
+        done = cursor = 0
+        while done < most:  # one pass: streams touched all the time do not hold it up
+            reply: Any = self.client.hscan(partition.dirty, cursor, count=BATCH)
+            dirty: dict[bytes, bytes]
+            cursor, dirty = reply
             by_tenant: dict[str, list[str]] = {}
             for name in dirty:
                 path = name.decode()
@@ -47,6 +46,8 @@ class Directory:
                     part = paths[i : i + BATCH]
                     self._write(partition, tenant, part, dirty, now)
             done += len(dirty)
+            if cursor == 0:  # a server may return nothing and still have more
+                break
         return done
 
     def _write(

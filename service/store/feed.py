@@ -19,8 +19,9 @@ from service.streams.alarms import alarm_document, crossing_document
 from service.streams.fold import Crossing
 
 ALARM = re.compile("[0-9a-f]{32}")
-CURSOR = re.compile(r"\d{1,20}-\d{1,20}")
+CURSOR = re.compile(r"(\d{1,20})-(\d{1,20})", re.ASCII)
 START = "0-0"
+LAST_NUMBER = 2**64 - 1
 
 Document = dict[str, Any]
 
@@ -184,8 +185,12 @@ class Feed:
         ValueError
             For a cursor that no feed can have given out.
         """
-        if cursor is not None and not CURSOR.fullmatch(cursor):
-            raise ValueError(f"{cursor!r} is not a cursor of the feed, such as '1790000000000-0'")
+        if cursor is not None:
+            parts = CURSOR.fullmatch(cursor)
+            if parts is None or max(map(int, parts.groups())) >= LAST_NUMBER:
+                raise ValueError(
+                    f"{cursor!r} is not a cursor of the feed, such as '1790000000000-0'"
+                )
         position = cursor or START
         entries: Any = self.client.xrange(
             Tenant(tenant).feed, min=f"({position}", max="+", count=limit

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import redis
+from redis.exceptions import RedisError
 
 from service.store.catalogue import Catalogue
 from service.store.feed import Feed, Outgoing
@@ -59,12 +60,14 @@ class Judge:
         index = list(range(len(blobs)))
         try:
             loaded, crossings = self._fold(tenant, blobs)
-        except (ValueError, LookupError, ArithmeticError):
+        except RedisError:
+            raise
+        except Exception:  # whatever is wrong with one stream is no matter of the others
             index = self._healthy(tenant, blobs)
             blobs = [blobs[i] for i in index]
             loaded, crossings = self._fold(tenant, blobs)
         if publish:
-            self._settle(blobs, loaded, crossings)
+            self._settle(tenant, blobs, loaded, crossings)
         streams = [stream_of(b.path)[1] for b in blobs]
         return Judged(index, streams, loaded.folded, crossings)
 
@@ -92,7 +95,9 @@ class Judge:
             try:
                 self._fold(tenant, [blob])
                 index.append(i)
-            except (ValueError, LookupError, ArithmeticError) as error:
+            except RedisError:
+                raise
+            except Exception as error:
                 log.error("a stream cannot be folded and is in quarantine: %s", error)
                 self.client.hset(
                     blob.partition.quarantine, blob.path, f"{type(error).__name__}: {error}"
@@ -100,7 +105,7 @@ class Judge:
         return index
 
     def _settle(
-        self, blobs: Sequence[Blobs], loaded: Loaded, crossings: Sequence[Crossing]
+        self, tenant: str, blobs: Sequence[Blobs], loaded: Loaded, crossings: Sequence[Crossing]
     ) -> None:
         """Compact streams with a crossing or a long tail, then publish the crossings."""
         tail = np.bincount(loaded.slot, minlength=len(blobs))
@@ -124,3 +129,17 @@ class Judge:
                 by_partition.setdefault(blobs[slot].partition.number, []).extend(outgoing[slot])
         for number, mine in by_partition.items():
             self.feed.publish(self.logs.partitions[number], mine)
+        self._crossed_elsewhere(
+            tenant, [blobs[i] for i, ok in zip(due, won, strict=True) if outgoing[i] and not ok]
+        )
+
+    def _crossed_elsewhere(self, tenant: str, lost: Sequence[Blobs]) -> None:
+        """See to crossings whose streams another worker compacted first.
+
+        It may have read fewer rows than we did, or not have published yet.
+        """
+        if not lost:
+            return
+        self.judge(tenant, self.logs.read([(b.partition, b.path) for b in lost]))
+        for partition in {b.partition for b in lost}:
+            self.feed.publish(partition, self.feed.left(partition))

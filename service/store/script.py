@@ -23,9 +23,12 @@ class Script:
     sha: str
 
     @classmethod
-    def named(cls, name: str) -> Script:
-        """Read a script from the package."""
-        source = files("service.store").joinpath("scripts", f"{name}.lua").read_bytes()
+    def named(cls, name: str, *functions: str) -> Script:
+        """Read a script from the package, with the functions of other files put before it."""
+        folder = files("service.store").joinpath("scripts")
+        first, rest = folder.joinpath(f"{name}.lua").read_bytes().split(b"\n", 1)  # "#!lua"
+        shared = [folder.joinpath(f"{other}.lua").read_bytes() for other in functions]
+        source = b"\n".join([first, *shared, rest])
         return cls(source, hashlib.sha1(source, usedforsecurity=False).hexdigest())
 
     def call(self, keys: Sequence[str], arguments: Sequence[Argument]) -> Command:
@@ -33,8 +36,8 @@ class Script:
         return ("EVALSHA", self.sha, len(keys), *keys, *arguments)
 
 
-APPEND = Script.named("append")
-COMPACT = Script.named("compact")
+APPEND = Script.named("append", "seen")
+COMPACT = Script.named("compact", "seen")
 PUBLISH = Script.named("publish")
 SETTLE = Script.named("settle")
 

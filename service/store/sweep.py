@@ -27,8 +27,9 @@ from service.store.logs import Logs
 log = logging.getLogger(__name__)
 
 LATE_MS = 5000
-"""A call is swept when its worker has not judged it for so long."""
+"""A call is swept when its worker has not judged it for so long, at least."""
 CALLS_AT_ONCE = 50
+STREAMS_AT_ONCE = 500
 RETRY_QUARANTINE_S = 300
 
 
@@ -39,6 +40,9 @@ class Sweep:
     ----------
     seconds : float
         Pause between rounds; the lease lasts ten rounds.
+    late_ms : int
+        Age at which a call is judged here and forgotten. Must be longer than a worker waits for
+        an answer and then takes to send the call again.
     """
 
     def __init__(
@@ -49,6 +53,7 @@ class Sweep:
         feed: Feed,
         directory: Directory,
         seconds: float,
+        late_ms: int = LATE_MS,
     ) -> None:
         self.client = client
         self.logs = logs
@@ -56,9 +61,11 @@ class Sweep:
         self.feed = feed
         self.directory = directory
         self.seconds = seconds
+        self.late_ms = late_ms
         self.last_round = time.monotonic()
         self._name = os.urandom(8).hex()
         self._stop = threading.Event()
+        self._retry_quarantine_at = dict.fromkeys(logs.partitions, 0.0)
 
     def start(self) -> None:
         """Sweep in a thread until `stop`."""
@@ -81,8 +88,13 @@ class Sweep:
         """Sweep every partition whose lease is free."""
         self.logs.flush_judged()
         for partition in self.logs.partitions:
-            if self._leased(partition):
-                self.sweep(partition)
+            try:
+                if self._leased(partition):
+                    self.sweep(partition)
+            except (redis.ConnectionError, redis.TimeoutError):
+                raise
+            except Exception:  # what is wrong with one partition is no matter of the others
+                log.exception("the sweep of partition %d failed", partition.number)
         self.last_round = time.monotonic()
 
     def sweep(self, partition: Partition) -> None:
@@ -91,6 +103,7 @@ class Sweep:
         if left:
             self.feed.publish(partition, left)
         self._judge_late(partition)
+        self._retry_quarantined(partition)
         self.directory.refresh(partition, now=time.time_ns() // 1_000_000)
 
     def _leased(self, partition: Partition) -> bool:
@@ -104,7 +117,7 @@ class Sweep:
 
     def _judge_late(self, partition: Partition) -> None:
         now: Any = self.client.time()
-        before = now[0] * 1000 + now[1] // 1000 - LATE_MS
+        before = now[0] * 1000 + now[1] // 1000 - self.late_ms
         while True:
             tokens: Any = self.client.zrange(
                 partition.pending, "-inf", before, byscore=True, offset=0, num=CALLS_AT_ONCE
@@ -117,11 +130,29 @@ class Sweep:
                 for path in _paths(blob) if blob else ():
                     by_tenant.setdefault(path.split("/", 1)[0], set()).add(path)
             for tenant, paths in by_tenant.items():
-                blobs = self.logs.read([(partition, p) for p in sorted(paths)])
-                self.judge.judge(tenant, blobs)
+                self._judge(partition, tenant, sorted(paths))
             self.client.hdel(partition.calls, *tokens)
             self.client.zrem(partition.pending, *tokens)
             log.info("judged %d calls that their workers had left", len(tokens))
+
+    def _judge(self, partition: Partition, tenant: str, paths: list[str]) -> None:
+        for i in range(0, len(paths), STREAMS_AT_ONCE):
+            blobs = self.logs.read([(partition, p) for p in paths[i : i + STREAMS_AT_ONCE]])
+            self.judge.judge(tenant, blobs)
+
+    def _retry_quarantined(self, partition: Partition) -> None:
+        """Try some of the quarantined streams again, at the first round and then seldom."""
+        if time.monotonic() < self._retry_quarantine_at[partition]:
+            return
+        self._retry_quarantine_at[partition] = time.monotonic() + RETRY_QUARANTINE_S
+        held: Any = self.client.hrandfield(partition.quarantine, CALLS_AT_ONCE)
+        for name in held:
+            path = name.decode()
+            blobs = self.logs.read([(partition, path)])
+            if self.judge.judge(path.split("/", 1)[0], blobs).index:
+                self.client.hdel(partition.quarantine, path)
+                self.client.hsetnx(partition.dirty, path, "healed")
+                log.warning("a stream is out of quarantine: it can be folded again")
 
 
 def _paths(registered: bytes) -> list[str]:

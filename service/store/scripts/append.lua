@@ -28,38 +28,28 @@ if before then
 end
 
 local NONE = '0000000000000000000'
-local SHARD, SPREAD = 400, 8
 local counts, records, decimals, ids = ARGV[4], ARGV[5], ARGV[6], ARGV[7]
 local places, sources = ARGV[8], cmsgpack.unpack(ARGV[9])
 local horizon = tonumber(ARGV[10])
 local time = redis.call('TIME')
-local now = tonumber(time[1])
-local epoch = math.floor(now / horizon)
 local n = #KEYS
 local prefix = #tag + 5
 
--- Sets of idents: per epoch, level l has 8^l shards and is filled after the levels below it.
-local function levels(count)
-  local level, room = 0, SHARD
-  while count >= room do
-    level = level + 1
-    room = room + SHARD * SPREAD ^ level
+-- Return a function that tells whether a log holds an ident, of `asked` times it is asked.
+local function in_log(log, asked)
+  if asked > 16 then  -- one pass over the log, or many rows against a long log take seconds
+    local held = {}
+    for at = 41, #log, 32 do held[string.sub(log, at, at + 7)] = true end
+    return function(bytes) return held[bytes] end
   end
-  return level
-end
-
-local function shard(seen, at, level, ident)
-  local number = tonumber(string.sub(ident, -9)) % (SPREAD ^ level)
-  return string.format('%s/%d/%d/%d', seen, at, level, number)
-end
-
-local function in_log(log, bytes)
-  local at = string.find(log, bytes, 33, true)
-  while at do
-    if (at - 33) % 32 == 8 then return true end
-    at = string.find(log, bytes, at + 1, true)
+  return function(bytes)
+    local at = string.find(log, bytes, 33, true)
+    while at do
+      if (at - 33) % 32 == 8 then return true end
+      at = string.find(log, bytes, at + 1, true)
+    end
+    return false
   end
-  return false
 end
 
 local mask, first, plans = {}, {}, {}
@@ -76,7 +66,10 @@ for i = 1, n do
     base = struct.unpack('<I8', string.sub(header, 17, 24))
     length = (redis.call('STRLEN', key) - 32) / 32
   end
-  if generation == 0 and not plan.new then plan.log = redis.call('GET', key) end
+  if generation == 0 and not plan.new then
+    plan.log = redis.call('GET', key)
+    plan.holds = in_log(plan.log, rows)
+  end
   plan.generation = generation
   local seen = tag .. 'seen/' .. path
   local in_call, epochs = {}, nil
@@ -99,24 +92,10 @@ for i = 1, n do
       if ident ~= NONE then
         known = in_call[ident]
         if not known and plan.log then
-          known = in_log(plan.log, string.sub(records, 32 * j - 23, 32 * j - 16))
+          known = plan.holds(string.sub(records, 32 * j - 23, 32 * j - 16))
         elseif not known and generation > 0 then
-          if not epochs then
-            epochs = {}
-            for e = epoch - 1, epoch + 1 do
-              local count = tonumber(redis.call('HGET', seen, e) or 0)
-              if count > 0 then epochs[#epochs + 1] = {e, levels(count)} end
-            end
-          end
-          for _, e in ipairs(epochs) do
-            for level = 0, e[2] do
-              if redis.call('SISMEMBER', shard(seen, e[1], level, ident), ident) == 1 then
-                known = true
-                break
-              end
-            end
-            if known then break end
-          end
+          epochs = epochs or epochs_of(seen)
+          known = is_seen(seen, epochs, ident)
         end
         in_call[ident] = true
         if not known and generation > 0 then
@@ -171,22 +150,7 @@ for i = 1, n do
       redis.call('HSET', tag .. 'marks/' .. plan.path, sources[source],
         string.format('%.0f', mark))
     end
-    if plan.adds then
-      local seen = tag .. 'seen/' .. plan.path
-      local count = redis.call('HINCRBY', seen, epoch, #plan.adds)
-      local keeps = (epoch + 2) * horizon + 86400 - now
-      redis.call('EXPIRE', seen, keeps)
-      local sets = {}
-      for k, ident in ipairs(plan.adds) do
-        local name = shard(seen, epoch, levels(count - #plan.adds + k - 1), ident)
-        sets[name] = sets[name] or {}
-        table.insert(sets[name], ident)
-      end
-      for name, members in pairs(sets) do
-        redis.call('SADD', name, unpack(members))
-        redis.call('EXPIRE', name, keeps)
-      end
-    end
+    if plan.adds then remember(tag .. 'seen/' .. plan.path, plan.adds, time[1], horizon) end
     dirty[#dirty + 1] = plan.path
     dirty[#dirty + 1] = call
   end

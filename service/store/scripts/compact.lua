@@ -67,18 +67,6 @@ redis.call('SET', key, string.sub(header, 1, 4) .. struct.pack('<I4', generation
   .. string.sub(log, 33 + 32 * drop))
 if ids then redis.call('SET', KEYS[4], string.sub(ids, skip)) end
 if #adds > 0 then
-  local time = redis.call('TIME')
-  local horizon = tonumber(ARGV[5])
-  local epoch = math.floor(time[1] / horizon)
-  local keeps = (epoch + 2) * horizon + 86400 - time[1]
-  local seen = tag .. 'seen/' .. path
-  -- level 0 has one shard; append.lua counts on 400 ids in it before it opens the next level
-  local shard = string.format('%s/%d/0/0', seen, epoch)
-  for k = 1, #adds, 1000 do
-    redis.call('SADD', shard, unpack(adds, k, math.min(k + 999, #adds)))
-  end
-  redis.call('EXPIRE', shard, keeps)
-  redis.call('HINCRBY', seen, epoch, #adds)
-  redis.call('EXPIRE', seen, keeps)
+  remember(tag .. 'seen/' .. path, adds, redis.call('TIME')[1], tonumber(ARGV[5]))
 end
 return 1
