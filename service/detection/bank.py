@@ -124,4 +124,5 @@ def projection(q: FloatArray, bounds: FloatArray) -> FloatArray:
     fits = c <= np.take_along_axis(ratio, order, axis=-1)
     first = np.argmax(fits, axis=-1)
     chosen = np.take_along_axis(c, first[..., None], axis=-1)[..., 0]
-    return np.where(fits.any(axis=-1), chosen, np.inf)
+    # without tolerance the bounds sum to 1 and rounding may leave no fit: then p* is u itself
+    return np.where(fits.any(axis=-1), chosen, ratio.max(axis=-1))

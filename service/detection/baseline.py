@@ -18,11 +18,22 @@ from service.digits.intervals import clopper_pearson_lower, clopper_pearson_uppe
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED
 
-DISPERSION_LEVEL = 0.001
-"""A cell is over-dispersed when its shares differ between blocks at this level (chi-square)."""
+DISPERSION_LEVEL = 0.0001
+"""A cell is over-dispersed if some block of a partition holds more of it than chance explains at
+this level, corrected for the number of blocks."""
+
+BLOCK_ROWS = 50
+"""Blocks with fewer rows say nothing."""
+
+REFUTING_LEVEL = 0.05
+"""Error at which a view's cells together may wrongly speak against the law. It is far larger than
+the error of the bounds: to doubt the law costs little, to trust it wrongly costs false alarms."""
 
 ROWS_FROM = 500
 """Rows of a view below which its cells say too little for the law to be accepted."""
+
+EXCEPTION_LEVEL = 0.1
+"""Single-cell error at which an accepted law still gives way to the merchant's own bound."""
 
 HARMONICS_FROM = 1000
 """Rows below which the circle says nothing about the law."""
@@ -42,6 +53,7 @@ def own_bounds(
     rows: IntArray,
     block_count: IntArray,
     block_rows: IntArray,
+    block_partition: IntArray,
     alpha: float,
 ) -> FloatArray:
     """Return upper bounds of all cells that hold together with probability ``1 - alpha``.
@@ -56,9 +68,11 @@ def own_bounds(
     rows : int64 array (3,)
         Baseline rows seen by each watched view.
     block_count : int64 array (B, 199)
-        Counts per block; blocks of several partitions of the baseline may be stacked.
+        Counts per block.
     block_rows : int64 array (B, 3)
         Rows of each block seen by each view.
+    block_partition : int64 array (B,)
+        Which partition of the baseline each block belongs to: runs of rows, times of the day.
     alpha : float
         Error probability of the baseline, 0 to 1.
 
@@ -72,22 +86,18 @@ def own_bounds(
     n = rows[VIEW_OF_CELL]
     level = alpha / CELLS
     pooled = clopper_pearson_upper(count, n, level)
-    if not len(block_rows):
-        return pooled
-    nb = block_rows[:, VIEW_OF_CELL].astype(np.float64)
     share = np.divide(count, n, out=np.zeros(CELLS), where=n > 0)
-    expected = nb * share
-    variance = expected * (1 - share)
-    scatter = np.divide(
-        (block_count - expected) ** 2, variance, out=np.zeros_like(expected), where=variance > 0
-    ).sum(axis=0)
-    freedom = np.maximum((nb > 0).sum(axis=0) - 1, 1)
-    dispersed = scatter > special.chdtri(freedom, DISPERSION_LEVEL)
-    if not dispersed.any():
-        return pooled
-    blocks = clopper_pearson_upper(block_count[:, dispersed], nb[:, dispersed], level)
-    largest = np.where(nb[:, dispersed] > 0, blocks, 0).max(axis=0)
-    pooled[dispersed] = np.maximum(pooled[dispersed], largest)
+    for partition in np.unique(block_partition):
+        mine = block_partition == partition
+        blocks, nb = block_count[mine], block_rows[mine][:, VIEW_OF_CELL]
+        says = nb >= BLOCK_ROWS
+        chance = special.bdtrc(blocks - 1.0, np.maximum(nb, 1), share)  # P(as many or more)
+        unusual = says & (blocks > 0) & (chance < DISPERSION_LEVEL / max(len(blocks), 1))
+        dispersed = unusual.any(axis=0)
+        if dispersed.any():
+            upper = clopper_pearson_upper(blocks[:, dispersed], nb[:, dispersed], level)
+            largest = np.where(says[:, dispersed], upper, 0).max(axis=0)
+            pooled[dispersed] = np.maximum(pooled[dispersed], largest)
     return pooled
 
 
@@ -106,7 +116,6 @@ def law_verdict(
     circle: FloatArray,
     circle_rows: int,
     tolerances: tuple[float, float, float],
-    alpha: float,
 ) -> LawVerdict:
     """Say for which views a complete baseline speaks against the law.
 
@@ -126,12 +135,10 @@ def law_verdict(
         Rows in those sums.
     tolerances : tuple of float
         Per watched view.
-    alpha : float
-        Error probability of the cells' lower bounds together.
     """
     tol = np.asarray(tolerances)
     n = rows[VIEW_OF_CELL]
-    lower = clopper_pearson_lower(count, n, alpha / CELLS)
+    lower = clopper_pearson_lower(count, n, REFUTING_LEVEL / CELLS)
     too_much = lower > LAW * (1 + tol[VIEW_OF_CELL])
     cell = np.array([bool(too_much[cells].any()) for cells in WATCHED.values()])
     off_circle = np.zeros(3, dtype=bool)
@@ -141,6 +148,23 @@ def law_verdict(
         power = (circle.reshape(2, 2) ** 2).sum(axis=1) / circle_rows**2 - 1 / circle_rows
         off_circle[:2] = power.max() > (tol[:2] / 2) ** 2
     return LawVerdict(circle=off_circle, cell=cell, few=np.asarray(rows) < ROWS_FROM)
+
+
+def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
+    """Return the cells that a baseline saw more often than the law lets one expect.
+
+    A cell is excepted when its one-sided lower bound at ``EXCEPTION_LEVEL``, for that cell alone,
+    is above the law's share: so mild a doubt that even a perfect merchant has a few such cells.
+
+    Parameters
+    ----------
+    count : int array (..., 199)
+        The baseline's counts.
+    """
+    counts = np.asarray(count, dtype=np.float64)
+    rows = np.stack([counts[..., cells].sum(axis=-1) for cells in WATCHED.values()], axis=-1)
+    lower = clopper_pearson_lower(counts, rows[..., VIEW_OF_CELL], EXCEPTION_LEVEL)
+    return np.asarray(lower > LAW)
 
 
 def own_shares(count: npt.ArrayLike) -> FloatArray:

@@ -9,6 +9,7 @@ import numpy as np
 from service.detection import bank
 from service.digits.significand import FloatArray
 from service.digits.views import LEAD_PAIR, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS, cell_label
+from service.streams.ordinary import bounds_of_view
 from service.streams.state import BY_OWN, States
 
 NOTABLE = 0.05
@@ -113,8 +114,8 @@ def _reference(state: States, view: int) -> tuple[str, FloatArray, FloatArray]:
     part = WATCHED[WATCHED_VIEWS[view]]
     if state["reference"][view] == BY_OWN:
         base = state["base"][part].astype(np.float64)
-        return "own", base / max(base.sum(), 1.0), state["bound"][part].astype(np.float64)
-    return "law", bank.LAW[part], bank.LAW[part]
+        return "own", base / max(base.sum(), 1.0), bounds_of_view(state, view)
+    return "law", bank.LAW[part], bounds_of_view(state, view)
 
 
 def _cells(

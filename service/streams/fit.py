@@ -16,6 +16,7 @@ from service.detection.bank import LAW
 from service.digits.measures import Estimate, excess_mad
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED, WATCHED_VIEWS
+from service.streams.ordinary import bounds_of_view
 from service.streams.state import BY_OWN, RUN_BLOCK, Folded, States
 from service.streams.window import BUCKET_MS, WINDOW_MS
 
@@ -83,10 +84,7 @@ def bounds(state: States, view: int, tolerance: float) -> FloatArray:
 
     While a baseline is being learned they are the law's, though nothing is judged by them yet.
     """
-    cells = WATCHED[WATCHED_VIEWS[view]]
-    own = by_own(state, view)[..., None]
-    reference = np.where(own, state["bound"][..., cells].astype(np.float64), LAW[cells])
-    return np.minimum(reference * (1 + tolerance), 1.0)
+    return np.minimum(bounds_of_view(state, view) * (1 + tolerance), 1.0)
 
 
 def fit(state: States, view: int, counts: IntArray, lifetime: npt.NDArray[np.bool_]) -> Fit:

@@ -24,9 +24,9 @@ from service.streams.state import (
 )
 from service.streams.window import counted
 
-RUN_BLOCKS = 32
+RUN_BLOCKS = 16
 """A baseline has at most so many blocks of consecutive rows; they pair up as it grows."""
-FIRST_BLOCK_LEVEL = 5
+FIRST_BLOCK_LEVEL = 6
 HOUR_BLOCK_MS = 3 * 3600 * 1000
 """Blocks of the time of day (UTC), so that lunch and dinner are told apart at any volume."""
 
@@ -42,12 +42,13 @@ def until_complete(state: States, rules: Rules, part: Rows) -> tuple[Rows, IntAr
     first = np.searchsorted(part.slot, part.slot)
     index = np.arange(len(part.slot))
     rank = index - first + 1
-    wide = np.int64(1) << 44  # above any time in ms, so that streams do not mix in the scan
     known = state["base_rows"][part.slot] > 0
     low = np.where(known, np.minimum(part.at, state["base_first_at"][part.slot]), part.at)
     high = np.where(known, np.maximum(part.at, state["base_last_at"][part.slot]), part.at)
-    oldest = np.minimum.accumulate(low - part.slot * wide) + part.slot * wide
-    newest = np.maximum.accumulate(high + part.slot * wide) - part.slot * wide
+    # one scan for all streams: each is lifted above the one before
+    lift = np.cumsum(index == first) * (int(high.max()) - int(low.min()) + 1)
+    oldest = np.minimum.accumulate(low - lift) + lift
+    newest = np.maximum.accumulate(high + lift) - lift
     complete = (
         learning
         & (state["base_rows"][part.slot] + rank >= rules.size[part.slot])
@@ -131,7 +132,8 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     per_block = np.zeros((len(table), CELLS), np.int64)
     per_block[number, folded.buckets.cell[blocks]] = folded.buckets.count[blocks]
     seen = np.stack([per_block[:, cells].sum(axis=1) for cells in WATCHED.values()], axis=1)
-    bounds = own_bounds(count, rows, per_block, seen, alpha)
+    partition = (table >= HOUR_BLOCK).astype(np.int64)
+    bounds = own_bounds(count, rows, per_block, seen, partition, alpha)
     rounded = bounds.astype(np.float32)
     state["bound"][s] = np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)
     verdict = law_verdict(
@@ -140,7 +142,6 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
         state["base_circle"][s],
         int(state["base_rows"][s]),
         policy.tolerances(),
-        alpha,
     )
     state["refuted"][s] |= (
         REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell + TOO_FEW * verdict.few

@@ -15,6 +15,7 @@ from service.detection.policy import Policy
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_PAIR, VIEW_OF_CELL
 from service.streams.in_force import weights
+from service.streams.ordinary import bound_of, bounds_of_view, except_cells
 from service.streams.state import BY_LAW, BY_OWN, UNDECIDED, States
 
 DAY_MS = 86_400_000
@@ -72,12 +73,18 @@ def choose_references(state: States, slots: IntArray, policy: Policy) -> None:
         if policy.reference == "law"
         else np.where(learned, np.where(own, BY_OWN, BY_LAW), UNDECIDED)
     )
+    state["excepted"][slots] = 0
+    if policy.reference == "auto":
+        except_cells(state, slots[learned[:, 0]])
     tolerance = policy.tolerances()[1]
     state["shape_scale"][slots], state["shape_norm"][slots] = _law_shapes(tolerance)
-    for s in slots[state["reference"][slots, 1] == BY_OWN].tolist():
-        shares = own_shares(state["base"][s])[LEAD_PAIR]
-        bounds = state["bound"][s, LEAD_PAIR].astype(np.float64)
-        state["shape_scale"][s], state["shape_norm"][s] = _shapes(shares, bounds, tolerance)
+    own_pairs = state["reference"][slots, 1] == BY_OWN
+    special = own_pairs | np.any(state["excepted"][slots, LEAD_PAIR], axis=1)
+    for s, own_pair in zip(slots[special].tolist(), own_pairs[special].tolist(), strict=True):
+        shares = own_shares(state["base"][s])[LEAD_PAIR] if own_pair else bank.LAW[LEAD_PAIR]
+        state["shape_scale"][s], state["shape_norm"][s] = _shapes(
+            shares, bounds_of_view(state[s], 1), tolerance
+        )
 
 
 def _shapes(
@@ -109,7 +116,5 @@ def refresh(
 
 def bounds(state: States, rules: Rules, slot: IntArray, cell: IntArray) -> FloatArray:
     """Return the bound u of (stream, cell) pairs, tolerance included."""
-    view = VIEW_OF_CELL[cell]
-    own = state["reference"][slot, view] == BY_OWN
-    reference = np.where(own, state["bound"][slot, cell], bank.LAW[cell])
-    return np.minimum(reference * (1 + rules.tolerance[slot, view]), 1.0)
+    tolerance = rules.tolerance[slot, VIEW_OF_CELL[cell]]
+    return np.minimum(bound_of(state, slot, cell) * (1 + tolerance), 1.0)

@@ -64,6 +64,7 @@ STATE = np.dtype(
         ("base_circle", "<f8", 4),
         ("base", "<u4", CELLS),  # the baseline's counts
         ("bound", "<f4", CELLS),  # own upper bounds, before tolerance
+        ("excepted", "u1", CELLS),  # cells with their own bound though the law was accepted
         ("shape_scale", "<f8", SHAPES),  # c of the projection; infinite for a dropped detector
         ("shape_norm", "<f8", SHAPES),  # z of the alternative
         # the open alarm

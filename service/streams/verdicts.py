@@ -198,7 +198,6 @@ def _refuted_now(state: States, policy: Policy) -> IntArray:
         state["circle"][:4],
         int(state["rows"]),
         policy.tolerances(),
-        1 - policy.baseline_confidence,
     )
     flags = (
         REFUTED_BY_CIRCLE * verdict.circle + REFUTED_BY_CELL * verdict.cell + TOO_FEW * verdict.few

@@ -1,0 +1,54 @@
+"""What is ordinary for a stream: the bounds of its cells before tolerance.
+
+Against its own baseline, the baseline's upper confidence bounds. Against the law, the law itself,
+but for *excepted* cells: those that the baseline saw more often than the law lets one expect,
+though not surely so. They get the larger of the law and their own bound. Accepting the law for a
+view says that nothing surely speaks against it, not that it holds in every cell.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from service.detection.bank import LAW
+from service.detection.baseline import exceptions
+from service.digits.significand import FloatArray, IntArray
+from service.digits.views import VIEW_OF_CELL, WATCHED, WATCHED_VIEWS
+from service.streams.state import BY_LAW, BY_OWN, States
+
+
+def bound_of(state: States, slot: IntArray, cell: IntArray) -> FloatArray:
+    """Return the bounds of (stream, cell) pairs, arrays of one shape, tolerance not included."""
+    return _chosen(
+        state["reference"][slot, VIEW_OF_CELL[cell]],
+        state["excepted"][slot, cell],
+        state["bound"][slot, cell],
+        LAW[cell],
+    )
+
+
+def bounds_of_view(state: States, view: int) -> FloatArray:
+    """Return the bounds of a watched view's cells, float64 (..., K), tolerance not included."""
+    cells = WATCHED[WATCHED_VIEWS[view]]
+    return _chosen(
+        state["reference"][..., view, None],
+        state["excepted"][..., cells],
+        state["bound"][..., cells],
+        LAW[cells],
+    )
+
+
+def except_cells(state: States, slots: IntArray) -> None:
+    """Mark the cells that a complete baseline excepts from the law."""
+    state["excepted"][slots] = exceptions(state["base"][slots])
+
+
+def _chosen(
+    reference: npt.NDArray[np.uint8],
+    excepted: npt.NDArray[np.uint8],
+    bound: npt.NDArray[np.float32],
+    law: FloatArray,
+) -> FloatArray:
+    by_law = np.where((excepted > 0) & (reference == BY_LAW), np.maximum(law, bound), law)
+    return np.asarray(np.where(reference == BY_OWN, bound, by_law), dtype=np.float64)
