@@ -32,7 +32,7 @@ the error of the bounds: to doubt the law costs little, to trust it wrongly cost
 ROWS_FROM = 500
 """Rows of a view below which its cells say too little for the law to be accepted."""
 
-EXCEPTION_LEVEL = 0.1
+EXCEPTION_LEVEL = 0.2
 """Single-cell error at which an accepted law still gives way to the merchant's own bound."""
 
 HARMONICS_FROM = 1000

@@ -16,7 +16,7 @@ from service.store.keys import Partition, Tenant, stream_of
 from service.store.logs import checked
 from service.store.script import PUBLISH, run
 from service.streams.alarms import alarm_document, crossing_document
-from service.streams.fold import Crossing
+from service.streams.crossing import Crossing
 
 ALARM = re.compile("[0-9a-f]{32}")
 CURSOR = re.compile(r"(\d{1,20})-(\d{1,20})", re.ASCII)

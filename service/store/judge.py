@@ -15,7 +15,8 @@ from service.store.feed import Feed, Outgoing
 from service.store.keys import stream_of
 from service.store.loading import Loaded, load
 from service.store.logs import COMPACT_ROWS, Blobs, Logs
-from service.streams.fold import Crossing, fold
+from service.streams.crossing import Crossing
+from service.streams.fold import fold
 from service.streams.record import Stream
 from service.streams.state import Folded, write_snapshots
 

@@ -7,8 +7,8 @@ from collections.abc import Mapping, Sequence
 from dataclasses import asdict
 from typing import Any
 
+from service.streams.crossing import Crossing
 from service.streams.explanation import explanation
-from service.streams.fold import Crossing
 from service.streams.notation import decimal, moment, share
 from service.streams.record import Stream
 
@@ -42,6 +42,9 @@ def crossing_document(crossing: Crossing) -> dict[str, Any]:
         "evidence": crossing.evidence,
         "threshold": crossing.threshold,
         "severity": crossing.severity,
+        "excess": _plain(crossing.excess),
+        "excess_amount": _plain(crossing.excess_amount),
+        "last_hit_at": crossing.last_hit_at,
         "findings": [
             {key: _plain(value) for key, value in asdict(finding).items()}
             for finding in crossing.findings
@@ -61,9 +64,8 @@ def alarm_document(
     """Return an alarm in the names of the API, undecided.
 
     Its own fields are those of the strongest finding of the crossing that raised it. ``findings``
-    gathers the strongest of each view and pattern over all crossings. The excess is that of the
-    first finding's view and pattern, summed over the crossings: detectors start again after each,
-    so no row is counted twice. A shape has none.
+    gathers the strongest of each view and pattern over all crossings. Severity, excess and last
+    hit are as of the last crossing; a shape has no excess.
 
     Parameters
     ----------
@@ -88,7 +90,8 @@ def alarm_document(
         raise ValueError("an alarm needs a crossing with a finding")
     first, last = crossings[0], crossings[-1]
     top = first["findings"][0]
-    excess_count, excess_amount = _excess(crossings, top)
+    excess_count = None if last["excess"] is None else decimal(last["excess"], 1)
+    excess_amount = None if last["excess"] is None else round(last["excess_amount"])
     return {
         "id": alarm_id,
         "cursor": cursor,
@@ -109,7 +112,7 @@ def alarm_document(
         "severity": decimal(last["severity"], 1),
         "excess_count": excess_count,
         "excess_amount": excess_amount,
-        "last_hit_at": moment(last["at"]),
+        "last_hit_at": moment(last["last_hit_at"]),
         "still_active": rows is None or _goes_on(last, rows),
         "explanation": explanation(
             top, stream, excess=excess_count, excess_amount=excess_amount, exponent=exponent
@@ -151,22 +154,6 @@ def _merged(crossings: Sequence[Mapping[str, Any]]) -> list[Mapping[str, Any]]:
             if known is None or finding["weight"] > STRONGER * known["weight"]:
                 strongest[key] = finding
     return sorted(strongest.values(), key=lambda found: -found["weight"])[:MOST_FINDINGS]
-
-
-def _excess(
-    crossings: Sequence[Mapping[str, Any]], top: Mapping[str, Any]
-) -> tuple[float | None, float | None]:
-    """Sum rows and minor units beyond what was expected in the cells of one pattern."""
-    if top["pattern"] == "shape":
-        return None, None
-    same = [
-        finding
-        for crossing in crossings
-        for finding in crossing["findings"]
-        if (finding["view"], finding["pattern"]) == (top["view"], top["pattern"])
-    ]
-    rows = decimal(sum(finding["excess"] or 0.0 for finding in same), 1)
-    return rows, round(sum(finding["excess_amount"] or 0.0 for finding in same))
 
 
 def _goes_on(last: Mapping[str, Any], rows: int) -> bool:

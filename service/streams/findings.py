@@ -44,10 +44,10 @@ class Finding:
         ``law`` or ``own``.
     severity : float
         Log-likelihood gathered since the onset, in nats.
-    hits : int
-        Rows in the cells since the onset.
-    excess, excess_amount : float
-        Rows, and minor units, beyond what the reference expects.
+    hits, seen : int
+        Rows in the cells, and rows that the view saw, since the onset.
+    spent : float
+        Minor units of the rows in the cells.
     shape : str
         For a shape: ``invented`` or ``shifted``.
     """
@@ -64,8 +64,8 @@ class Finding:
     reference: str
     severity: float
     hits: int = 0
-    excess: float = 0.0
-    excess_amount: float = 0.0
+    seen: int = 0
+    spent: float = 0.0
     shape: str = ""
 
 
@@ -135,8 +135,6 @@ def _cells(
     since = int(state["clock"][view]) - int(state["onset_clock"][part][first]) + 1
     hits = int(state["run"][part][chosen].sum())
     expected = float(share[chosen].sum())
-    excess = max(hits - expected * since, 0.0)
-    spent = float(state["spent"][part][chosen].sum())
     misses = int(state["clock"][view]) - int(state["hit"][part][strongest])
     cusum = float(state["cusum"][part][strongest]) + misses * float(np.log(bank.CUSUM_RETAINED))
     return Finding(
@@ -152,8 +150,8 @@ def _cells(
         reference=label,
         severity=max(cusum, 0.0),
         hits=hits,
-        excess=excess,
-        excess_amount=excess * spent / hits if hits else 0.0,
+        seen=since,
+        spent=float(state["spent"][part][chosen].sum()),
     )
 
 

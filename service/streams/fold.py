@@ -7,9 +7,7 @@ every detector after every row, applies what was taken, handles the events, and 
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
@@ -17,59 +15,17 @@ import numpy.typing as npt
 from service.detection.policy import Policy
 from service.digits.significand import IntArray
 from service.digits.views import CELLS
-from service.streams.findings import Finding, findings
+from service.streams.crossing import PAUSE_ROWS, Crossing, cross, follow, paused
 from service.streams.learning import decide, learn, until_complete
 from service.streams.record import Records
 from service.streams.rows import Rows, columns
 from service.streams.rules import Rules, adopt, refresh
 from service.streams.running import Running, evaluate
-from service.streams.state import REFUTED_BY_BANK, UNDECIDED, Folded, States, restart
+from service.streams.state import Folded, States
 from service.streams.window import tally
 
-PASS_ROWS = 256
+PASS_ROWS = 2 * PAUSE_ROWS
 """Most rows of one stream in one pass, so that a crossing costs little work done twice."""
-
-
-@dataclass(frozen=True)
-class Crossing:
-    """The evidence of a stream reached its threshold.
-
-    Attributes
-    ----------
-    slot : int
-    alarm : bytes
-        Id of the alarm that this crossing raised or that absorbed it.
-    ordinal : int
-        0 for the crossing that raised the alarm, then 1, 2, ... .
-    record : int
-        Row number of the record in the log.
-    rows : int
-        The stream's rows with an amount, this one included.
-    arrived, at : int
-        Times of the row, ms since 1970 UTC.
-    historic : bool
-    evidence : float
-        log10 of the weighted sum of the detectors.
-    threshold : float
-        Transactions per false alarm.
-    severity : float
-        Log-likelihood gathered since onset, over all crossings of the alarm.
-    findings : list of Finding
-        Strongest first.
-    """
-
-    slot: int
-    alarm: bytes
-    ordinal: int
-    record: int
-    rows: int
-    arrived: int
-    at: int
-    historic: bool
-    evidence: float
-    threshold: float
-    severity: float
-    findings: list[Finding] = field(default_factory=list)
 
 
 def fold(
@@ -126,11 +82,11 @@ def fold(
         part = rows.take(taken)
         part, complete = until_complete(state, rules, part)
         path = evaluate(state, rules, part)
-        crossed, consumed = _until_crossed(rules, part, path)
+        crossed, consumed = _until_crossed(state, rules, part, path)
         _apply(folded, rules, part, path, consumed)
         start += np.bincount(part.slot[consumed], minlength=len(state))
         for i in crossed.tolist():
-            crossing = _cross(state, rules, part, path, i, names)
+            crossing = cross(state, rules, part, i, float(path.total[i]), names)
             if crossing is not None:
                 crossings.append(crossing)
         done = complete[np.isin(complete, np.flatnonzero(consumed))]
@@ -157,11 +113,14 @@ def _take(rows: Rows, left: IntArray, start: IntArray, end: IntArray) -> IntArra
 
 
 def _until_crossed(
-    rules: Rules, part: Rows, path: Running
+    state: States, rules: Rules, part: Rows, path: Running
 ) -> tuple[IntArray, npt.NDArray[np.bool_]]:
     """Return the first crossing row of each stream, and which rows come no later than it."""
     first = np.searchsorted(part.slot, part.slot)
-    over = (path.total >= rules.threshold[part.slot]) & rules.watching[part.slot]
+    over = path.total >= rules.threshold[part.slot]
+    if over.any():
+        number = state["rows"][part.slot] + np.arange(len(part.slot)) - first + 1
+        over &= ~paused(state, rules, part.slot, number)
     if not over.any():
         return np.empty(0, np.int64), np.ones(len(part.slot), bool)
     over_before: IntArray = np.cumsum(over) - over
@@ -228,57 +187,6 @@ def _apply(
     starts = np.flatnonzero(np.concatenate([[True], slot[1:] != slot[:-1]]))
     state["circle"][streams] += np.add.reduceat(waves, starts, axis=1).T
     learn(folded, part, rows, streams, starts)
+    follow(state, part, path.hit_row[used], key[used], clock)
     state["rows"] += per_stream
     state["clock"] += clock
-
-
-def _cross(
-    state: States, rules: Rules, part: Rows, path: Running, i: int, names: Sequence[bytes]
-) -> Crossing | None:
-    """Handle a crossing: refute the law while learning, else raise an alarm or add to it."""
-    s = int(part.slot[i])
-    learning = bool(np.any(state["reference"][s] == UNDECIDED))
-    if learning:
-        sums = state["sums"][s].sum(axis=1) * rules.active[s]
-        sums[1] += float((state["shape"][s] * rules.shapes[s]).sum())
-        strongest = int(np.argmax(sums))
-        state["refuted"][s, strongest] |= REFUTED_BY_BANK
-        rules.active[s, strongest] = 0
-        if strongest == 1:
-            rules.shapes[s] = 0
-        restart(state, s, int(part.at[i]))
-        return None
-    found = findings(state[s], rules.tolerance[s], rules.active[s], rules.shapes[s])
-    severity = max((f.severity for f in found), default=0.0)
-    number = int(part.number[i])
-    raised = not bytes(state["alarm"][s])
-    if raised:
-        state["alarm"][s] = _alarm_id(names[s], int(state["incarnation"][s]), number, part.raw[i])
-        state["alarm_crossings"][s] = 0
-        state["alarm_severity"][s] = 0.0
-    ordinal = int(state["alarm_crossings"][s])
-    state["alarm_crossings"][s] = ordinal + 1
-    state["alarm_severity"][s] += severity
-    crossing = Crossing(
-        slot=s,
-        alarm=bytes(state["alarm"][s]).ljust(16, b"\0"),
-        ordinal=ordinal,
-        record=number,
-        rows=int(state["rows"][s]),
-        arrived=int(part.arrived[i]),
-        at=int(part.at[i]),
-        historic=bool(part.historic[i]),
-        evidence=float(np.log10(path.total[i])),
-        threshold=float(rules.threshold[s]),
-        severity=float(state["alarm_severity"][s]),
-        findings=found,
-    )
-    restart(state, s, int(part.at[i]))
-    return crossing
-
-
-def _alarm_id(name: bytes, incarnation: int, number: int, raw: np.void) -> bytes:
-    digest = hashlib.blake2b(digest_size=16, person=b"tallyward alarm")
-    digest.update(name + b"\0" + incarnation.to_bytes(8, "little") + number.to_bytes(8, "little"))
-    digest.update(raw.tobytes())
-    return digest.digest()

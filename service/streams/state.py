@@ -70,7 +70,17 @@ STATE = np.dtype(
         # the open alarm
         ("alarm", "S16"),  # id, binary; empty for none
         ("alarm_crossings", "<u4"),
+        ("alarm_view", "u1"),
+        ("alarm_shape", "u1"),  # 1 if its pattern is a shape
+        ("alarm_live", "u1"),  # 1 once a crossing was not historic
         ("alarm_severity", "<f8"),
+        ("alarm_share", "<f8"),  # expected in its cells
+        ("alarm_cells", "u1", CELLS),
+        ("alarm_hits", "<i8"),  # rows in its cells since its onset, and their amounts
+        ("alarm_spent", "<f8"),
+        ("alarm_seen", "<i8"),  # rows its view saw since the onset
+        ("alarm_hit_at", "<i8"),
+        ("crossed_row", "<i8"),  # row of the last crossing
     ],
     align=True,
 )

@@ -93,7 +93,8 @@ class PlainStream:
             if view == 1:
                 self.shape = (1 + self.shape) * self.ratio[:, cell - 9]
         total = self.total()
-        if total >= self.threshold:
+        often = len(self.crossings) >= 16 and self.rows - self.crossings[-1][0] < 128
+        if total >= self.threshold and not often:
             self.crossings.append((self.rows, total))
             self.restart()
 

@@ -44,8 +44,8 @@ def finding(**changes) -> Finding:
         "reference": "law",
         "severity": 14.1,
         "hits": 6,
-        "excess": 5.8,
-        "excess_amount": 29650.0,
+        "seen": 20,
+        "spent": 29650.0,
     }
     return Finding(**{**values, **changes})
 
@@ -63,6 +63,10 @@ def crossing(ordinal: int = 0, findings=None, **changes) -> Crossing:
         "evidence": 6.0213,
         "threshold": 1e6,
         "severity": 14.12 * (ordinal + 1),
+        "excess": 5.8 * (ordinal + 1),
+        "excess_amount": 29650.0 * (ordinal + 1),
+        "last_hit_at": NINE_14 + 540_000 + ordinal,
+        "live": ordinal == 0,
         "findings": [finding()] if findings is None else findings,
     }
     return Crossing(**{**values, **changes})
@@ -76,13 +80,19 @@ def alarm(*crossings: Crossing, **options) -> dict:
     return json.loads(json.dumps(found, allow_nan=False))
 
 
-def said(found: Finding, exponent: int | None = 2, stream: Stream = STREAM) -> str:
+def said(
+    found: Finding,
+    exponent: int | None = 2,
+    stream: Stream = STREAM,
+    excess: float | None = 5.8,
+    excess_amount: float | None = 29650.0,
+) -> str:
     document = crossing_document(crossing(findings=[found]))["findings"][0]
     text = explanation(
         document,
         stream,
-        excess=found.excess,
-        excess_amount=found.excess_amount,
+        excess=excess,
+        excess_amount=excess_amount,
         exponent=exponent,
     )
     assert "not proof of fraud" in text
@@ -169,14 +179,23 @@ def test_a_cell_in_words() -> None:
             {"pattern": "rare_cells", "cells": ("13", "71", "88", "90"), "reference": "own"},
             "begin with digits that were hardly used before, such as 13, 71 and 88, where",
         ),
-        ({"excess": 0.2}, "under the logarithmic law. The alarm"),
-        ({"excess": 1.2}, "about 1 amount more"),
-        ({"excess": 12345.6, "excess_amount": 1e9}, "12,346 amounts more"),
         ({"onset_at": 0}, "Lately, 31 %"),
     ],
 )
 def test_other_cells_in_words(changes: dict, words: str) -> None:
     assert words in said(finding(**changes))
+
+
+@pytest.mark.parametrize(
+    ("excess", "amount", "words"),
+    [
+        (0.2, 990.0, "under the logarithmic law. The alarm"),
+        (1.2, 5900.0, "about 1 amount more"),
+        (12345.6, 1e9, "12,346 amounts more"),
+    ],
+)
+def test_the_excess_in_words(excess: float, amount: float, words: str) -> None:
+    assert words in said(finding(), excess=excess, excess_amount=amount)
 
 
 def shape(**changes) -> Finding:
@@ -185,8 +204,6 @@ def shape(**changes) -> Finding:
         "shape": "invented",
         "observed": math.nan,
         "cells": ("99", "98", "97", "96"),
-        "excess": 0.0,
-        "excess_amount": 0.0,
     }
     return finding(**{**values, **changes})
 
@@ -228,14 +245,15 @@ def test_percentages_have_two_digits(share: float, text: str) -> None:
 
 
 def test_a_shape_has_no_share_and_no_excess() -> None:
-    found = alarm(crossing(findings=[shape(), finding(weight=0.1)]))
+    nothing = {"excess": math.nan, "excess_amount": math.nan}
+    found = alarm(crossing(findings=[shape(), finding(weight=0.1)], **nothing))
     assert (found["pattern"], found["observed_share"]) == ("shape", None)
     assert found["excess_count"] is found["excess_amount"] is None
     assert [f["pattern"] for f in found["findings"]] == ["shape", "cell"]
 
 
 def test_further_crossings_add_to_one_alarm() -> None:
-    tail = finding(view="tail_pair", cells=("00",), weight=0.4, excess=3.0, excess_amount=700.0)
+    tail = finding(view="tail_pair", cells=("00",), weight=0.4)
     later = finding(cells=("49", "48"), weight=0.6, onset_row=2092, observed=0.4)
     stronger = finding(view="tail_pair", cells=("00", "50"), weight=0.8, onset_row=2112)
     found = alarm(
@@ -250,8 +268,8 @@ def test_further_crossings_add_to_one_alarm() -> None:
         ("lead_pair", ["49"], 2072),  # no stronger later, so the earlier onset stays
         ("lead_digit", ["4"], 2072),
     ]
-    assert found["excess_count"] == 11.6  # the lead pair's, of two crossings
-    assert found["excess_amount"] == 2 * 29650
+    assert found["excess_count"] == 17.4  # as of the last crossing
+    assert found["excess_amount"] == 3 * 29650
     assert "about 12 amounts more than expected so far" in found["explanation"]
     assert found["raised_at"] == "2026-11-30T09:24:00.000Z"
     assert found["last_hit_at"] == "2026-11-30T09:23:00.002Z"
@@ -307,8 +325,8 @@ def test_a_real_cheat_from_first_row_to_case_file() -> None:
     assert found["observed_share"] == pytest.approx(hits.mean(), rel=1e-5)
     assert 980 <= onset <= first <= 1100
     bad = int((amounts[1000:] // 10_000 == 49).sum())
-    assert found["excess_count"] == pytest.approx(bad, rel=0.25)
-    assert found["excess_amount"] == pytest.approx(bad * 495_000, rel=0.25)
+    assert found["excess_count"] == pytest.approx(bad, rel=0.1)
+    assert found["excess_amount"] == pytest.approx(bad * 495_000, rel=0.1)
     assert found["id"] == crossings[0].alarm.hex()
     assert found["raised_at"].startswith("2026-09-22T")
 

@@ -165,7 +165,9 @@ def test_evidence_is_the_weighted_sum_of_what_is_in_force(town) -> None:
         if counts[1]:
             on = np.isfinite(state["shape_scale"][s])
             total += (state["shape"][s] * bank.SHAPE_WEIGHTS)[on].sum()
-        assert got[s] == pytest.approx(math.log10(max(1.0, total)), abs=0.0051)
+        # a resting alarm's values reach the ceiling, where they are held apart from each other
+        expected = min(math.log10(max(1.0, total)), 90)
+        assert min(got[s], 90) == pytest.approx(expected, abs=0.0051)
     assert max(got) > 1
 
 

@@ -243,10 +243,33 @@ def test_history_marks_its_alarms() -> None:
     assert len({c.alarm for c in crossings}) == 1
 
 
+def test_an_alarm_that_crosses_often_rests_but_counts_on() -> None:
+    n = 5000
+    log = records(np.full(n, 4900))
+    folded, crossings = run([log], {1: LAW})
+    assert len(crossings) == 16 + (n - crossings[15].rows) // 128
+    assert crossings[-1].excess == pytest.approx(crossings[-1].rows, rel=0.02)
+    assert crossings[-1].excess_amount == pytest.approx(4900 * crossings[-1].rows, rel=0.02)
+    assert crossings[-1].last_hit_at == crossings[-1].at
+    pieces, same = run([log], {1: LAW}, cuts=[list(range(7, n, 113))], snapshots=True)
+    assert [(c.rows, c.ordinal) for c in same] == [(c.rows, c.ordinal) for c in crossings]
+    assert pieces.state["alarm_hits"][0] == folded.state["alarm_hits"][0] == n
+
+
+def test_the_first_live_crossing_of_an_old_alarm_says_so() -> None:
+    flags = np.repeat([HISTORIC, 0], (20, 20))
+    _, crossings = run([records(np.full(40, 4900), flags=flags)], {1: LAW})
+    assert [c.live for c in crossings].count(True) == 1
+    first = next(c for c in crossings if c.live)
+    assert first.ordinal > 0
+    assert 20 < first.rows <= 25
+
+
 def test_quiet_flows_are_tallied_but_raise_nothing() -> None:
     folded = Folded.new(1)
     log = records(np.full(500, 4900))
     slot = np.zeros(500, np.int64)
     assert fold(folded, log, slot, {1: LAW}, ["chargeback"], [b"x"]) == []
     assert folded.state["rows"][0] == 500
-    assert folded.state["sums"][0].sum() > 1e6
+    assert folded.state["crossed_row"][0] > 0
+    assert not folded.state["alarm_crossings"][0]
