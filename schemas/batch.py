@@ -57,9 +57,7 @@ class Receipt(Answer):
         metadata=said("Rows new and valid, those counted in late and zero included.", minimum=0),
     )
     duplicates = Whole(required=True, metadata=said("Rows seen before.", minimum=0))
-    late = Whole(
-        required=True, metadata=said("Accepted rows older than the window.", minimum=0)
-    )
+    late = Whole(required=True, metadata=said("Accepted rows older than the window.", minimum=0))
     zero = Whole(required=True, metadata=said("Accepted rows with amount 0.", minimum=0))
     unverified = Whole(
         required=True,

@@ -29,9 +29,7 @@ class Amounts(fields.List[Any]):
         )
         super().__init__(one, **kwargs)
 
-    def _deserialize(
-        self, value: Any, attr: str | None, data: Any, **kwargs: Any
-    ) -> list[Any]:
+    def _deserialize(self, value: Any, attr: str | None, data: Any, **kwargs: Any) -> list[Any]:
         if not isinstance(value, list):
             raise self.make_error("invalid")
         if not set(map(type, value)) <= {int, str}:
@@ -47,9 +45,7 @@ class CheckRequest(Asked):
 
     amounts = Amounts(
         required=True,
-        validate=validate.Length(
-            1, MOST_AMOUNTS, error=f"Expected 1 to {MOST_AMOUNTS:,} amounts."
-        ),
+        validate=validate.Length(1, MOST_AMOUNTS, error=f"Expected 1 to {MOST_AMOUNTS:,} amounts."),
         metadata=said(
             "Integers in minor units, or decimal strings in major units; a JSON float is refused. "
             "Zeros are counted in zero and in nothing else.",

@@ -19,9 +19,7 @@ class DigitsQuery(StreamQuery):
 class Cell(Answer):
     """One outcome of a view."""
 
-    cell = fields.String(
-        required=True, metadata=said("The digits, e.g. 1, 49, 05.", example="49")
-    )
+    cell = fields.String(required=True, metadata=said("The digits, e.g. 1, 49, 05.", example="49"))
     count = Whole(required=True, metadata=said("Amounts in the cell.", minimum=0))
     share = Number(
         required=True,

@@ -172,5 +172,3 @@ class Rows(Answer):
     """The last rows kept of a stream, oldest first."""
 
     rows = fields.List(fields.Nested(Row), required=True)
-
-

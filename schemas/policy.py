@@ -104,9 +104,7 @@ class Policy(Answer):
     )
     reference = fields.String(required=True, validate=words.one_of(*REFERENCES))
     tolerance = Number(required=True, allow_none=True, validate=words.between(0, 1))
-    transactions_per_false_alarm = Number(
-        required=True, validate=words.between(100, 1_000_000_000)
-    )
+    transactions_per_false_alarm = Number(required=True, validate=words.between(100, 1_000_000_000))
     baseline_size = Whole(required=True, validate=words.between(200, 100_000))
     baseline_days = Number(required=True, validate=words.between(0, 366))
     baseline_confidence = Number(required=True, validate=words.between(0.9, 0.999999))

@@ -52,9 +52,7 @@ def one_of(*words: str) -> validate.OneOf:
 
 def between(low: float, high: float) -> validate.Range:
     """Return a validator for an inclusive range that names both ends."""
-    return validate.Range(
-        min=low, max=high, error=f"Expected a number from {low:,} to {high:,}."
-    )
+    return validate.Range(min=low, max=high, error=f"Expected a number from {low:,} to {high:,}.")
 
 
 def merchant(**kwargs: Any) -> fields.String:
@@ -63,9 +61,9 @@ def merchant(**kwargs: Any) -> fields.String:
     return fields.String(validate=_MERCHANT, metadata=metadata, **kwargs)
 
 
-def flow(description: str = "What kind of money: sale, refund, payout, ...", **kwargs: Any) -> (
-    fields.String
-):
+def flow(
+    description: str = "What kind of money: sale, refund, payout, ...", **kwargs: Any
+) -> fields.String:
     """A flow of money."""
     return fields.String(validate=_FLOW, metadata=said(description, example="sale"), **kwargs)
 

@@ -114,10 +114,13 @@ class Settings:
         "bytes",
     )
     max_rows: int = _number(
-        50_000, 1, 1_000_000, "Most transactions in one request; more are refused with 413."
+        10_000, 1, 50_000, "Most transactions in one request; more are refused with 413."
     )
     max_streams: int = _number(
-        10_000, 1, 1_000_000, "Most streams that one request may touch; more are refused with 413."
+        10_000, 1, 50_000, "Most streams that one request may touch; more are refused with 413."
+    )
+    max_full: int = _number(
+        500, 1, 10_000, "Most streams of one request with reply=full; more are refused with 413."
     )
     horizon_days: int = _number(
         8, 1, 90, "How long a row's id or a request's Idempotency-Key is remembered.", "days"

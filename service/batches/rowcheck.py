@@ -65,8 +65,13 @@ def findings(row: Any, *, now: int, default_currency: str | None) -> list[Findin
     at = clean.get("at")
     if at is not None and at > now + AHEAD_MS:
         minutes = AHEAD_MS // 60_000
+        # later rows of a source pass its high-water mark, and then this one can never come
         found.append(
-            Finding("at", f"Expected a time at most {minutes} minutes ahead.", retryable=True)
+            Finding(
+                "at",
+                f"Expected a time at most {minutes} minutes ahead.",
+                retryable="source" not in row,
+            )
         )
     return found
 

@@ -54,9 +54,7 @@ def cells_hit(amounts: IntArray) -> ViewCells:
     return ViewCells(
         lead_digit=np.where(amounts > 0, lead - 1, -1),
         lead_pair=np.where(pair >= 0, pair - 10 + LEAD_PAIR.start, -1),
-        tail_pair=np.where(
-            amounts >= TAIL_PAIR_FROM, trailing(amounts, 2) + TAIL_PAIR.start, -1
-        ),
+        tail_pair=np.where(amounts >= TAIL_PAIR_FROM, trailing(amounts, 2) + TAIL_PAIR.start, -1),
     )
 
 

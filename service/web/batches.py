@@ -84,6 +84,7 @@ def post_batch() -> Response:
     here, arrived = parts(), now()
     tallies, tenant = here.tallies, principal().tenant
     body = expand(read_body(), request.headers.get("Content-Encoding"), here.limits)
+    digest = "" if idempotency_key is None else hashlib.sha256(body).hexdigest()
     batch = read_batch(
         body,
         ndjson=ndjson,
@@ -91,12 +92,16 @@ def post_batch() -> Response:
         defaults=here.defaults,
         now=arrived,
         ident_key=tallies.ident_key(),
-        idempotency_key=idempotency_key,
+        # with the body's digest: a key used again after its claim was forgotten names other rows
+        idempotency_key=None if idempotency_key is None else f"{idempotency_key}/{digest}",
         skip_invalid=query["invalid"] == "skip",
     )
+    if query["reply"] == "full" and len(batch.streams) > here.settings.max_full:
+        most = here.settings.max_full
+        raise Problem(413, f"reply=full takes at most {most:,} streams a batch.")
     if idempotency_key is not None:
         try:
-            tallies.claim(tenant, idempotency_key, hashlib.sha256(body).hexdigest())
+            tallies.claim(tenant, idempotency_key, digest)
         except Conflict as conflict:
             fault = {"header": "Idempotency-Key", "detail": sentence(conflict.args[0])}
             raise invalid([fault]) from conflict

@@ -72,6 +72,4 @@ def _why(text: str, decimals: int) -> str:
 
 
 def _refused(errors: dict[int, str]) -> Problem:
-    return invalid(
-        [{"pointer": f"/amounts/{i}", "detail": errors[i]} for i in sorted(errors)]
-    )
+    return invalid([{"pointer": f"/amounts/{i}", "detail": errors[i]} for i in sorted(errors)])

@@ -30,15 +30,12 @@ class Wanted(NamedTuple):
 
 def wants(wanted: Wanted, alarm: Document) -> bool:
     """Return whether an alarm passes; ``view`` and ``cell`` must meet in one finding."""
-    return (
-        all(
-            getattr(wanted, name) in (None, alarm[name])
-            for name in ("merchant", "flow", "currency", "state")
-        )
-        and (
-            (wanted.view is None and wanted.cell is None)
-            or any(_holds(wanted, finding) for finding in (alarm, *alarm["findings"]))
-        )
+    return all(
+        getattr(wanted, name) in (None, alarm[name])
+        for name in ("merchant", "flow", "currency", "state")
+    ) and (
+        (wanted.view is None and wanted.cell is None)
+        or any(_holds(wanted, finding) for finding in (alarm, *alarm["findings"]))
     )
 
 
@@ -48,9 +45,9 @@ def _holds(wanted: Wanted, finding: dict[str, Any]) -> bool:
     )
 
 
-def read(feed: Feed, wanted: Wanted, after: str | None, limit: int) -> tuple[
-    list[Document], str | None
-]:
+def read(
+    feed: Feed, wanted: Wanted, after: str | None, limit: int
+) -> tuple[list[Document], str | None]:
     """Return wanted alarms, oldest first, and the position up to which the feed was read.
 
     Parameters

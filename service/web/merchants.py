@@ -110,9 +110,7 @@ def put_merchant(assignment: dict[str, str], merchant: str) -> Response:
 def get_digits(query: dict[str, Any], merchant: str) -> Response:
     """Show one view of a stream, cell by cell, beside what was expected."""
     stream = _stream(merchant, query)
-    found = tallies().digits(
-        principal().tenant, stream, query["view"], query["span"], now=now()
-    )
+    found = tallies().digits(principal().tenant, stream, query["view"], query["span"], now=now())
     wanted = request.accept_mimetypes.best_match(
         ["application/json", "text/csv"], default="application/json"
     )
@@ -134,9 +132,7 @@ def get_rows(query: dict[str, Any], merchant: str) -> Response:
 def _stream(merchant: str, query: dict[str, Any]) -> Stream:
     if MERCHANT.fullmatch(merchant) is None:
         raise Problem(404, "There is no merchant of this name.")
-    return tallies().stream_of(
-        principal().tenant, merchant, query["flow"], query.get("currency")
-    )
+    return tallies().stream_of(principal().tenant, merchant, query["flow"], query.get("currency"))
 
 
 COLUMNS = ("cell", "count", "share", "expected", "bound", "low", "high", "z")

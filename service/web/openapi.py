@@ -148,5 +148,3 @@ def _finish(operation: dict[str, Any], marked: dict[str, Any]) -> None:
     roles = [role for use in operation.get("security", []) for role in use[SCHEME]]
     needs = f"Needs a key with the role `{roles[0]}`." if roles else "Needs no key."
     operation["description"] = "\n\n".join(filter(None, [operation.get("description"), needs]))
-
-

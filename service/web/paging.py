@@ -59,9 +59,7 @@ class _Place:
 
     def __eq__(self, other: object) -> bool:
         return (
-            isinstance(other, _Place)
-            and self.value == other.value
-            and self.stream == other.stream
+            isinstance(other, _Place) and self.value == other.value and self.stream == other.stream
         )
 
     def __lt__(self, other: _Place) -> bool:

@@ -71,9 +71,7 @@ class Resource(flask_smorest.Blueprint):  # type: ignore[misc]
         """Serve one method of one path."""
 
         def decorate(view: View) -> View:
-            self.add_url_rule(
-                rule, view.__name__, view, methods=[method], parameters=parameters
-            )
+            self.add_url_rule(rule, view.__name__, view, methods=[method], parameters=parameters)
             named = self._docs[view.__name__][method.lower()].setdefault("manual_doc", {})
             named["operationId"] = view.__name__
             return view

@@ -193,6 +193,12 @@ def test_a_time_ahead_may_be_sent_again(read):
     assert not rejections[0].retryable
 
 
+def test_a_time_ahead_in_a_source_cannot_come_later(read):
+    row = ROW | {"at": "2026-11-30T12:06:00Z", "source": "till-1", "offset": 7}
+    _, _, rejections = refused(read, [row])
+    assert not rejections[0].retryable
+
+
 # --- identity
 
 

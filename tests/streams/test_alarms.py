@@ -270,7 +270,7 @@ def test_further_crossings_add_to_one_alarm() -> None:
     ]
     assert found["excess_count"] == 17.4  # as of the last crossing
     assert found["excess_amount"] == 3 * 29650
-    assert "about 12 amounts more than expected so far" in found["explanation"]
+    assert "about 17 amounts more than expected so far" in found["explanation"]
     assert found["raised_at"] == "2026-11-30T09:24:00.000Z"
     assert found["last_hit_at"] == "2026-11-30T09:23:00.002Z"
 
