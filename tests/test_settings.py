@@ -53,6 +53,7 @@ def test_every_variable_is_read():
         "MAX_EXPANDED": "4096",
         "MAX_ROWS": "7",
         "MAX_STREAMS": "6",
+        "MAX_FULL": "5",
         "HORIZON_DAYS": "9",
         "MAX_WAIT": "0",
         "STORE_TIMEOUT": "0.5",
