@@ -6,7 +6,7 @@ import hashlib
 import logging
 import time
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from typing import Any
 
@@ -17,7 +17,7 @@ from redis.exceptions import RedisError
 from service.batches.batch import Batch
 from service.settings import Settings
 from service.store.catalogue import Catalogue, Policies
-from service.store.charter import charter
+from service.store.charter import Charter, charter
 from service.store.connection import StoreFacts, connect, inspect
 from service.store.directory import Directory
 from service.store.errors import Conflict, StoreError, Unavailable, Unknown
@@ -79,7 +79,9 @@ class Tallies:
     Parameters
     ----------
     settings : Settings
-        ``redis_url`` must name a running store.
+        ``redis_url`` names the store. It may be away: a worker that is replaced during an outage
+        has to come up, or the whole service would end. Until it answers, everything asked of it
+        is Unavailable.
 
     Raises
     ------
@@ -92,12 +94,11 @@ class Tallies:
         self.client: redis.Redis = connect(settings.redis_url, settings.store_timeout)
         self.horizon_s = settings.horizon_days * 86_400
         self.sweep_seconds = settings.sweep_seconds
-        with _answering():
-            fixed = charter(self.client, settings.partitions)
-        self._ident_key = fixed.ident_key
+        self._partitions = settings.partitions
+        self._charter: Charter | None = None
         self.catalogue = Catalogue(self.client)
         self.feed = Feed(self.client)
-        self.logs = Logs(self.client, fixed.partitions, self.horizon_s)
+        self.logs = Logs(self.client, settings.partitions, self.horizon_s)
         self.judge = Judge(self.client, self.logs, self.feed, self.catalogue)
         self.directory = Directory(self.client, self.logs, self.judge, self.catalogue)
         self.sweep = Sweep(
@@ -108,10 +109,28 @@ class Tallies:
             self.directory,
             self.sweep_seconds,
             late_ms=max(LATE_MS, int(3000 * settings.store_timeout)),
+            usable=self._fixed,
         )
         self._facts: tuple[float, StoreFacts] | None = None
         self._categories: dict[tuple[str, str], str] = {}
         self._categories_until = 0.0
+        with suppress(Unavailable), self._answering():
+            pass
+
+    def _fixed(self) -> Charter:
+        """Return what is fixed in the store, once it has answered."""
+        if self._charter is None:
+            self._charter = charter(self.client, self._partitions)
+        return self._charter
+
+    @contextmanager
+    def _answering(self) -> Iterator[None]:
+        """Use the store, if it is ours; turn what the client raises into Unavailable."""
+        try:
+            self._fixed()
+            yield
+        except (RedisError, OSError) as error:
+            raise Unavailable("the store does not answer; send the same again later") from error
 
     def facts(self, fresh_seconds: float = 5.0) -> StoreFacts:
         """Return what the store says about itself, at most some seconds old."""
@@ -123,17 +142,21 @@ class Tallies:
     @property
     def durability(self) -> str:
         """What a 200 means: ``none``, ``everysec``, ``always``, or ``unknown``."""
-        with _answering():
+        with self._answering():
             return self.facts().durability
 
     def ident_key(self) -> tuple[int, int]:
-        """Return the random key of identities (two 64-bit integers), kept in the store."""
-        return self._ident_key
+        """Return the random key of identities (two 64-bit integers), kept in the store.
+
+        Asked of the store once; raises Unavailable until then.
+        """
+        with self._answering():
+            return self._fixed().ident_key
 
     def claim(self, tenant: str, idempotency_key: str, body_digest: str) -> None:
         """Remember the body of an Idempotency-Key; raise Conflict when it had another body."""
         name = hashlib.blake2b(idempotency_key.encode(), digest_size=16).hexdigest()
-        with _answering():
+        with self._answering():
             before: Any = self.client.set(
                 Tenant(tenant).claim(name),
                 body_digest,
@@ -162,7 +185,7 @@ class Tallies:
         """
         if not batch.streams:
             return Posted(0, 0, 0, 0, 0, [], [])
-        with _answering():
+        with self._answering():
             policies = self.catalogue.of(tenant)
             self._remember_categories(tenant, batch.categories)
             versions = policies.versions_for([s.merchant for s in batch.streams])
@@ -227,7 +250,7 @@ class Tallies:
 
     def stream_of(self, tenant: str, merchant: str, flow: str, currency: str | None) -> Stream:
         """Return the named stream, or the merchant's busiest one of a flow; raises Unknown."""
-        with _answering():
+        with self._answering():
             known = self.directory.streams(tenant, merchant)
             if not known:
                 raise Unknown(f"there is no merchant {merchant!r}")
@@ -272,20 +295,20 @@ class Tallies:
 
     def detail(self, tenant: str, stream: Stream, *, measures: bool, now: int) -> Document:
         """Return what GET /v1/merchants/{merchant} says."""
-        with _answering():
+        with self._answering():
             judged = self._one(tenant, stream)
             return self._detail(tenant, stream, judged.folded, measures, now)
 
     def digits(self, tenant: str, stream: Stream, view: str, span: str, *, now: int) -> Document:
         """Return what GET /v1/merchants/{merchant}/digits says."""
-        with _answering():
+        with self._answering():
             judged = self._one(tenant, stream)
             return digits(judged.folded, self.catalogue.of(tenant).by_version, view, span, now)
 
     def rows(self, tenant: str, stream: Stream) -> list[Document]:
         """Return the last rows kept, oldest first: id, amount, currency, at."""
         partition = self.logs.partition(tenant, stream.merchant)
-        with _answering():
+        with self._answering():
             kept, ids = self.logs.ids(partition, path(tenant, stream))
         try:
             records = kept_records(kept or b"")
@@ -300,7 +323,7 @@ class Tallies:
 
     def merchants(self, tenant: str, *, now: int | None = None) -> list[Document]:
         """Return the entries of all streams of a tenant, with ``category`` and ``updated``."""
-        with _answering():
+        with self._answering():
             return self.directory.entries(tenant, now=now or time.time_ns() // 1_000_000)
 
     def alarms(self, tenant: str, *, after: str | None, limit: int) -> tuple[list[Document], str]:
@@ -308,13 +331,13 @@ class Tallies:
 
         Raises ValueError for a cursor that was never given out.
         """
-        with _answering():
+        with self._answering():
             stored, position = self.feed.after(tenant, after, limit)
             return self._documents(tenant, stored), position
 
     def alarm(self, tenant: str, alarm_id: str) -> Document:
         """Return one alarm; raises Unknown."""
-        with _answering():
+        with self._answering():
             return self._documents(tenant, [self.feed.one(tenant, alarm_id)])[0]
 
     def _documents(self, tenant: str, stored: Sequence[Stored]) -> list[Document]:
@@ -328,7 +351,7 @@ class Tallies:
 
     def policies(self, tenant: str) -> dict[str, Document]:
         """Return all policies by name; ``standard`` always exists."""
-        with _answering():
+        with self._answering():
             known: Policies = self.catalogue.of(tenant, fresh=True)
         return {
             name: known.by_version[version].document()
@@ -337,14 +360,14 @@ class Tallies:
 
     def put_policy(self, tenant: str, name: str, settings: Document) -> Document:
         """Store a policy (already checked by its schema) as a new version and return it."""
-        with _answering():
+        with self._answering():
             return self.catalogue.put(tenant, name, settings).document()
 
     def assign(
         self, tenant: str, merchant: str, *, policy: str | None, category: str | None
     ) -> Document:
         """Assign a merchant's policy or category; raises Unknown for a policy that is not there."""
-        with _answering():
+        with self._answering():
             if policy is not None:
                 self.catalogue.assign(tenant, merchant, policy)
             if category is not None:
@@ -366,8 +389,12 @@ class Tallies:
         began = time.perf_counter()
         try:
             facts = self.facts(0)
+            self._fixed()
         except (RedisError, OSError) as error:
             yield _check("store", "fail", f"does not answer ({type(error).__name__})")
+            return
+        except StoreError as error:
+            yield _check("store", "fail", str(error))
             return
         took = (time.perf_counter() - began) * 1000
         yield _check("store", "pass", f"{facts.server} {facts.version} answers in {took:.1f} ms")
@@ -425,15 +452,6 @@ class Tallies:
 
 def _check(name: str, status: str, detail: str) -> Document:
     return {"name": name, "status": status, "detail": detail}
-
-
-@contextmanager
-def _answering() -> Iterator[None]:
-    """Turn what the client raises into Unavailable."""
-    try:
-        yield
-    except (RedisError, OSError) as error:
-        raise Unavailable("the store does not answer; send the same again later") from error
 
 
 def _posted(

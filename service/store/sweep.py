@@ -11,6 +11,7 @@ import os
 import random
 import threading
 import time
+from collections.abc import Callable
 from typing import Any
 
 import msgspec
@@ -43,6 +44,8 @@ class Sweep:
     late_ms : int
         Age at which a call is judged here and forgotten. Must be longer than a worker waits for
         an answer and then takes to send the call again.
+    usable : callable
+        Called before each round; raises while the store cannot be used.
     """
 
     def __init__(
@@ -54,6 +57,7 @@ class Sweep:
         directory: Directory,
         seconds: float,
         late_ms: int = LATE_MS,
+        usable: Callable[[], object] = lambda: None,
     ) -> None:
         self.client = client
         self.logs = logs
@@ -62,6 +66,7 @@ class Sweep:
         self.directory = directory
         self.seconds = seconds
         self.late_ms = late_ms
+        self.usable = usable
         self.last_round = time.monotonic()
         self._name = os.urandom(8).hex()
         self._stop = threading.Event()
@@ -86,6 +91,7 @@ class Sweep:
 
     def round(self) -> None:
         """Sweep every partition whose lease is free."""
+        self.usable()
         self.logs.flush_judged()
         for partition in self.logs.partitions:
             try:
