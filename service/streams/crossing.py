@@ -77,9 +77,7 @@ class Crossing:
     findings: list[Finding]
 
 
-def paused(
-    state: States, rules: Rules, slot: IntArray, number: IntArray
-) -> npt.NDArray[np.bool_]:
+def paused(state: States, rules: Rules, slot: IntArray, number: IntArray) -> npt.NDArray[np.bool_]:
     """Return which rows, by stream and the stream's row number, may not cross.
 
     A stream rests after a crossing if its open alarm has crossed often, or if it raises none.

@@ -20,7 +20,7 @@ from service.streams.learning import decide, learn, until_complete
 from service.streams.record import Records
 from service.streams.rows import Rows, columns
 from service.streams.rules import Rules, adopt, refresh
-from service.streams.running import Running, evaluate
+from service.streams.running import Cells, Running, Shapes, evaluate
 from service.streams.state import Folded, States
 from service.streams.window import tally
 
@@ -83,7 +83,7 @@ def fold(
         part, complete = until_complete(state, rules, part)
         path = evaluate(state, rules, part)
         crossed, consumed = _until_crossed(state, rules, part, path)
-        _apply(folded, rules, part, path, consumed)
+        _apply(folded, part, path, consumed)
         start += np.bincount(part.slot[consumed], minlength=len(state))
         for i in crossed.tolist():
             crossing = cross(state, rules, part, i, float(path.total[i]), names)
@@ -119,8 +119,7 @@ def _until_crossed(
     first = np.searchsorted(part.slot, part.slot)
     over = path.total >= rules.threshold[part.slot]
     if over.any():
-        number = state["rows"][part.slot] + np.arange(len(part.slot)) - first + 1
-        over &= ~paused(state, rules, part.slot, number)
+        over &= ~paused(state, rules, part.slot, _row_numbers(state, part))
     if not over.any():
         return np.empty(0, np.int64), np.ones(len(part.slot), bool)
     over_before: IntArray = np.cumsum(over) - over
@@ -128,22 +127,47 @@ def _until_crossed(
     return np.flatnonzero(over & consumed), consumed
 
 
-def _apply(
-    folded: Folded,
-    rules: Rules,
-    part: Rows,
-    path: Running,
-    consumed: npt.NDArray[np.bool_],
-) -> None:
+def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.bool_]) -> None:
     """Write what the consumed rows did to the states."""
     state = folded.state
+    n = len(state)
     rows = np.flatnonzero(consumed)
     slot = part.slot[rows]
-    last = rows[np.concatenate([slot[1:] != slot[:-1], [True]])]
+    starts = np.flatnonzero(np.concatenate([[True], slot[1:] != slot[:-1]]))
+    last = rows[np.concatenate([starts[1:] - 1, [len(rows) - 1]])]
     streams = part.slot[last]
+    number = _row_numbers(state, part)
+    state["sums"][streams] = path.sums[:, last].T.reshape(-1, 3, 3)
+    _apply_shapes(state, part, path.shapes, number, streams, last)
+    used = consumed[path.cells.row]
+    _apply_cells(state, part, path.cells, number, used)
+    clock = np.stack(
+        [np.bincount(slot[part.cell[v, rows] >= 0], minlength=n) for v in range(3)], axis=1
+    )
+    state["circle"][streams] += np.add.reduceat(part.wave[:, rows], starts, axis=1).T
+    learn(folded, part, rows, streams, starts)
+    follow(state, part, path.cells.row[used], path.cells.key[used], clock)
+    state["rows"] += np.bincount(slot, minlength=n)
+    state["clock"] += clock
+
+
+def _row_numbers(state: States, part: Rows) -> IntArray:
+    """Return each row's number among its stream's rows with an amount, from 1."""
     rank = np.arange(len(part.slot)) - np.searchsorted(part.slot, part.slot)
-    number = state["rows"][part.slot] + rank + 1
-    rest = path.shape_rest[:, last].T
+    return np.asarray(state["rows"][part.slot] + rank + 1)
+
+
+def _apply_shapes(
+    state: States,
+    part: Rows,
+    shapes: Shapes,
+    number: IntArray,
+    streams: IntArray,
+    last: IntArray,
+) -> None:
+    state["shape"][streams] = shapes.value[:, last].T
+    state["shape_cusum"][streams] = shapes.cusum[:, last].T
+    rest = shapes.rest[:, last].T
     rested = rest >= 0
     state["shape_onset"][streams] = np.where(
         rested, number[rest] + 1, state["shape_onset"][streams]
@@ -151,42 +175,26 @@ def _apply(
     state["shape_onset_at"][streams] = np.where(
         rested, part.at[rest], state["shape_onset_at"][streams]
     )
-    state["sums"][streams] = path.sums[:, last].T.reshape(-1, 3, 3)
-    state["shape"][streams] = path.shape[:, last].T
-    state["shape_cusum"][streams] = path.shape_cusum[:, last].T
 
-    used = consumed[path.hit_row]
-    key = path.hit_key
-    stays = np.concatenate([key[1:] == key[:-1], [False]]) if len(key) else np.empty(0, bool)
-    follows = np.concatenate([used[1:], [False]]) if len(key) else np.empty(0, bool)
-    final = np.flatnonzero(used & ~(stays & follows))
+
+def _apply_cells(
+    state: States, part: Rows, cells: Cells, number: IntArray, used: npt.NDArray[np.bool_]
+) -> None:
+    key = cells.key
+    goes_on = np.concatenate([(key[1:] == key[:-1]) & used[1:], [False]])
+    final = np.flatnonzero(used & ~goes_on)
     at = key[final] // CELLS, key[final] % CELLS
-    begin = path.run_start[final]
-    carried = path.run_carried[final]
-    amount = part.amount[path.hit_row]
+    begin, carried = cells.start[final], cells.carried[final]
+    first = cells.row[begin]
+    amount = part.amount[cells.row]
     so_far = np.cumsum(amount)  # may wrap around; differences within a pass do not
-    state["value"][at] = path.value[:, final].T
-    state["hit"][at] = path.clock[final]
-    state["cusum"][at] = path.cusum[final]
+    spent = so_far[final] - so_far[begin] + amount[begin]
+    state["value"][at] = cells.value[:, final].T
+    state["hit"][at] = cells.clock[final]
+    state["cusum"][at] = cells.cusum[final]
     state["run"][at] = np.where(carried, state["run"][at], 0) + final - begin + 1
-    state["spent"][at] = (
-        np.where(carried, state["spent"][at], 0) + so_far[final] - so_far[begin] + amount[begin]
-    )
-    state["onset"][at] = np.where(carried, state["onset"][at], number[path.hit_row[begin]])
-    state["onset_clock"][at] = np.where(carried, state["onset_clock"][at], path.clock[begin])
-    state["onset_at"][at] = np.where(carried, state["onset_at"][at], part.at[path.hit_row[begin]])
-
-    counts = state["count"]
-    np.add.at(counts, (key[used] // CELLS, key[used] % CELLS), 1)
-    n = len(state)
-    per_stream = np.bincount(slot, minlength=n)
-    clock = np.stack(
-        [np.bincount(slot[part.cell[v, rows] >= 0], minlength=n) for v in range(3)], axis=1
-    )
-    waves = part.wave[:, rows]
-    starts = np.flatnonzero(np.concatenate([[True], slot[1:] != slot[:-1]]))
-    state["circle"][streams] += np.add.reduceat(waves, starts, axis=1).T
-    learn(folded, part, rows, streams, starts)
-    follow(state, part, path.hit_row[used], key[used], clock)
-    state["rows"] += per_stream
-    state["clock"] += clock
+    state["spent"][at] = np.where(carried, state["spent"][at], 0) + spent
+    state["onset"][at] = np.where(carried, state["onset"][at], number[first])
+    state["onset_clock"][at] = np.where(carried, state["onset_clock"][at], cells.clock[begin])
+    state["onset_at"][at] = np.where(carried, state["onset_at"][at], part.at[first])
+    np.add.at(state["count"], (key[used] // CELLS, key[used] % CELLS), 1)

@@ -10,7 +10,7 @@ import numpy.typing as npt
 from service.detection import bank
 from service.detection.paths import affine_path, cusum_path
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import CELLS, LEAD_PAIR
+from service.digits.views import CELLS, LEAD_PAIR, VIEW_OF_CELL
 from service.streams.rows import Rows
 from service.streams.rules import Rules, bounds
 from service.streams.state import BY_OWN, States
@@ -20,121 +20,191 @@ _KEEP = bank.RETAINED[:, None]
 _SHARE = bank.EPSILON_SHARES[:, None]
 
 
-@dataclass
-class Running:
-    """Every detector after every row of a pass."""
+@dataclass(frozen=True)
+class Cells:
+    """Hits of cells, sorted by (stream, cell, row); h = all hits of a pass.
 
-    total: FloatArray  # (n,) weighted sum of what counts
-    sums: FloatArray  # (9, n)
-    shape: FloatArray  # (14, n)
-    shape_cusum: FloatArray  # (14, n)
-    shape_rest: IntArray  # (14, n) index of the last row at which the CUSUM was zero, or -1
-    hit_row: IntArray  # (h,) index of the row of each hit, hits sorted by (slot, cell, row)
-    hit_key: IntArray  # (h,) slot * 199 + cell
-    value: FloatArray  # (3, h) right after the hit
-    clock: IntArray  # (h,) the view's clock at the hit
-    cusum: FloatArray  # (h,)
-    run_start: IntArray  # (h,) index of the hit that began the run
-    run_carried: npt.NDArray[np.bool_]  # (h,) the run began before this pass
+    Attributes
+    ----------
+    row : int64 array (h,)
+        Index of the row.
+    key : int64 array (h,)
+        ``slot * 199 + cell``.
+    value : float64 array (3, h)
+        Of the cell's detectors right after the hit.
+    weight : float64 array (3, h)
+        What the hit adds to the weighted sum of its view.
+    clock : int64 array (h,)
+        The view's clock at the hit.
+    cusum : float64 array (h,)
+    start : int64 array (h,)
+        Index of the hit that began the run.
+    carried : bool array (h,)
+        Whether the run began before this pass.
+    """
+
+    row: IntArray
+    key: IntArray
+    value: FloatArray
+    weight: FloatArray
+    clock: IntArray
+    cusum: FloatArray
+    start: IntArray
+    carried: npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Shapes:
+    """Shape detectors after every row.
+
+    Attributes
+    ----------
+    value, cusum : float64 arrays (14, n)
+    rest : int64 array (14, n)
+        Index of the last row of the stream at which the CUSUM was zero, -1 for none in this pass.
+    """
+
+    value: FloatArray
+    cusum: FloatArray
+    rest: IntArray
+
+
+@dataclass(frozen=True)
+class Running:
+    """Every detector after every row of a pass.
+
+    Attributes
+    ----------
+    total : float64 array (n,)
+        Weighted sum of the detectors that count.
+    sums : float64 array (9, n)
+        Weighted sums of the cells, by view and contamination.
+    cells : Cells
+    shapes : Shapes
+    """
+
+    total: FloatArray
+    sums: FloatArray
+    cells: Cells
+    shapes: Shapes
 
 
 def evaluate(state: States, rules: Rules, part: Rows) -> Running:
-    """Compute all detectors after every row of a pass."""
+    """Compute all detectors after every row of a pass.
+
+    Parameters
+    ----------
+    state : array of ``STATE``
+        As of the row before each stream's first one here.
+    rules : Rules
+    part : Rows
+        n > 0 rows, sorted by stream.
+    """
     n = len(part.slot)
-    slot = part.slot
-    first_row = np.concatenate([[True], slot[1:] != slot[:-1]])
-    begin = np.maximum.accumulate(np.where(first_row, np.arange(n), 0))
+    first = np.concatenate([[True], part.slot[1:] != part.slot[:-1]])
+    begin = np.maximum.accumulate(np.where(first, np.arange(n), 0))
     longest = int((np.arange(n) - begin).max()) + 1
+    cells = _cells(state, rules, part, begin)
+    ratio = _shape_ratios(state, rules, part)
+    values = _values(state, part, first, longest, cells, ratio)
+    sums, shape = values[:9], values[9:]
+    by_view = sums.reshape(3, 3, n).sum(axis=1)
+    total = (by_view * rules.active[part.slot].T).sum(axis=0)
+    total += (shape * rules.shapes[part.slot].T).sum(axis=0)
+    cusum = _shape_cusum(state, part, first, longest, ratio)
+    rest = np.maximum.accumulate(np.where(cusum <= 0, np.arange(n), -1), axis=1)
+    shapes = Shapes(shape, cusum, np.where(rest >= begin, rest, -1))
+    return Running(total, sums, cells, shapes)
+
+
+def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
+    """Run the cells' detectors: one map per hit, since misses act in closed form."""
     seen = part.cell >= 0
     clock: IntArray = np.cumsum(seen, axis=1)
-    clock += state["clock"][slot].T - (clock - seen)[:, begin]
-
-    # cells: one map per hit, hits sorted by (stream, cell), rows in order
+    clock += state["clock"][part.slot].T - (clock - seen)[:, begin]
     view, row = np.nonzero(seen)
     cell = part.cell[view, row]
-    key = slot[row] * CELLS + cell
+    key = part.slot[row] * CELLS + cell
     order = np.argsort(key, kind="stable")
     view, row, cell, key = view[order], row[order], cell[order], key[order]
-    hits = np.arange(len(key))
-    first_hit = np.concatenate([[True], key[1:] != key[:-1]]) if len(key) else np.empty(0, bool)
-    group = np.maximum.accumulate(np.where(first_hit, hits, 0))
     at_hit = clock[view, row]
-    stored = slot[row], cell
-    previous = np.where(first_hit, state["hit"][stored], np.roll(at_hit, 1))
+    hits = np.arange(len(key))
+    first = np.concatenate([[True], key[1:] != key[:-1]])
+    longest = int((hits - np.maximum.accumulate(np.where(first, hits, 0))).max()) + 1
+    stored = part.slot[row], cell
+    previous = np.where(first, state["hit"][stored], np.roll(at_hit, 1))
     misses = (at_hit - previous - 1).astype(np.float64)
     u = bounds(state, rules, *stored)
     gain = _KEEP + _EPS / u
     kept = _KEEP**misses
     a = kept * gain
     b = gain * (1 - kept * _KEEP) / _EPS
-    b[:, first_hit] += (a * state["value"][stored].T)[:, first_hit]
-    a[:, first_hit] = 0
-    longest_hit = int((hits - group).max()) + 1 if len(key) else 0
-    value = affine_path(a, b, longest_hit)
+    b[:, first] += (a * state["value"][stored].T)[:, first]
+    a[:, first] = 0
+    value = affine_path(a, b, longest)
 
-    # onset and severity: the cell's CUSUM, touched only at hits
+    # the CUSUM, from which onset and severity are read, is touched at hits only, too
     up = np.log(bank.CUSUM_RETAINED + bank.CUSUM_GAIN / u)
     decay = misses * np.log(bank.CUSUM_RETAINED)
     step = decay + up
     level = up.copy()
-    level[first_hit] = np.maximum(state["cusum"][stored] + step, up)[first_hit]
-    step[first_hit] = -np.inf
-    cusum = cusum_path(step, level, longest_hit)
-    before = np.where(first_hit, state["cusum"][stored], np.roll(cusum, 1))
-    begins = before + decay <= 0
-    run_start = np.maximum.accumulate(np.where(begins | first_hit, hits, 0))
-
-    # sums of a view's cells, and shapes: one map per row
-    channels = np.ones((9 + bank.SHAPES, n))
-    offsets = np.zeros((9 + bank.SHAPES, n))
-    r9 = np.tile(bank.RETAINED, 3)[:, None]
-    entering = (bank.VIEW_WEIGHTS[:, None] * bank.EPSILON_SHARES).reshape(9, 1) * r9
-    seen9 = np.repeat(seen, 3, axis=0)
-    channels[:9] = np.where(seen9, r9, 1)
-    offsets[:9] = np.where(seen9, entering, 0)
-    bonus = bank.CELL_WEIGHTS[cell] * _SHARE * (value / gain) * (_EPS / u)
-    for e in range(3):
-        offsets[view * 3 + e, row] += bonus[e]
-    ratio = _shape_ratios(state, rules, part)
-    channels[9:] = ratio
-    offsets[9:] = np.where(seen[1], ratio, 0)
-    log_ratio = np.log(ratio)
-    at_start = np.concatenate([state["sums"].reshape(-1, 9).T, state["shape"].T])[
-        :, slot[first_row]
-    ]
-    offsets[:, first_row] += channels[:, first_row] * at_start
-    channels[:, first_row] = 0
-    values = affine_path(channels, offsets, longest)
-    sums, shape = values[:9], values[9:]
-    total = (sums.reshape(3, 3, n).sum(axis=1) * rules.active[slot].T).sum(axis=0) + (
-        shape * rules.shapes[slot].T
-    ).sum(axis=0)
-
-    floor = np.zeros_like(log_ratio)
-    floor[:, first_row] = np.maximum(
-        state["shape_cusum"].T[:, slot[first_row]] + log_ratio[:, first_row], 0
-    )
-    step = log_ratio
-    step[:, first_row] = -np.inf
-    shape_cusum = cusum_path(step, floor, longest)
-    resting = np.where(shape_cusum <= 0, np.arange(n), -1)
-    shape_rest = np.maximum.accumulate(resting, axis=1)
-    shape_rest = np.where(shape_rest >= begin, shape_rest, -1)
-
-    return Running(
-        total=total,
-        sums=sums,
-        shape=shape,
-        shape_cusum=shape_cusum,
-        shape_rest=shape_rest,
-        hit_row=row,
-        hit_key=key,
+    level[first] = np.maximum(state["cusum"][stored] + step, up)[first]
+    step[first] = -np.inf
+    cusum = cusum_path(step, level, longest)
+    begins = np.where(first, state["cusum"][stored], np.roll(cusum, 1)) + decay <= 0
+    start = np.maximum.accumulate(np.where(begins | first, hits, 0))
+    return Cells(
+        row=row,
+        key=key,
         value=value,
+        weight=bank.CELL_WEIGHTS[cell] * _SHARE * (value / gain) * (_EPS / u),
         clock=at_hit,
         cusum=cusum,
-        run_start=run_start,
-        run_carried=~begins[run_start] if len(key) else np.empty(0, bool),
+        start=start,
+        carried=~begins[start],
     )
+
+
+def _values(
+    state: States,
+    part: Rows,
+    first: npt.NDArray[np.bool_],
+    longest: int,
+    cells: Cells,
+    ratio: FloatArray,
+) -> FloatArray:
+    """Run the sums of cells and the shapes, one map per row: float64 (9 + 14, n).
+
+    A view's sum over its cells obeys ``S <- r (S + W) + w_k (1 + R_k) eps / u_k``.
+    """
+    seen = part.cell >= 0
+    keep = np.tile(bank.RETAINED, 3)[:, None]
+    entering = (bank.VIEW_WEIGHTS[:, None] * bank.EPSILON_SHARES).reshape(9, 1) * keep
+    watched = np.repeat(seen, 3, axis=0)
+    a = np.concatenate([np.where(watched, keep, 1.0), ratio])
+    b = np.concatenate([np.where(watched, entering, 0.0), np.where(seen[1], ratio, 0.0)])
+    view = VIEW_OF_CELL[cells.key % CELLS]
+    for e in range(3):
+        b[view * 3 + e, cells.row] += cells.weight[e]
+    stored = np.concatenate([state["sums"].reshape(-1, 9).T, state["shape"].T])
+    b[:, first] += a[:, first] * stored[:, part.slot[first]]
+    a[:, first] = 0
+    return affine_path(a, b, longest)
+
+
+def _shape_cusum(
+    state: States,
+    part: Rows,
+    first: npt.NDArray[np.bool_],
+    longest: int,
+    ratio: FloatArray,
+) -> FloatArray:
+    step = np.log(ratio)
+    floor = np.zeros_like(step)
+    stored = state["shape_cusum"].T[:, part.slot[first]]
+    floor[:, first] = np.maximum(stored + step[:, first], 0)
+    step[:, first] = -np.inf
+    return cusum_path(step, floor, longest)
 
 
 def _shape_ratios(state: States, rules: Rules, part: Rows) -> FloatArray:
