@@ -10,7 +10,7 @@ import redis
 from service.store.connection import connect
 from service.store.logs import Logs
 from service.tallies import Tallies
-from tests.store.workers import HORIZON, worker
+from tests.store.workers import HORIZON, hiring
 
 
 @pytest.fixture
@@ -28,15 +28,8 @@ def logs(client: redis.Redis) -> Logs:
 @pytest.fixture
 def hire(fresh_store: str) -> Iterator[Callable[[], Tallies]]:
     """Return a function that starts one more worker on the same store."""
-    hired: list[Tallies] = []
-
-    def hire() -> Tallies:
-        hired.append(worker(fresh_store))
-        return hired[-1]
-
-    yield hire
-    for one in hired:
-        one.client.close()
+    with hiring(fresh_store) as hire:
+        yield hire
 
 
 @pytest.fixture

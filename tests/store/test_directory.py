@@ -114,7 +114,7 @@ def test_streams_touched_all_the_time_do_not_hold_up_a_listing(
 def test_streams_in_quarantine_do_not_hold_up_a_listing(tallies: Tallies, streams: int) -> None:
     merchants = [f"m{i:04d}" for i in range(streams)]
     post(tallies, batch(merchants, [1999] * streams, ids=named("m", 0, streams)))
-    logs = [k for k in tallies.client.keys("*log/*")]
+    logs = tallies.client.keys("*log/*")
     for key in logs[: max(1, streams // 20)]:
         tallies.client.append(key, "torn")
     post(tallies, honest("sound"))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from typing import Any
 
 from service.batches.batch import Batch
@@ -23,6 +25,22 @@ def worker(url: str, **settings: Any) -> Tallies:
     tallies = Tallies(Settings(redis_url=url, partitions=2, **settings))
     tallies.sweep.late_ms = -1000
     return tallies
+
+
+@contextmanager
+def hiring(url: str) -> Iterator[Callable[[], Tallies]]:
+    """Give a function that starts one more worker; all end with the block."""
+    hired: list[Tallies] = []
+
+    def hire() -> Tallies:
+        hired.append(worker(url))
+        return hired[-1]
+
+    try:
+        yield hire
+    finally:
+        for one in hired:
+            one.client.close()
 
 
 def watch(tallies: Tallies) -> None:

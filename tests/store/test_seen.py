@@ -1,0 +1,126 @@
+"""Identities: known for the horizon whatever the clock and the settings do, in little memory."""
+
+from __future__ import annotations
+
+import time
+
+import pytest
+
+from service.store.keys import path
+from service.store.logs import Logs
+from service.streams.record import Stream
+from tests.store.batches import NOW, batch
+from tests.store.workers import HORIZON, compact, named
+
+ROOM = 512
+"""Members up to which a server with its own settings keeps a set of integers as an array."""
+
+
+def post(logs: Logs, ids, *, idents=None, amounts=None) -> list[bool]:
+    rows = batch(["a"] * len(ids), amounts or [1999] * len(ids), ids=ids, idents=idents)
+    calls = logs.calls("main", rows, [1], now=NOW, historic=False)
+    return logs.append(calls, rows).taken.tolist()
+
+
+def seen(logs: Logs) -> str:
+    partition = logs.partition("main", "a")
+    return f"{partition.tag}seen/{path('main', Stream('a', 'sale', 'EUR'))}"
+
+
+def sets(client) -> list[bytes]:
+    return [k for k in client.keys("*seen/*") if client.type(k) == b"set"]
+
+
+def wait_for_epoch(client, number: int, horizon: int) -> None:
+    while client.time()[0] // horizon < number:
+        time.sleep(0.02)
+
+
+def test_ids_of_earlier_epochs_are_known(client) -> None:
+    logs = Logs(client, 3, horizon_s=1)
+    assert post(logs, ["first"]) == [True]
+    assert compact(logs, "a")
+    known = ["first"]
+    for i in range(3):
+        epoch = client.time()[0] + 1
+        wait_for_epoch(client, epoch, 1)
+        assert post(logs, [*known, f"x{i}"]) == [False] * len(known) + [True]
+        known.append(f"x{i}")
+    assert len(client.hkeys(seen(logs))) > 1
+    assert len(sets(client)) > 1
+
+
+@pytest.mark.parametrize("horizon", [60, HORIZON])
+def test_ids_go_late_rather_than_early(client, horizon: int) -> None:
+    logs = Logs(client, 3, horizon)
+    post(logs, ["a"])
+    assert compact(logs, "a")
+    post(logs, ["b"])
+    now = client.time()[0]
+    keys = client.keys("*seen/*")
+    assert len(keys) >= 2
+    for key in keys:
+        assert now + horizon < client.expiretime(key) <= now + 2 * horizon + 86_400
+
+
+def test_an_epoch_that_is_gone_is_forgotten(client) -> None:
+    logs = Logs(client, 3, horizon_s=1)
+    post(logs, ["old"])
+    assert compact(logs, "a")
+    (gone,) = sets(client)
+    wait_for_epoch(client, int(gone.split(b"/")[-3]) + 1, 1)
+    client.delete(gone)  # as its expiry does
+    assert post(logs, ["old", "new"]) == [True, True]
+    assert gone.split(b"/")[-3] not in client.hkeys(seen(logs))
+    assert post(logs, ["old", "new"]) == [False, False]
+
+
+@pytest.mark.parametrize("days", [1, 7, 9, 90])
+def test_ids_outlive_a_change_of_the_horizon(client, days: int) -> None:
+    logs = Logs(client, 3, HORIZON)
+    post(logs, ["a"])
+    assert compact(logs, "a")
+    post(logs, ["b"])
+    changed = Logs(client, 3, days * 86_400)
+    assert post(changed, ["a", "b", "c"]) == [False, False, True]
+    assert post(logs, ["a", "b", "c", "d"]) == [False, False, False, True]
+
+
+@pytest.mark.parametrize(("first", "then"), [(100, 250), (400, 1), (3000, 4000), (399, 8000)])
+def test_ids_are_kept_as_arrays_of_integers(client, first: int, then: int) -> None:
+    client.config_set("set-max-intset-entries", ROOM)
+    logs = Logs(client, 3, HORIZON)
+    ids = named("a", 0, first + then)
+    idents = [10**18 + (i * 0x9E3779B97F4A7C15) % 2**62 for i in range(first + then)]
+    post(logs, ids[:first], idents=idents[:first])
+    assert compact(logs, "a")
+    for i in range(first, first + then, 1000):
+        assert all(post(logs, ids[i : i + 1000], idents=idents[i : i + 1000]))
+    assert {client.object("encoding", key) for key in sets(client)} == {b"intset"}
+    assert sum(client.scard(key) for key in sets(client)) == first + then
+    assert not any(post(logs, ids, idents=idents))
+
+
+@pytest.mark.parametrize("asked", [1, 16, 17, 60])
+def test_a_log_that_was_never_compacted_knows_its_ids(logs: Logs, client, asked: int) -> None:
+    idents = [2**62 + i * 257 for i in range(asked)]
+    ids = named("a", 0, asked)
+    assert all(post(logs, ids, idents=idents))
+    assert not sets(client)
+    assert post(logs, ids, idents=idents) == [False] * asked
+    others = [2**61 + i for i in range(asked)]
+    assert all(post(logs, ids, idents=others, amounts=idents))
+    assert not any(post(logs, ids, idents=others))
+
+
+@pytest.mark.parametrize("asked", [1, 40])
+def test_an_ident_is_no_other_bytes_of_a_log(logs: Logs, asked: int) -> None:
+    """An amount, or the end of one field with the beginning of the next, is not an ident."""
+    ident = 2**62 + 12345
+    fillers = [2**61 + i for i in range(asked - 1)]
+    post(logs, ["other"], idents=[2**61 - 1], amounts=[ident])
+    torn = int.from_bytes(ident.to_bytes(8, "little")[4:] + b"\1\2\3\4", "little")
+    half = int.from_bytes(b"\1\2\3\4" + ident.to_bytes(8, "little")[:4], "little")
+    post(logs, ["torn"], idents=[torn], amounts=[half])
+    taken = post(logs, named("a", 0, asked), idents=[ident, *fillers])
+    assert taken == [True] * asked
