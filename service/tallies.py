@@ -204,19 +204,22 @@ class Tallies:
         return _posted(batch, appended, alarms, found, now)
 
     def _raised(self, tenant: str, judged: Judged, appended: Appended) -> list[Document]:
-        """Return the alarms raised by the rows of one call."""
+        """Return the alarms that rows of one call raised, or brought from history to the feed."""
         first = appended.first[judged.index]
         end = first + appended.count[judged.index]
         mine = [
             c.alarm.hex()
             for c in judged.crossings
-            if c.ordinal == 0 and 0 <= first[c.slot] <= c.record < end[c.slot]
+            if (c.ordinal == 0 or c.live) and 0 <= first[c.slot] <= c.record < end[c.slot]
         ]
         rows = {
             path(tenant, stream): int(count)
             for stream, count in zip(judged.streams, judged.folded.state["rows"], strict=True)
         }
-        return [a.document(rows.get(a.path)) for a in self.feed.stored(tenant, mine)]
+        return [
+            a.document(rows.get(a.path))
+            for a in self.feed.stored(tenant, list(dict.fromkeys(mine)))
+        ]
 
     def _entries(self, tenant: str, judged: Judged, reply: str, now: int) -> list[Document]:
         versions = self.catalogue.of(tenant).by_version
@@ -325,6 +328,20 @@ class Tallies:
         """Return the entries of all streams of a tenant, with ``category`` and ``updated``."""
         with self._answering():
             return self.directory.entries(tenant, now=now or time.time_ns() // 1_000_000)
+
+    def as_of_now(self, tenant: str, listed: Sequence[Document], *, now: int) -> list[Document]:
+        """Return entries of a listing as their streams are now: a window ages by itself."""
+        if not listed:
+            return []
+        streams = [Stream(e["merchant"], e["flow"], e["currency"]) for e in listed]
+        with self._answering():
+            judged = self._read(tenant, streams)
+            versions = self.catalogue.of(tenant).by_version
+            found = entries(judged.folded, judged.streams, versions, now)
+        fresh = dict(zip(judged.index, found, strict=True))
+        return [
+            {**fresh.get(i, entry), "category": entry["category"]} for i, entry in enumerate(listed)
+        ]
 
     def alarms(self, tenant: str, *, after: str | None, limit: int) -> tuple[list[Document], str]:
         """Return alarms of the feed after a cursor, oldest first, and the last position read.

@@ -15,7 +15,7 @@ from service.store.feed import Feed, Outgoing
 from service.store.keys import stream_of
 from service.store.loading import Loaded, load
 from service.store.logs import COMPACT_ROWS, Blobs, Logs
-from service.streams.crossing import Crossing
+from service.streams.crossing import FEW_CROSSINGS, Crossing
 from service.streams.fold import fold
 from service.streams.record import Stream
 from service.streams.state import Folded, write_snapshots
@@ -64,7 +64,7 @@ class Judge:
         except RedisError:
             raise
         except Exception:  # whatever is wrong with one stream is no matter of the others
-            index = self._healthy(tenant, blobs)
+            index = self._healthy(tenant, blobs, index)
             blobs = [blobs[i] for i in index]
             loaded, crossings = self._fold(tenant, blobs)
         if publish:
@@ -89,20 +89,22 @@ class Judge:
         )
         return loaded, crossings
 
-    def _healthy(self, tenant: str, blobs: Sequence[Blobs]) -> list[int]:
-        """Fold streams one by one; quarantine those that fail and return the others."""
-        index = []
-        for i, blob in enumerate(blobs):
-            try:
-                self._fold(tenant, [blob])
-                index.append(i)
-            except RedisError:
-                raise
-            except Exception as error:
-                log.error("a stream cannot be folded and is in quarantine: %s", error)
-                self.client.hset(
-                    blob.partition.quarantine, blob.path, f"{type(error).__name__}: {error}"
-                )
+    def _healthy(self, tenant: str, blobs: Sequence[Blobs], index: list[int]) -> list[int]:
+        """Find streams that cannot be folded by halving; quarantine them, return the others."""
+        try:
+            self._fold(tenant, [blobs[i] for i in index])
+        except RedisError:
+            raise
+        except Exception as error:
+            if len(index) > 1:
+                half = len(index) // 2
+                parts = index[:half], index[half:]
+                return [i for part in parts for i in self._healthy(tenant, blobs, part)]
+            log.error("a stream cannot be folded and is in quarantine: %s", error)
+            blob = blobs[index[0]]
+            reason = f"{type(error).__name__}: {error}"
+            self.client.hset(blob.partition.quarantine, blob.path, reason)
+            return []
         return index
 
     def _settle(
@@ -115,8 +117,11 @@ class Judge:
         if not due:
             return
         outgoing: dict[int, list[Outgoing]] = {slot: [] for slot in due}
+        last = {c.slot: c.ordinal for c in crossings}
         for c in crossings:
-            outgoing[c.slot].append(Outgoing.of(blobs[c.slot].path, c))
+            # of an alarm that crossed often only the latest crossing is told
+            if c.ordinal < FEW_CROSSINGS or c.live or c.ordinal == last[c.slot]:
+                outgoing[c.slot].append(Outgoing.of(blobs[c.slot].path, c))
         chosen = loaded.folded.only(due)
         won = self.logs.compact(
             [blobs[i] for i in due],

@@ -49,13 +49,16 @@ def list_merchants(query: dict[str, Any]) -> Response:
     """List streams: filter, sort, and go on by cursor.
 
     The cursor holds the last entry's value and name, so a stream that stands still is listed once,
-    while one that moves may be listed twice or not at all.
+    while one that moves may be listed twice or not at all. Entries are as of now; their order is as
+    of each stream's last row.
     """
+    tenant = principal().tenant
     try:
-        page = paging.page(tallies().merchants(principal().tenant), paging.Query(**query))
+        page = paging.page(tallies().merchants(tenant), paging.Query(**query))
     except ValueError as error:
         raise invalid([{"parameter": "cursor", "detail": str(error)}]) from error
-    response = reply({"merchants": page.entries, "next": page.next})
+    entries = tallies().as_of_now(tenant, page.entries, now=now())
+    response = reply({"merchants": entries, "next": page.next})
     if page.next is not None:
         following = {**request.args.to_dict(), "cursor": page.next}
         target = f"{request.script_root}{request.path}?{urlencode(following)}"

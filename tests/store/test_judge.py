@@ -214,7 +214,10 @@ def test_history_stays_off_the_feed_until_a_live_row_crosses(tallies: Tallies) -
     assert feed(tallies) == []
     post(tallies, one_price("past", n=60, first=30), historic=True)
     assert feed(tallies) == []
-    assert post(tallies, one_price("past", first=90)).alarms == []  # it repeats the old one
+    (told,) = post(tallies, one_price("past", first=90)).alarms  # the old one, now in the feed
+    assert told["cursor"] is not None
+    assert not told["historic"]
+    assert post(tallies, one_price("past", first=180)).alarms == []
     (live,) = feed(tallies)
     assert live["id"] == alarm["id"]
     assert not live["historic"]

@@ -1,15 +1,15 @@
 #!lua
 -- Publish crossings of one tenant: the alarm's own hash, and on first sight the feed.
 --
--- Invariant: a crossing is written once whoever publishes it and however often; an alarm is in the
--- feed at most once, and its cursor is its entry there. Crossings of history stay off the feed.
+-- Invariant: the first crossings of an alarm and its latest are kept, whoever publishes them, however
+-- often and in whatever order; an alarm is in the feed at most once, and its cursor is its entry there. Crossings of history stay off the feed.
 --
 -- KEYS[1]   feed
 -- KEYS[i+1] alarm of crossing i
 -- ARGV      for crossing i: alarm id, ordinal, "1" if historic, document, path (5 each)
 --
 -- Reply     the cursor of each crossing's alarm, "" while it is off the feed
-local KEPT = 16
+local KEPT = 16  -- FEW_CROSSINGS in streams/crossing.py
 local cursors = {}
 for i = 1, #KEYS - 1 do
   local key = KEYS[i + 1]
