@@ -17,7 +17,7 @@ from pathlib import Path
 from typing import Any
 
 from service.store.connection import connect
-from tests.test_serve import free_port
+from tests.test_serve import children, free_port
 
 REPOSITORY = Path(__file__).parents[2]
 KEY = "the-key-of-these-scenarios-0123456789"
@@ -49,15 +49,21 @@ class Answer:
 class Service:
     """A running service, spoken to over kept-alive connections, one per thread."""
 
-    def __init__(self, port: int, store_url: str) -> None:
+    def __init__(self, port: int, store_url: str, process: subprocess.Popen[str]) -> None:
         self.port = port
         self.store_url = store_url
+        self.process = process
         self._lines = threading.local()
         self._opened: list[http.client.HTTPConnection] = []
 
     @property
     def url(self) -> str:
         return f"http://127.0.0.1:{self.port}"
+
+    @property
+    def workers(self) -> list[int]:
+        """Process ids of the workers, the grandchildren of `tallyward serve` (Linux)."""
+        return [worker for child in children(self.process.pid) for worker in children(child)]
 
     def send(
         self,
@@ -104,6 +110,12 @@ class Service:
         assert receipt["accepted"] + receipt["duplicates"] == len(rows)
         return receipt
 
+    def reconnect(self) -> None:
+        """Let any worker take this thread's next request; a connection stays with one."""
+        line: http.client.HTTPConnection | None = getattr(self._lines, "line", None)
+        if line is not None:
+            line.close()
+
     def hang_up(self) -> None:
         for line in self._opened:
             line.close()
@@ -112,10 +124,10 @@ class Service:
 @contextlib.contextmanager
 def serving(store_url: str, folder: Path, **settings: str) -> Iterator[Service]:
     """Run the service over a store: `tallyward serve`, two workers, on a free port."""
-    service = Service(free_port(), store_url)
+    port = free_port()
     environment = {
         **os.environ,
-        "TALLYWARD_BIND": f"127.0.0.1:{service.port}",
+        "TALLYWARD_BIND": f"127.0.0.1:{port}",
         "TALLYWARD_REDIS_URL": store_url,
         "TALLYWARD_ADMIN_KEY": KEY,
         "TALLYWARD_WORKERS": "2",
@@ -135,6 +147,7 @@ def serving(store_url: str, folder: Path, **settings: str) -> Iterator[Service]:
             text=True,
         )
     assert process.stdout is not None
+    service = Service(port, store_url, process)
     try:
         ready = process.stdout.readline()
         assert service.url in ready, (folder / "service.log").read_text()
