@@ -5,7 +5,6 @@ from __future__ import annotations
 import contextlib
 import os
 import signal
-import socket
 import sys
 import threading
 import time
@@ -18,72 +17,19 @@ import pytest
 from service.store.catalogue import FRESH_SECONDS
 from service.store.script import APPEND
 from tests.scenarios.running import Answer, Service, StoreServer, eventually, serving
+from tests.store.line import BadLine
 
 Row = dict[str, Any]
 
 
-class Line:
-    """A line to the store that can be cut after the store has done what it was asked.
+def lose_replies(line: BadLine, times: int, then: Callable[[], object] = lambda: None) -> None:
+    """Lose the replies to the next appends, which the store has done; then do something."""
+    line.times, line.then = times, then
+    line.losing = APPEND.sha.encode()
 
-    It passes bytes on and looks at nothing, but for one thing: after `cut_after_append` it swallows
-    the reply to the next append and hangs up, as a network does.
-    """
 
-    def __init__(self, store: StoreServer, folder: Path) -> None:
-        self.store_path = store.url.removeprefix("unix://")
-        self.url = f"unix://{folder}/line.sock"
-        self._server = socket.socket(socket.AF_UNIX)
-        self._server.bind(f"{folder}/line.sock")
-        self._server.listen(64)
-        self._cuts = 0
-        self._then: Callable[[], object] = lambda: None
-        self._lock = threading.Lock()
-        self.cut = threading.Event()
-        threading.Thread(target=self._accept, daemon=True).start()
-
-    def cut_after_append(self, times: int, then: Callable[[], object] = lambda: None) -> None:
-        """Cut so many connections, each after an append was done; do ``then`` before the last."""
-        self.cut.clear()
-        with self._lock:
-            self._cuts, self._then = times, then
-
-    def close(self) -> None:
-        self._server.close()
-
-    def _accept(self) -> None:
-        with contextlib.suppress(OSError):
-            while True:
-                caller = self._server.accept()[0]
-                threading.Thread(target=self._serve, args=(caller,), daemon=True).start()
-
-    def _serve(self, caller: socket.socket) -> None:
-        with caller, socket.socket(socket.AF_UNIX) as store, contextlib.suppress(OSError):
-            store.connect(self.store_path)
-            swallow = threading.Event()
-            back = threading.Thread(target=self._back, args=(store, caller, swallow), daemon=True)
-            back.start()
-            while asked := caller.recv(1 << 20):
-                if APPEND.sha.encode() in asked and self._takes_a_cut():
-                    swallow.set()
-                store.sendall(asked)
-            store.shutdown(socket.SHUT_RDWR)
-
-    def _takes_a_cut(self) -> bool:
-        with self._lock:
-            self._cuts -= 1
-            return self._cuts >= 0
-
-    def _back(self, store: socket.socket, caller: socket.socket, swallow: threading.Event) -> None:
-        with contextlib.suppress(OSError):
-            while said := store.recv(1 << 20):
-                if swallow.is_set():
-                    if self._cuts <= 0:
-                        self._then()
-                        self.cut.set()
-                    break
-                caller.sendall(said)
-        with contextlib.suppress(OSError):
-            caller.shutdown(socket.SHUT_RDWR)
+def lost(line: BadLine) -> bool:
+    return not line.losing
 
 
 @pytest.fixture(scope="module")
@@ -95,14 +41,13 @@ def store(store_binary: Path, tmp_path_factory: pytest.TempPathFactory) -> Itera
 
 
 @pytest.fixture(scope="module")
-def line(store: StoreServer) -> Iterator[Line]:
-    line = Line(store, store.folder)
-    yield line
-    line.close()
+def line(store: StoreServer) -> Iterator[BadLine]:
+    with BadLine(store.folder / "line.sock", store.url) as line:
+        yield line
 
 
 @pytest.fixture(scope="module")
-def service(store: StoreServer, line: Line) -> Iterator[Service]:
+def service(store: StoreServer, line: BadLine) -> Iterator[Service]:
     with serving(line.url, store.folder, LOG_LEVEL="error") as service:
         service.put("/v1/policies/by-law", {"reference": "law"})
         service.put("/v1/merchants/cheat", {"policy": "by-law"})
@@ -219,43 +164,43 @@ def test_service_that_starts_before_its_store_waits_for_it(
 
 
 def test_post_whose_reply_was_lost_is_not_doubled(
-    service: Service, store: StoreServer, line: Line
+    service: Service, store: StoreServer, line: BadLine
 ) -> None:
     """The store does the append and is killed before a word of it comes back."""
     service.post(rows("lost", 10))
-    line.cut_after_append(1, then=store.kill)
+    lose_replies(line, 1, then=store.kill)
     assert_told_to_come_back(send(service, rows("lost", 30)))
-    assert line.cut.is_set()
+    assert lost(line)
     store.start()
     receipt = service.post(rows("lost", 50))
     assert (receipt["accepted"], receipt["duplicates"]) == (20, 30)
     assert count(service, "lost") == 50
 
 
-def test_line_that_breaks_once_is_not_noticed(service: Service, line: Line) -> None:
+def test_line_that_breaks_once_is_not_noticed(service: Service, line: BadLine) -> None:
     """The worker asks again under the same token, and gets the reply of the first time."""
     service.post(rows("broken", 10))
-    line.cut_after_append(1)
+    lose_replies(line, 1)
     receipt = service.post(rows("broken", 30))
-    assert line.cut.is_set()
+    assert lost(line)
     assert (receipt["accepted"], receipt["duplicates"]) == (20, 10)
     assert count(service, "broken") == 30
 
 
 def test_line_that_breaks_twice_is_told_and_nothing_is_doubled(
-    service: Service, line: Line
+    service: Service, line: BadLine
 ) -> None:
     service.post(rows("twice", 10))
-    line.cut_after_append(2)
+    lose_replies(line, 2)
     assert_told_to_come_back(send(service, rows("twice", 30)))
-    assert line.cut.is_set()
+    assert lost(line)
     assert count(service, "twice") == 30  # it had been counted
     assert service.post(rows("twice", 30))["duplicates"] == 30
     assert count(service, "twice") == 30
 
 
 def test_alarm_of_a_post_whose_reply_was_lost_reaches_the_feed(
-    service: Service, line: Line
+    service: Service, line: BadLine
 ) -> None:
     """Nobody sends again and nobody asks for the merchant: the sweep judges what was left."""
     before = service.get("/v1/alarms")["next"]
@@ -264,7 +209,7 @@ def test_alarm_of_a_post_whose_reply_was_lost_reaches_the_feed(
         {"merchant": "cheat", "amount": 4900 + i % 7, "currency": "EUR", "id": f"c{i}"}
         for i in range(60)
     ]
-    line.cut_after_append(2)
+    lose_replies(line, 2)
     assert_told_to_come_back(send(service, cheat))
     found = service.get(f"/v1/alarms?wait=30{after}")["alarms"]
     assert [alarm["merchant"] for alarm in found] == ["cheat"]

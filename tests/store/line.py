@@ -6,16 +6,22 @@ import contextlib
 import select
 import socket
 import threading
+from collections.abc import Callable
 from pathlib import Path
 from urllib.parse import unquote, urlsplit
 
 
 class BadLine:
-    """Forwards one Unix socket to another; hangs up instead of answering what holds ``losing``."""
+    """Forwards one Unix socket to another; hangs up instead of answering what holds ``losing``.
+
+    It does so ``times`` times, on a connection each, and calls ``then`` before the last.
+    """
 
     def __init__(self, path: Path, url: str) -> None:
         self.url = f"unix://{path}"
         self.losing = b""
+        self.times = 1
+        self.then: Callable[[], object] = lambda: None
         self.lost = 0
         self._store = unquote(urlsplit(url).path)
         self._listener = socket.socket(socket.AF_UNIX)
@@ -51,8 +57,11 @@ class BadLine:
                         doomed |= bool(self.losing) and self.losing in said
                         store.sendall(said)
                     elif doomed:
-                        self.losing = b""
                         self.lost += 1
+                        self.times -= 1
+                        if not self.times:
+                            self.losing, self.times = b"", 1
+                            self.then()
                         return
                     else:
                         caller.sendall(said)
