@@ -72,7 +72,8 @@ def own_bounds(
     block_rows : int64 array (B, 3)
         Rows of each block seen by each view.
     block_partition : int64 array (B,)
-        Which partition of the baseline each block belongs to: runs of rows, times of the day.
+        Which partition of the baseline each block belongs to: runs of rows, times of the day, days
+        of the week.
     alpha : float
         Error probability of the baseline, 0 to 1.
 

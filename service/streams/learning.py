@@ -17,6 +17,7 @@ from service.streams.state import (
     RUN_BLOCK,
     TOO_FEW,
     UNDECIDED,
+    WEEKDAY_BLOCK,
     Buckets,
     Folded,
     States,
@@ -91,8 +92,9 @@ def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts:
     cell = part.cell[:, chosen]
     run = RUN_BLOCK + (position[mine] >> state["block_level"][slot[mine]].astype(np.int64))
     hour = HOUR_BLOCK + part.at[chosen] % DAY_MS // HOUR_BLOCK_MS
-    folded.buckets = counted(folded.buckets, slot[mine], run, cell)
-    folded.buckets = counted(folded.buckets, slot[mine], hour, cell)
+    weekday = WEEKDAY_BLOCK + part.at[chosen] // DAY_MS % 7
+    for block in (run, hour, weekday):
+        folded.buckets = counted(folded.buckets, slot[mine], block, cell)
     view, row = np.nonzero(cell >= 0)
     np.add.at(state["base"], (slot[mine][row], cell[view, row]), 1)
     state["base_rows"] = grown
@@ -132,7 +134,7 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     per_block = np.zeros((len(table), CELLS), np.int64)
     per_block[number, folded.buckets.cell[blocks]] = folded.buckets.count[blocks]
     seen = np.stack([per_block[:, cells].sum(axis=1) for cells in WATCHED.values()], axis=1)
-    partition = (table >= HOUR_BLOCK).astype(np.int64)
+    partition = np.searchsorted([HOUR_BLOCK, WEEKDAY_BLOCK], table, side="right")
     bounds = own_bounds(count, rows, per_block, seen, partition, alpha)
     rounded = bounds.astype(np.float32)
     state["bound"][s] = np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)

@@ -106,6 +106,8 @@ RUN_BLOCK = 1 << 22
 """Bucket numbers from here on are baseline blocks of consecutive rows."""
 HOUR_BLOCK = 1 << 23
 """Bucket numbers from here on are baseline blocks of the time of day."""
+WEEKDAY_BLOCK = HOUR_BLOCK + 64
+"""Bucket numbers from here on are baseline blocks of the day of the week."""
 
 
 @dataclass

@@ -28,7 +28,7 @@ def test_no_member_of_the_null_beats_a_shape_detector(tolerance: float) -> None:
         projected = np.minimum(u, c[j] * q[j])
         assert projected.sum() == pytest.approx(1, abs=1e-12)
         ratio = q[j] / projected
-        worst = linprog(-ratio, A_eq=np.ones((1, 90)), b_eq=[1], bounds=list(zip(0 * u, u)))
+        worst = linprog(-ratio, A_eq=np.ones((1, 90)), b_eq=[1], bounds=[(0, bound) for bound in u])
         assert -worst.fun == pytest.approx(1, abs=1e-9)
 
 
