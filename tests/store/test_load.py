@@ -73,6 +73,20 @@ def test_nothing_is_read_of_nothing() -> None:
         (log([1, 2, 3]), snapshot(3)[:10]),
         (log([1, 2, 3]), b""),
     ],
+    ids=[
+        "torn record",
+        "torn header",
+        "empty log",
+        "no log",
+        "log too short",
+        "gap",
+        "no snapshot",
+        "incarnation",
+        "format",
+        "torn snapshot",
+        "torn header of a snapshot",
+        "empty snapshot",
+    ],
 )
 def test_what_does_not_fit_is_refused(held: bytes | None, of: bytes | None) -> None:
     load([blob(log([1, 2, 3]), snapshot(3))])
