@@ -23,6 +23,7 @@ POLICIES = {
     "at-once": {"baseline_days": 0},
     "by-own": {"reference": "own", "baseline_size": 300, "baseline_days": 0},
 }
+CHEATS = [f"feed-{i}" for i in range(24)]
 ASSIGNED = {
     "law-in-silence": [
         f"cities-{continent}" for continent in ("AF", "AN", "AS", "EU", "NA", "OC", "SA")
@@ -30,8 +31,7 @@ ASSIGNED = {
     "by-law": [
         "small-towns",
         *(f"cut-law-{i}" for i in range(4)),
-        *(f"feed-{i}" for i in range(24)),
-        "raced",
+        *CHEATS,
         "raced-cheat",
     ],
     "at-once": ["powers-of-2", "fibonacci", *(f"cut-auto-{i}" for i in range(4))],

@@ -4,8 +4,7 @@ from __future__ import annotations
 
 import random
 from collections import Counter
-from collections.abc import Callable, Iterator
-from concurrent.futures import ThreadPoolExecutor
+from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from typing import Any
@@ -26,6 +25,7 @@ from tests.scenarios import oracle
 from tests.scenarios.aof import whole_logs
 from tests.scenarios.conftest import Business
 from tests.scenarios.running import Service, eventually
+from tests.scenarios.together import run_together
 
 TENANT = "main"
 KINDS = ("law", "auto", "own")
@@ -105,11 +105,6 @@ class Poster:
         assert receipt["exactly_once"] is True or not batch
         names = ("accepted", "duplicates", "late", "zero", "unverified")
         return Counter({name: receipt[name] for name in names}) + Counter(sent=len(batch))
-
-
-def run_together(jobs: list[Callable[[], Any]]) -> list[Any]:
-    with ThreadPoolExecutor(len(jobs)) as pool:
-        return [one.result() for one in [pool.submit(job) for job in jobs]]
 
 
 @pytest.fixture
