@@ -2,6 +2,9 @@
 
 An e-process: under the reference its expectation is 1 at every time, so the chance that it ever
 reaches x is at most 1/x (Ville 1939). It gathers slowly after a change; it is no change detector.
+
+All is done in logarithms. The differences of log-gammas leave an absolute error of ln E within
+``4e-16 n ln n`` for n amounts: 1e-6 at 10**8, 0.01 at 10**12.
 """
 
 from __future__ import annotations
@@ -12,7 +15,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.special import gammaln, logsumexp, xlogy
 
-from service.digits.significand import FloatArray
+from service.digits.significand import BoolArray, FloatArray
 from service.digits.tally import checked
 
 CONCENTRATIONS: dict[str, tuple[float, ...]] = {
@@ -28,9 +31,10 @@ def log_evidence(
 ) -> FloatArray:
     """Return ln E of the Dirichlet-mixture e-process against a reference.
 
-    Per kappa, with alpha = kappa p: ln B(alpha + c) - ln B(alpha) - sum c ln p (Lindon & Malek
-    2022, *Anytime-valid inference for multinomial count data*, NeurIPS); E is averaged over the
-    kappas.
+    Per kappa, with alpha = kappa p: ln B(alpha + c) - ln B(alpha) - sum c ln p, where B is the
+    multivariate beta function; E is averaged over the kappas. Lindon & Malek (2022,
+    *Anytime-valid inference for multinomial count data*, NeurIPS 35) write theta_0 for our p, S
+    for our counts c and alpha_0 for our kappa p.
 
     Parameters
     ----------
@@ -66,7 +70,9 @@ def tolerant_log_evidence(
 
     The same mixture divided by the likelihood maximised over the null, which is reached at
     min(bound, s c) with s such that the sum is 1. E is at most that against the true law, so its
-    expectation is at most 1 whichever law of the null is true.
+    expectation is at most 1 whichever law of the null is true: the universal inference of
+    Wasserman, Ramdas & Balakrishnan (2020, *PNAS* 117, 16880-16890), with the mixture in the place
+    of their alternative and {q : q <= bounds, sum q = 1} as their Theta_0.
 
     Parameters
     ----------
@@ -93,14 +99,86 @@ def tolerant_log_evidence(
 
 
 def e_value(log_e: npt.ArrayLike) -> FloatArray:
-    """Return E from ln E, cut at the largest finite float so that it can be written as JSON."""
-    log = np.asarray(log_e, dtype=np.float64)
+    """Return E from ln E, cut at the largest finite float so that it can be written as JSON.
+
+    Parameters
+    ----------
+    log_e : array (...)
+        Natural logarithms, infinities included.
+
+    Raises
+    ------
+    ValueError
+        If a value is NaN.
+    """
+    log = _checked_logs(log_e, "log_e")
     return np.asarray(np.exp(np.minimum(log, np.log(np.finfo(np.float64).max))))
 
 
 def p_value(max_log_e: npt.ArrayLike) -> FloatArray:
-    """Return min(1, 1 / max E) from the largest ln E so far; valid at any time one stops."""
-    return np.asarray(np.exp(-np.maximum(np.asarray(max_log_e, dtype=np.float64), 0.0)))
+    """Return min(1, 1 / max E), valid at whatever time one stops (Ville's inequality, 1939).
+
+    Parameters
+    ----------
+    max_log_e : array (...)
+        The largest ln E so far. An earlier or smaller one is valid too, and weaker.
+
+    Raises
+    ------
+    ValueError
+        If a value is NaN.
+    """
+    return np.asarray(np.exp(-np.maximum(_checked_logs(max_log_e, "max_log_e"), 0.0)))
+
+
+def e_bh(log_e: npt.ArrayLike, fdr: float) -> BoolArray:
+    """Return which of n streams to flag, so that few of those flagged are honest: e-BH.
+
+    Wang & Ramdas (2022, *False discovery rate control with e-values*, *J. R. Statist. Soc. B* 84,
+    822-852): with e_[k] the k-th largest of their K = n e-values and alpha = ``fdr``, flag the k^
+    largest, ``k^ = max {k : k e_[k] / K >= 1 / alpha}``. If each honest stream's E has an
+    expectation of at most 1, the expected share of honest streams among those flagged (0 when
+    none is) is at most ``fdr`` times the share of honest streams among all, however the e-values
+    depend on each other. It holds for one look at all streams together.
+
+    Equal values are flagged together or not at all. Compared are logarithms, so a value within
+    rounding (1e-15, relative) of its limit may fall on either side.
+
+    Parameters
+    ----------
+    log_e : array (n,)
+        ln E of each stream; infinities are ordinary values, n may be 0.
+    fdr : float
+        False discovery rate, above 0 and at most 1.
+
+    Returns
+    -------
+    bool array (n,)
+
+    Raises
+    ------
+    ValueError
+        If an argument is outside its range.
+    """
+    log = _checked_logs(log_e, "log_e")
+    if log.ndim != 1:
+        raise ValueError(f"log_e must have one axis, one value a stream, got {log.shape}")
+    if not 0 < fdr <= 1:
+        raise ValueError(f"fdr must be above 0 and at most 1, got {fdr}")
+    if not log.size:
+        return np.zeros(0, dtype=np.bool_)
+    limit = np.log(log.size) - np.log(fdr) - np.log(np.arange(1, log.size + 1))
+    enough = np.flatnonzero(np.sort(log)[::-1] >= limit)
+    if not enough.size:
+        return np.zeros(log.size, dtype=np.bool_)
+    return np.asarray(log >= limit[enough[-1]])
+
+
+def _checked_logs(values: npt.ArrayLike, name: str) -> FloatArray:
+    logs = np.asarray(values, dtype=np.float64)
+    if np.any(np.isnan(logs)):
+        raise ValueError(f"{name} must be natural logarithms, -inf to inf, got NaN")
+    return logs
 
 
 def _log_mixture(

@@ -43,8 +43,9 @@ class LargestZ(NamedTuple):
 def chi_square(counts: npt.ArrayLike, p: npt.ArrayLike) -> SingleLook:
     """Return Pearson's chi-square, sum (c - np)^2 / np.
 
-    The p-value is the chi-square distribution's with one degree fewer than the cells with
-    p > 0; it wants np of about 5 or more in each cell.
+    Pearson (1900, *Phil. Mag.* (5) 50, 157-175) writes m for the expected np, m' for the count c,
+    e for c - np, and n + 1 for our K cells. The p-value is the chi-square distribution's with one
+    degree fewer than the cells with p > 0; it wants np of about 5 or more in each cell.
 
     Parameters
     ----------
@@ -71,7 +72,12 @@ def chi_square(counts: npt.ArrayLike, p: npt.ArrayLike) -> SingleLook:
 
 
 def g(counts: npt.ArrayLike, p: npt.ArrayLike) -> SingleLook:
-    """Return the likelihood-ratio statistic G = 2 sum c ln(c / np); arguments as ``chi_square``."""
+    """Return the likelihood-ratio statistic G = 2 sum c ln(c / np).
+
+    It is -2 ln lambda of Wilks (1938, *Ann. Math. Statist.* 9, 60-62), lambda being the likelihood
+    of the shares p over that of the counted shares c/n; nearly chi-square where ``chi_square`` is.
+    Arguments and errors as there.
+    """
     c, n, law = checked(counts, p)
     expected = nan_if_empty(n)[..., np.newaxis] * law
     return _chi_square_test(np.maximum(0, 2 * rel_entr(c, expected).sum(axis=-1)), law)
@@ -80,9 +86,10 @@ def g(counts: npt.ArrayLike, p: npt.ArrayLike) -> SingleLook:
 def kuiper(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
     """Return Kuiper's V* of a tally: the largest excesses of the cumulated shares, up and down.
 
-    V = max(F_n - F) + max(F - F_n) over the cell borders, scaled by Stephens (1970, *J. R.
-    Statist. Soc. B* 32, 115-122): V* = V (sqrt n + 0.155 + 0.24 / sqrt n). It does not depend on
-    the cell where the circle of digits is cut. On cells the continuous p-value is far too
+    V = max(F_n - F) + max(F - F_n) over the cell borders (Kuiper 1960, *Proc. Kon. Ned. Akad.
+    Wet. A* 63, 38-47; F_n is the cumulated c/n, F the cumulated p), scaled by Stephens (1970,
+    *J. R. Statist. Soc. B* 32, 115-122): V* = V (sqrt n + 0.155 + 0.24 / sqrt n). It does not
+    depend on the cell where the circle of digits is cut. On cells the continuous p-value is far too
     large, and there is no closed form: compare with 1.32 (95 %) and 1.58 (99 %), the quantiles
     for the law of the lead digit (Morrow 2014 gives 1.321 and 1.579, from memory).
 
@@ -116,8 +123,9 @@ def watson_u2(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
     """Return Watson's U^2 for cells on a circle.
 
     With S_j the cumulated excess counts, U^2 = sum p_j (S_j - sum p S)^2 / n, the integral of
-    Watson's statistic over the cells' own law (Choulakian, Lockhart & Stephens 1994, *Canad. J.
-    Statist.* 22, 125-137). It does not depend on where the circle is cut. No closed form of p:
+    Watson's statistic (1961, *Biometrika* 48, 109-114) over the cells' own law. Choulakian,
+    Lockhart & Stephens (1994, *Canad. J. Statist.* 22, 125-137) write N for n, o_j for c_j, e_j
+    for n p_j and Z_j for S_j. It does not depend on where the circle is cut. No closed form of p:
     compare with 0.195 (95 %) and 0.292 (99 %), the quantiles for the law of the lead digit in
     large tallies. Arguments and errors as ``kuiper``.
     """
@@ -131,9 +139,10 @@ def watson_u2(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
 def z_scores(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
     """Return each cell's deviation in standard deviations, float64 (..., K).
 
-    (|c - np| - 1/2) / sqrt(np (1-p)) with the sign of c - np, and 0 within half a count: the
-    continuity correction that is usual for digits, on the side of caution. Infinite where a cell
-    with p = 0 was hit; arguments and errors as ``chi_square``.
+    (|c - np| - 1/2) / sqrt(np (1-p)) with the sign of c - np, and 0 within half a count: Yates's
+    continuity correction (1934, *Suppl. J. R. Statist. Soc.* 1, 217-235), as is usual for digits
+    and on the side of caution. Infinite where a cell with p = 0 was hit; arguments and errors as
+    ``chi_square``.
     """
     c, n, law = checked(counts, p)
     n = nan_if_empty(n)[..., np.newaxis]
@@ -147,9 +156,9 @@ def z_scores(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
 def holm(p_values: npt.ArrayLike) -> FloatArray:
     """Return Holm's step-down adjustment over the last axis.
 
-    Holm (1979, *Scand. J. Statist.* 6, 65-70): the j-th smallest of m is multiplied by m + 1 - j,
-    made monotone and cut at 1, so that the chance of any false call among the cells stays below
-    the level.
+    Holm (1979, *Scand. J. Statist.* 6, 65-70): the j-th smallest of m (his n) is multiplied by
+    m + 1 - j, made monotone and cut at 1, so that the chance of any false call among the cells
+    stays below the level.
 
     Parameters
     ----------
@@ -179,8 +188,9 @@ def holm(p_values: npt.ArrayLike) -> FloatArray:
 def largest_z(counts: npt.ArrayLike, p: npt.ArrayLike) -> LargestZ:
     """Return the cell with the largest |z| and its Holm-adjusted p-value.
 
-    For the law of the lead digit and 1000 amounts the largest |z| is below 2.72 in 95 % and
-    below 3.21 in 99 % of honest looks. Arguments and errors as ``chi_square``.
+    The z are those of ``z_scores``, the adjustment is that of ``holm`` (1979) for the smallest
+    p-value. For the law of the lead digit and 1000 amounts the largest |z| is below 2.72 in 95 %
+    and below 3.21 in 99 % of honest looks. Arguments and errors as ``chi_square``.
     """
     z = z_scores(counts, p)
     empty = np.isnan(z).all(axis=-1)
@@ -196,10 +206,12 @@ def largest_z(counts: npt.ArrayLike, p: npt.ArrayLike) -> LargestZ:
 def rayleigh(n: npt.ArrayLike, cosines: npt.ArrayLike, sines: npt.ArrayLike) -> SingleLook:
     """Return Rayleigh's test that the amounts are spread evenly on the circle.
 
-    With R = hypot(sum cos, sum sin) / n the statistic is 2 n R^2, nearly chi-square with two
-    degrees. The p-value exp(-n R^2) is corrected for small n: exp(sqrt((1+2n)^2 - 4 n^2 R^2) -
-    (1+2n)) (Greenwood & Durand 1955, *Ann. Math. Statist.* 26, 233-246, in the form of Zar,
-    *Biostatistical Analysis*, from memory), good to three decimals from n = 10 on.
+    With R = hypot(sum cos, sum sin) / n the statistic is 2 n R^2 (Rayleigh 1880, *Phil. Mag.* (5)
+    10, 73-78), nearly chi-square with two degrees. The p-value exp(-n R^2) is corrected for small
+    n: exp(sqrt((1+2n)^2 - 4 n^2 R^2) - (1+2n)) (Greenwood & Durand 1955, *Ann. Math. Statist.* 26,
+    233-246, in the form of Zar, *Biostatistical Analysis*, from memory), good to three decimals
+    from n = 10 on. With sums of cos and sin of 2 pi h times the circle it is the same test of the
+    h-th harmonic.
 
     Parameters
     ----------

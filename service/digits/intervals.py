@@ -24,7 +24,8 @@ def clopper_pearson_upper(
 ) -> FloatArray:
     """Return the exact one-sided upper bound of a binomial share at confidence 1 - alpha.
 
-    Clopper & Pearson (1934, *Biometrika* 26, 404-413). For a cell never seen it is
+    Clopper & Pearson (1934, *Biometrika* 26, 404-413), who write x for our counts and p for the
+    true share, and take epsilon/2 = alpha on each side. For a cell never seen it is
     ``1 - alpha**(1/n)``; where all n amounts were in the cell it is 1, and so where n is 0.
 
     Parameters
@@ -57,8 +58,8 @@ def clopper_pearson_lower(
 ) -> FloatArray:
     """Return the exact one-sided lower bound of a binomial share at confidence 1 - alpha.
 
-    0 for a cell never seen, ``alpha**(1/n)`` where all n amounts were in the cell; arguments and
-    errors as ``clopper_pearson_upper``.
+    Clopper & Pearson (1934). 0 for a cell never seen, ``alpha**(1/n)`` where all n amounts were in
+    the cell; arguments and errors as ``clopper_pearson_upper``.
     """
     c, total, a = _checked_shares(counts, n, alpha)
     inside = betaincinv(np.maximum(c, 1), total - c + 1, a)
@@ -67,7 +68,10 @@ def clopper_pearson_lower(
 
 
 def clopper_pearson(counts: npt.ArrayLike, n: npt.ArrayLike, alpha: npt.ArrayLike) -> Interval:
-    """Return the exact two-sided interval, alpha / 2 on each side; arguments as the bounds'."""
+    """Return the exact two-sided interval of Clopper & Pearson (1934), alpha / 2 on each side.
+
+    Arguments and errors as ``clopper_pearson_upper``.
+    """
     _, _, a = _checked_shares(counts, n, alpha)
     half = a / 2
     return Interval(clopper_pearson_lower(counts, n, half), clopper_pearson_upper(counts, n, half))

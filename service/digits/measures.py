@@ -46,7 +46,10 @@ class Estimate(NamedTuple):
 
 
 def mad(counts: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
-    """Return the mean absolute deviation of the shares from their reference.
+    """Return the mean absolute deviation of the shares from their reference, mean |c/n - p|.
+
+    The measure of Drake & Nigrini (2000, *J. Account. Educ.* 18, 127-146). Nigrini (2012) writes
+    AP for the counted share c/n, EP for p and K for the number of cells (from memory).
 
     Parameters
     ----------
@@ -105,7 +108,9 @@ def mad_expected(n: npt.ArrayLike, p: npt.ArrayLike) -> FloatArray:
 def noise_constant(p: npt.ArrayLike) -> FloatArray:
     """Return c = mean sqrt(2 p (1-p) / pi), so that noise alone gives a MAD of c / sqrt(n).
 
-    0.2348 for the law of the lead digit. ``p`` is (K,) or (..., K); the result is (...).
+    The mean of a half-normal deviation in each cell, De Moivre's limit of ``mad_expected``; 0.2348
+    for the law of the lead digit. ``p`` is (K,) or (..., K), shares with sum 1, or ValueError; the
+    result is (...).
     """
     return _noise_constant(checked_law(p))
 
@@ -113,11 +118,15 @@ def noise_constant(p: npt.ArrayLike) -> FloatArray:
 def excess_mad(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
     """Return the MAD less what sampling noise explains, xMAD = sqrt(max(0, MAD^2 - c^2/n)).
 
+    Barney & Schulzke (2016, *J. Forensic Account. Res.* 1, A66-A90, from memory) take the expected
+    MAD off the MAD itself. Squares are taken off squares here, as independent errors add, which
+    leaves a clear deviation nearly whole.
+
     The interval is for the population's MAD, the mean of |q - p| over the cells when the cells'
     true shares are q, and holds whatever q is. One amount moves the MAD by at most 2/(Kn), so by
-    the Efron-Stein inequality its standard deviation is at most s = 1/(K sqrt n). Its mean lies
-    between the population's MAD (Jensen) and that plus c_q/sqrt n (triangle inequality), with
-    c_q the noise constant of the counted shares. Hence
+    the Efron-Stein inequality (1981, *Ann. Statist.* 9, 586-596) its standard deviation is at most
+    s = 1/(K sqrt n). Its mean lies between the population's MAD (Jensen) and that plus c_q/sqrt n
+    (triangle inequality), with c_q the noise constant of the counted shares. Hence
 
         low = MAD - c_q/sqrt n - 1.96 s,   high = MAD + 1.96 s,
 
@@ -165,7 +174,9 @@ def misfit(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
 
 
 def misfit_of(excess: Estimate, cells: int) -> Estimate:
-    """Return the misfit that belongs to an ``excess_mad`` on K = ``cells`` cells."""
+    """Return the misfit that belongs to an ``excess_mad`` on K = ``cells`` cells, 2 or more."""
+    if not cells >= 2:
+        raise ValueError(f"cells must be at least 2, got {cells}")
     half = cells / 2
     return Estimate(excess.value * half, excess.low * half, np.minimum(excess.high * half, 1.0))
 
@@ -174,7 +185,8 @@ def score(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
     """Return the score of a lead digit tally, 0 (far from its reference) to 100 (matches it).
 
     ``100 max(0, 1 - xMAD / 0.030)``: 80, 60 and 50 are the published cut-offs 0.006, 0.012 and
-    0.015 freed of noise. Arguments, interval and errors as in ``excess_mad``.
+    0.015 (Nigrini 2012, from memory) freed of noise. Arguments, interval and errors as in
+    ``excess_mad``.
     """
     return score_of(excess_mad(counts, p))
 
@@ -187,10 +199,11 @@ def score_of(excess: Estimate) -> Estimate:
 def band(view: str, counts: npt.ArrayLike, p: npt.ArrayLike) -> npt.NDArray[np.object_]:
     """Return the published band of a tally's raw MAD where the count lets it mean anything.
 
-    The cut-offs were made for large tallies of the law. They are given only where the 95 % quantile
-    of noise alone, about ``mad_expected + 1.05 / (K sqrt n)``, is within the first of them (from
-    some 3400 amounts for the lead digit, 1900 for the second digit, 5800 for the lead pair), so
-    that at most one honest stream in twenty is read as worse than close.
+    The cut-offs (Nigrini 2012, from memory) were made for large tallies of the law. They are given
+    only where the 95 % quantile of noise alone, about ``mad_expected + 1.05 / (K sqrt n)``, is
+    within the first of them (from some 3400 amounts for the lead digit, 1900 for the second digit,
+    5800 for the lead pair), so that at most one honest stream in twenty is read as worse than
+    close.
 
     Parameters
     ----------
@@ -227,6 +240,9 @@ def band(view: str, counts: npt.ArrayLike, p: npt.ArrayLike) -> npt.NDArray[np.o
 def spread(n: npt.ArrayLike, total: npt.ArrayLike, squares: npt.ArrayLike) -> FloatArray:
     """Return the sample standard deviation of log10(amount), in decades, from its sums.
 
+    Sums kept row by row lose digits: each is right within ``1.1e-16 n``, relative, so that equal
+    amounts may at worst show a spread of some ``1e-8 sqrt(n)`` times their log10.
+
     Parameters
     ----------
     n : array (...)
@@ -244,12 +260,15 @@ def spread(n: npt.ArrayLike, total: npt.ArrayLike, squares: npt.ArrayLike) -> Fl
     Raises
     ------
     ValueError
-        If n is not a whole number from 0 to 2**53.
+        If n is not a whole number from 0 to 2**53, or a sum is not finite.
     """
     count = checked_total(n)
-    safe = np.where(count > 1, count, np.nan)
     y = np.asarray(total, dtype=np.float64)
-    within = np.asarray(squares, dtype=np.float64) - y**2 / safe
+    y2 = np.asarray(squares, dtype=np.float64)
+    if not (np.all(np.isfinite(y)) and np.all(np.isfinite(y2))):
+        raise ValueError("total and squares must be finite sums")
+    safe = np.where(count > 1, count, np.nan)
+    within = y2 - y**2 / safe
     return np.asarray(np.sqrt(np.maximum(0, within) / (safe - 1)))
 
 

@@ -15,6 +15,7 @@ _POWERS = 10 ** np.arange(19, dtype=np.int64)
 
 IntArray = npt.NDArray[np.int64]
 FloatArray = npt.NDArray[np.float64]
+BoolArray = npt.NDArray[np.bool_]
 
 
 def decade(amounts: IntArray) -> IntArray:
@@ -33,11 +34,9 @@ def decade(amounts: IntArray) -> IntArray:
     Raises
     ------
     ValueError
-        If an amount is negative.
+        If an amount is negative or no integer.
     """
-    amounts = np.asarray(amounts, dtype=np.int64)
-    if amounts.size and int(amounts.min()) < 0:
-        raise ValueError("amounts must be 0 to 10**15 minor units, got a negative one")
+    amounts = _whole(amounts, 0)
     return np.searchsorted(_POWERS, amounts, side="right").astype(np.int64) - 1
 
 
@@ -55,26 +54,55 @@ def leading(amounts: IntArray, digits: int) -> IntArray:
     -------
     int64 array
         For 2 digits 10 to 99; -1 where the amount has fewer digits.
+
+    Raises
+    ------
+    ValueError
+        If an argument is outside its range.
     """
-    if not 1 <= digits <= 15:
-        raise ValueError(f"digits must be 1 to 15, got {digits}")
+    _check_digits(digits)
     shift = decade(amounts) - (digits - 1)
     return np.where(shift >= 0, amounts // _POWERS[np.maximum(shift, 0)], -1)
 
 
 def trailing(amounts: IntArray, digits: int) -> IntArray:
-    """Return the last ``digits`` digits of the integer, 0 to ``10**digits - 1``."""
-    if not 1 <= digits <= 15:
-        raise ValueError(f"digits must be 1 to 15, got {digits}")
-    return np.asarray(np.asarray(amounts, dtype=np.int64) % _POWERS[digits])
+    """Return the last ``digits`` digits of the integer, 0 to ``10**digits - 1``.
+
+    Parameters and errors as ``leading``, and an amount with fewer digits is padded with zeros.
+    """
+    _check_digits(digits)
+    return np.asarray(_whole(amounts, 0) % _POWERS[digits])
 
 
 def circle(amounts: IntArray) -> FloatArray:
-    """Return the fractional part of ``log10(amount)``, in [0, 1); amounts must be positive.
+    """Return the fractional part of ``log10(amount)``, in [0, 1).
 
-    The amount is first scaled into [1, 10) by its exact decade, so a power of ten gives 0.
+    The amount is first scaled into [1, 10) by its exact decade, so a power of ten gives 0. The law
+    of leading digits is the statement that this value is uniform (Newcomb 1881; Diaconis 1977,
+    *Ann. Probab.* 5, 72-81).
+
+    Parameters
+    ----------
+    amounts : int64 array, any shape
+        Minor units, 1 to 10**15.
+
+    Raises
+    ------
+    ValueError
+        If an amount is below 1 or no integer.
     """
-    amounts = np.asarray(amounts, dtype=np.int64)
-    if amounts.size and int(amounts.min()) < 1:
-        raise ValueError("amounts must be 1 to 10**15 minor units for the circle view")
+    amounts = _whole(amounts, 1)
     return np.asarray(np.log10(amounts / _POWERS[decade(amounts)].astype(np.float64)))
+
+
+def _whole(amounts: npt.ArrayLike, least: int) -> IntArray:
+    """Return amounts as int64; a fraction is refused rather than cut off."""
+    given = np.asarray(amounts)
+    if given.size and (given.dtype.kind not in "iu" or int(given.min()) < least):
+        raise ValueError(f"amounts must be whole numbers from {least} to 10**15 minor units")
+    return given.astype(np.int64, copy=False)
+
+
+def _check_digits(digits: int) -> None:
+    if digits not in range(1, 16):
+        raise ValueError(f"digits must be 1 to 15, got {digits}")

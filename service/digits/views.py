@@ -47,8 +47,13 @@ def cells_hit(amounts: IntArray) -> ViewCells:
     ----------
     amounts : int64 array (n,)
         Minor units, 0 to 10**15; zero is seen by no view.
+
+    Raises
+    ------
+    ValueError
+        If an amount is negative or no integer.
     """
-    amounts = np.asarray(amounts, dtype=np.int64)
+    amounts = np.asarray(amounts)
     lead = leading(amounts, 1)
     pair = leading(amounts, 2)
     return ViewCells(
@@ -59,7 +64,20 @@ def cells_hit(amounts: IntArray) -> ViewCells:
 
 
 def cell_label(cell: int) -> str:
-    """Return a cell's name within its view: ``"1"``, ``"49"``, ``"05"``."""
+    """Return a cell's name within its view: ``"1"``, ``"49"``, ``"05"``.
+
+    Parameters
+    ----------
+    cell : int
+        Number among all watched cells, 0 to 198.
+
+    Raises
+    ------
+    ValueError
+        If there is no such cell.
+    """
+    if not 0 <= cell < CELLS:
+        raise ValueError(f"cell must be 0 to {CELLS - 1}, got {cell}")
     if cell < LEAD_PAIR.start:
         return str(cell + 1)
     if cell < TAIL_PAIR.start:
