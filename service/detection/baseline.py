@@ -13,10 +13,13 @@ import numpy as np
 import numpy.typing as npt
 from scipy import special
 
-from service.detection.bank import LAW
+from service.detection.bank import LAW, RARE_VIEWS
 from service.digits.intervals import clopper_pearson_lower, clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED
+from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS
+
+BOUNDS = CELLS + len(RARE_VIEWS)
+"""Bounds that one baseline gives, over which its error is shared (Bonferroni)."""
 
 DISPERSION_LEVEL = 0.0001
 """A cell is over-dispersed if some block of a partition holds more of it than chance explains at
@@ -85,21 +88,99 @@ def own_bounds(
     if not 0 < alpha < 1:
         raise ValueError(f"alpha must be between 0 and 1, got {alpha}")
     n = rows[VIEW_OF_CELL]
-    level = alpha / CELLS
+    level = alpha / BOUNDS
     pooled = clopper_pearson_upper(count, n, level)
     share = np.divide(count, n, out=np.zeros(CELLS), where=n > 0)
     for partition in np.unique(block_partition):
         mine = block_partition == partition
-        blocks, nb = block_count[mine], block_rows[mine][:, VIEW_OF_CELL]
-        says = nb >= BLOCK_ROWS
-        chance = special.bdtrc(blocks - 1.0, np.maximum(nb, 1), share)  # P(as many or more)
-        unusual = says & (blocks > 0) & (chance < DISPERSION_LEVEL / max(len(blocks), 1))
-        dispersed = unusual.any(axis=0)
-        if dispersed.any():
-            upper = clopper_pearson_upper(blocks[:, dispersed], nb[:, dispersed], level)
-            largest = np.where(says[:, dispersed], upper, 0).max(axis=0)
-            pooled[dispersed] = np.maximum(pooled[dispersed], largest)
+        busiest = _burst_bound(block_count[mine], block_rows[mine][:, VIEW_OF_CELL], share, level)
+        pooled = np.maximum(pooled, busiest)
     return pooled
+
+
+def _burst_bound(count: IntArray, rows: IntArray, share: FloatArray, level: float) -> FloatArray:
+    """Return the largest bound among the blocks of one partition for cells that come in bursts.
+
+    Parameters
+    ----------
+    count, rows : int64 arrays (B, K)
+        Per block: in the cell, and seen by its view.
+    share : float64 array (K,)
+        Of all blocks together.
+
+    Returns
+    -------
+    float64 array (K,)
+        0 for a cell in which no block holds more than chance explains.
+    """
+    says = rows >= BLOCK_ROWS
+    chance = special.bdtrc(count - 1.0, np.maximum(rows, 1), share)  # P(as many or more)
+    burst = (says & (count > 0) & (chance < DISPERSION_LEVEL / max(len(count), 1))).any(axis=0)
+    bound = np.zeros(len(share))
+    if burst.any():
+        upper = clopper_pearson_upper(count[:, burst], rows[:, burst], level)
+        bound[burst] = np.where(says[:, burst], upper, 0).max(axis=0)
+    return bound
+
+
+def rare_cells(
+    block_count: IntArray, block_rows: IntArray, alpha: float
+) -> tuple[npt.NDArray[np.bool_], FloatArray]:
+    """Choose cells that the merchant hardly uses, and bound how often they come up together.
+
+    Each rare cell alone has a bound far above its share, so that invented amounts, spread over
+    all of them, stay below every one. Their joint share is small and is bounded well. The cells
+    are chosen by the even blocks of rows and their share is bounded by the odd ones, so that the
+    choice does not bias the bound. A view for which nothing is to be gained gets the bound 1.
+
+    Parameters
+    ----------
+    block_count : int64 array (B, 199)
+        Counts of blocks of consecutive rows, in order.
+    block_rows : int64 array (B, 3)
+        Rows of each block seen by each view.
+    alpha : float
+        Error probability of the baseline.
+
+    Returns
+    -------
+    rare : bool array (199,)
+    bound : float64 array (2,)
+        Joint upper bounds for lead pair and tail pair, tolerance not included.
+    """
+    rare = np.zeros(CELLS, dtype=bool)
+    bound = np.ones(len(RARE_VIEWS))
+    for place, view in enumerate(RARE_VIEWS):
+        cells = WATCHED[WATCHED_VIEWS[view]]
+        chosen = _rarest(block_count[::2, cells].sum(axis=0))
+        held = block_count[1::2, cells][:, chosen].sum(axis=1)
+        rows = block_rows[1::2, view]
+        seen = int(rows.sum())
+        if not chosen.any() or not seen:
+            continue
+        level = alpha / BOUNDS
+        upper = clopper_pearson_upper(held.sum(), seen, level)
+        share = np.array([held.sum() / seen])
+        burst = _burst_bound(held[:, None], rows[:, None], share, level)
+        bound[place] = max(float(upper), float(burst[0]))
+        rare[cells] = chosen
+    return rare, bound
+
+
+def _rarest(count: IntArray) -> npt.NDArray[np.bool_]:
+    """Return the cells, rarest first, on which an even spread of 30 % of the rows shows best."""
+    order = np.argsort(count, kind="stable")
+    size = np.arange(1, len(count))
+    share = (np.cumsum(count[order])[:-1] + 2.0) / (count.sum() + 4.0)  # less sure of few rows
+    mixed = 0.7 * share + 0.3 * size / len(count)
+    gain = mixed * np.log(mixed / share) + (1 - mixed) * np.log((1 - mixed) / (1 - share))
+    # cells of one count are alike, so they are taken together
+    whole = np.diff(count[order]) > 0
+    gain = np.where(whole & (mixed > share), gain, 0)
+    chosen = np.zeros(len(count), dtype=bool)
+    if gain.max() > 0:
+        chosen[order[: int(np.argmax(gain)) + 1]] = True
+    return chosen
 
 
 @dataclass(frozen=True)

@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from service.digits.significand import IntArray
-from service.digits.views import CELLS, WATCHED, WATCHED_VIEWS
+from service.digits.views import CELLS, WATCHED_VIEWS
 from service.streams.findings import Finding, findings
 from service.streams.rows import Rows
 from service.streams.rules import Rules
@@ -164,7 +164,7 @@ def _alarm(
     state: States, rules: Rules, part: Rows, i: int, evidence: float, name: bytes
 ) -> Crossing:
     s = int(part.slot[i])
-    found = findings(state[s], rules.tolerance[s], rules.active[s], rules.shapes[s])
+    found = findings(state[s], rules.tolerance[s], rules.active[s], rules.shapes[s], rules.rare[s])
     number = int(part.number[i])
     historic = bool(part.historic[i])
     if not state["alarm_crossings"][s]:
@@ -198,14 +198,11 @@ def _alarm(
 
 def _open(state: States, s: int, top: Finding, at: int) -> None:
     """Begin to count what goes on in the cells of a new alarm, from its onset."""
-    view = WATCHED_VIEWS.index(top.view)
-    first = WATCHED[top.view].start
-    lowest = 1 if top.view == "lead_digit" else 10 if top.view == "lead_pair" else 0
     state["alarm_severity"][s] = 0.0
     state["alarm_live"][s] = 0
-    state["alarm_view"][s] = view
+    state["alarm_view"][s] = WATCHED_VIEWS.index(top.view)
     state["alarm_cells"][s] = 0
-    state["alarm_cells"][s, [first + int(c) - lowest for c in top.cells]] = 1
+    state["alarm_cells"][s, list(top.members)] = 1
     state["alarm_share"][s] = top.expected
     state["alarm_hits"][s] = top.hits
     state["alarm_spent"][s] = top.spent

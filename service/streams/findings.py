@@ -15,6 +15,9 @@ from service.streams.state import BY_OWN, States
 NOTABLE = 0.05
 """Share of the evidence below which a view or shape is not mentioned."""
 
+MOST_CELLS = 9
+"""Cells named of a pattern that has many."""
+
 COMPANION = 0.25
 """Cells that carry at least so much of the strongest cell's evidence are named with it."""
 
@@ -27,9 +30,12 @@ class Finding:
     ----------
     view : str
     pattern : str
-        ``cell`` or ``shape``.
+        ``cell``, ``rare_cells`` or ``shape``.
     cells : tuple of str
-        Strongest first; for a shape the cells most in excess under it.
+        Strongest first; of rare cells those that came up most; for a shape the cells most in
+        excess under it.
+    members : tuple of int
+        Numbers of all cells whose rows are counted for it.
     weight : float
         Share of the whole evidence, 0 to 1.
     onset_row : int
@@ -55,6 +61,7 @@ class Finding:
     view: str
     pattern: str
     cells: tuple[str, ...]
+    members: tuple[int, ...]
     weight: float
     onset_row: int
     onset_at: int
@@ -82,7 +89,11 @@ def evidence_of_cells(state: States) -> FloatArray:
 
 
 def findings(
-    state: States, tolerance: FloatArray, active: FloatArray, shapes: FloatArray
+    state: States,
+    tolerance: FloatArray,
+    active: FloatArray,
+    shapes: FloatArray,
+    rare: FloatArray,
 ) -> list[Finding]:
     """Return what carries one stream's evidence, strongest first.
 
@@ -93,16 +104,24 @@ def findings(
         Of the watched views.
     shapes : float64 array (14,)
         Weights of the shape detectors in force.
+    rare : float64 array (2,)
+        Weights of the rare cells detectors in force.
     """
     cells = evidence_of_cells(state) * active[VIEW_OF_CELL]
     shape = state["shape"] * shapes
-    whole = float(cells.sum() + shape.sum())
+    scarce = state["rare_value"].mean(axis=-1) * rare
+    whole = float(cells.sum() + shape.sum() + scarce.sum())
     if whole <= 0:
         return []
     found = [
         _cells(state, view, cells, whole, float(tolerance[view]))
         for view, part in enumerate(WATCHED.values())
         if cells[part].sum() >= NOTABLE * whole
+    ]
+    found += [
+        _rare(state, place, float(scarce[place]) / whole, float(tolerance[view]))
+        for place, view in enumerate(bank.RARE_VIEWS)
+        if scarce[place] >= NOTABLE * whole
     ]
     if shape.sum() >= NOTABLE * whole:
         found.append(_shape(state, shape, whole, float(tolerance[1])))
@@ -141,6 +160,7 @@ def _cells(
         view=name,
         pattern="cell",
         cells=tuple(cell_label(part.start + int(k)) for k in chosen),
+        members=tuple(part.start + int(k) for k in chosen),
         weight=float(mine.sum()) / whole,
         onset_row=onset,
         onset_at=int(state["onset_at"][part][first]),
@@ -155,15 +175,42 @@ def _cells(
     )
 
 
+def _rare(state: States, place: int, weight: float, tolerance: float) -> Finding:
+    view = bank.RARE_VIEWS[place]
+    part = WATCHED[WATCHED_VIEWS[view]]
+    members = part.start + np.flatnonzero(state["rare"][part])
+    often = members[np.argsort(-state["run"][members].astype(np.int64), kind="stable")]
+    base = state["base"].astype(np.float64)
+    seen = max(int(state["rare_seen"][place]), 1)
+    return Finding(
+        view=WATCHED_VIEWS[view],
+        pattern="rare_cells",
+        cells=tuple(cell_label(int(k)) for k in often[:MOST_CELLS]),
+        members=tuple(members.tolist()),
+        weight=weight,
+        onset_row=max(int(state["rare_onset"][place]), 1),
+        onset_at=int(state["rare_onset_at"][place]) or int(state["first_at"]),
+        observed=int(state["rare_hits"][place]) / seen,
+        expected=float(base[members].sum() / max(base[part].sum(), 1.0)),
+        bound=min(float(state["rare_bound"][place]) * (1 + tolerance), 1.0),
+        reference="own",
+        severity=float(state["rare_cusum"][place]),
+        hits=int(state["rare_hits"][place]),
+        seen=seen,
+        spent=float(state["rare_spent"][place]),
+    )
+
+
 def _shape(state: States, evidence: FloatArray, whole: float, tolerance: float) -> Finding:
     j = int(np.argmax(evidence))
     label, share, bound = _reference(state, 1)
     q = bank.alternatives(share + 1e-12)[0][j]
-    most = np.argsort(-(q - share), kind="stable")[:9]
+    most = np.argsort(-(q - share), kind="stable")[:MOST_CELLS]
     return Finding(
         view="lead_pair",
         pattern="shape",
         cells=tuple(cell_label(LEAD_PAIR.start + int(k)) for k in most),
+        members=tuple(LEAD_PAIR.start + int(k) for k in most),
         weight=float(evidence.sum()) / whole,
         onset_row=max(int(state["shape_onset"][j]), 1),
         onset_at=int(state["shape_onset_at"][j]) or int(state["first_at"]),

@@ -20,7 +20,7 @@ from service.streams.learning import decide, learn, until_complete
 from service.streams.record import Records
 from service.streams.rows import Rows, columns
 from service.streams.rules import Rules, adopt, refresh
-from service.streams.running import Cells, Running, Shapes, evaluate
+from service.streams.running import Cells, Rare, Running, Shapes, evaluate
 from service.streams.state import Folded, States
 from service.streams.window import tally
 
@@ -139,6 +139,8 @@ def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.b
     number = _row_numbers(state, part)
     state["sums"][streams] = path.sums[:, last].T.reshape(-1, 3, 3)
     _apply_shapes(state, part, path.shapes, number, streams, last)
+    if path.rare is not None:
+        _apply_rare(state, part, path.rare, number, streams, last)
     used = consumed[path.cells.row]
     _apply_cells(state, part, path.cells, number, used)
     clock = np.stack(
@@ -174,6 +176,37 @@ def _apply_shapes(
     )
     state["shape_onset_at"][streams] = np.where(
         rested, part.at[rest], state["shape_onset_at"][streams]
+    )
+
+
+def _apply_rare(
+    state: States,
+    part: Rows,
+    rare: Rare,
+    number: IntArray,
+    streams: IntArray,
+    last: IntArray,
+) -> None:
+    begin = np.searchsorted(part.slot, streams)
+    rest = rare.rest[:, last].T
+    rested = rest >= 0
+    since = np.where(rested, rest, begin[:, None] - 1)  # rows after this one are new to the run
+    for name, amount in (
+        ("rare_hits", rare.member.astype(np.int64)),
+        ("rare_spent", rare.member * part.amount.astype(np.float64)),
+        ("rare_seen", rare.seen.astype(np.int64)),
+    ):
+        so_far = np.concatenate([np.zeros((len(amount), 1), amount.dtype), amount], axis=1)
+        so_far = np.cumsum(so_far, axis=1)
+        new = np.stack(
+            [so_far[j, last + 1] - so_far[j, since[:, j] + 1] for j in range(len(amount))], axis=1
+        )
+        state[name][streams] = np.where(rested, 0, state[name][streams]) + new
+    state["rare_value"][streams] = np.moveaxis(rare.value[..., last], -1, 0)
+    state["rare_cusum"][streams] = rare.cusum[:, last].T
+    state["rare_onset"][streams] = np.where(rested, number[rest] + 1, state["rare_onset"][streams])
+    state["rare_onset_at"][streams] = np.where(
+        rested, part.at[rest], state["rare_onset_at"][streams]
     )
 
 

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import numpy as np
+import numpy.typing as npt
 
-from service.detection.baseline import law_verdict, own_bounds, spent_alpha
+from service.detection.baseline import law_verdict, own_bounds, rare_cells, spent_alpha
 from service.detection.policy import Policy
-from service.digits.significand import IntArray
+from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, WATCHED
 from service.streams.rows import Rows
 from service.streams.rules import DAY_MS, Rules, choose_references
@@ -136,8 +137,11 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     seen = np.stack([per_block[:, cells].sum(axis=1) for cells in WATCHED.values()], axis=1)
     partition = np.searchsorted([HOUR_BLOCK, WEEKDAY_BLOCK], table, side="right")
     bounds = own_bounds(count, rows, per_block, seen, partition, alpha)
-    rounded = bounds.astype(np.float32)
-    state["bound"][s] = np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)
+    runs = partition == 0
+    rare, joint = rare_cells(per_block[runs], seen[runs], alpha)
+    state["bound"][s] = _rounded_up(bounds)
+    state["rare"][s] = rare
+    state["rare_bound"][s] = _rounded_up(joint)
     verdict = law_verdict(
         count,
         rows,
@@ -151,3 +155,8 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     folded.buckets = folded.buckets.where(~blocks)
     choose_references(state, np.array([s]), policy)
     restart(state, s, at)
+
+
+def _rounded_up(bounds: FloatArray) -> npt.NDArray[np.float32]:
+    rounded = bounds.astype(np.float32)
+    return np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)

@@ -30,6 +30,7 @@ class Rules:
     watching: npt.NDArray[np.bool_]  # (n,) flows that may raise alarms
     active: FloatArray  # (n, 3), 1 for a view that counts
     shapes: FloatArray  # (n, 14), weights of the shape detectors
+    rare: FloatArray  # (n, 2), weights of the rare cells detectors
     size: IntArray  # (n,) rows and span of a complete baseline
     span: IntArray
 
@@ -41,6 +42,7 @@ class Rules:
             np.zeros(n, bool),
             np.zeros((n, 3)),
             np.zeros((n, bank.SHAPES)),
+            np.zeros((n, len(bank.RARE_VIEWS))),
             np.zeros(n, np.int64),
             np.zeros(n, np.int64),
         )
@@ -109,7 +111,7 @@ def refresh(
     rules.tolerance[slots] = policy.tolerances()
     rules.threshold[slots] = policy.transactions_per_false_alarm
     rules.watching[slots] = [policy.watches(flows[s]) for s in slots.tolist()]
-    rules.active[slots], rules.shapes[slots] = weights(state, slots, policy)
+    rules.active[slots], rules.shapes[slots], rules.rare[slots] = weights(state, slots, policy)
     rules.size[slots] = policy.baseline_size
     rules.span[slots] = int(policy.baseline_days * DAY_MS)
 

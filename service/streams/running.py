@@ -70,6 +70,28 @@ class Shapes:
 
 
 @dataclass(frozen=True)
+class Rare:
+    """Rare cells detectors after every row.
+
+    Attributes
+    ----------
+    value : float64 array (2, 2, n)
+        By view and contamination.
+    cusum : float64 array (2, n)
+    rest : int64 array (2, n)
+        As of `Shapes`.
+    seen, member : bool arrays (2, n)
+        Rows that a detector sees, and those of them that are in a rare cell.
+    """
+
+    value: FloatArray
+    cusum: FloatArray
+    rest: IntArray
+    seen: npt.NDArray[np.bool_]
+    member: npt.NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
 class Running:
     """Every detector after every row of a pass.
 
@@ -81,12 +103,15 @@ class Running:
         Weighted sums of the cells, by view and contamination.
     cells : Cells
     shapes : Shapes
+    rare : Rare or None
+        None where no stream of the pass has such detectors in force.
     """
 
     total: FloatArray
     sums: FloatArray
     cells: Cells
     shapes: Shapes
+    rare: Rare | None
 
 
 def evaluate(state: States, rules: Rules, part: Rows) -> Running:
@@ -111,10 +136,14 @@ def evaluate(state: States, rules: Rules, part: Rows) -> Running:
     by_view = sums.reshape(3, 3, n).sum(axis=1)
     total = (by_view * rules.active[part.slot].T).sum(axis=0)
     total += (shape * rules.shapes[part.slot].T).sum(axis=0)
-    cusum = _shape_cusum(state, part, first, longest, ratio)
-    rest = np.maximum.accumulate(np.where(cusum <= 0, np.arange(n), -1), axis=1)
-    shapes = Shapes(shape, cusum, np.where(rest >= begin, rest, -1))
-    return Running(total, sums, cells, shapes)
+    stored = state["shape_cusum"].T[:, part.slot[first]]
+    cusum = _cusum(stored, first, longest, np.log(ratio))
+    shapes = Shapes(shape, cusum, _last_rest(cusum, begin))
+    rare = None
+    if rules.rare[part.slot[first]].any():
+        rare = _rare(state, rules, part, first, begin, longest)
+        total += (rare.value.mean(axis=1) * rules.rare[part.slot].T).sum(axis=0)
+    return Running(total, sums, cells, shapes, rare)
 
 
 def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
@@ -192,19 +221,49 @@ def _values(
     return affine_path(a, b, longest)
 
 
-def _shape_cusum(
+def _rare(
     state: States,
+    rules: Rules,
     part: Rows,
     first: npt.NDArray[np.bool_],
+    begin: IntArray,
     longest: int,
-    ratio: FloatArray,
+) -> Rare:
+    """Run the rare cells detectors: ``L = (1 - eps) + eps 1{rare} / u`` with their joint bound."""
+    views = list(bank.RARE_VIEWS)
+    slot, cell = part.slot, part.cell[views]
+    seen = (cell >= 0) & (rules.rare[slot].T > 0)
+    member = seen & (state["rare"][slot, np.maximum(cell, 0)] > 0)
+    tolerance = rules.tolerance[slot][:, views].T
+    u = np.minimum(state["rare_bound"][slot].T.astype(np.float64) * (1 + tolerance), 1.0)
+    u = np.where(seen, u, 1.0)
+    eps = bank.RARE_EPSILONS[None, :, None]
+    ratio = (1 - eps) + eps * (member / u)[:, None, :]
+    a = np.where(seen[:, None, :], ratio, 1.0)
+    b = np.where(seen[:, None, :], ratio, 0.0)
+    b[..., first] += a[..., first] * np.moveaxis(state["rare_value"][slot[first]], 0, -1)
+    a[..., first] = 0
+    value = affine_path(a, b, longest)
+    step = np.log(bank.CUSUM_RETAINED + bank.CUSUM_GAIN * member / u) * seen
+    cusum = _cusum(state["rare_cusum"].T[:, slot[first]], first, longest, step)
+    rest = np.where(rules.rare[slot].T > 0, _last_rest(cusum, begin), -1)
+    return Rare(value, cusum, rest, seen, member)
+
+
+def _cusum(
+    stored: FloatArray, first: npt.NDArray[np.bool_], longest: int, step: FloatArray
 ) -> FloatArray:
-    step = np.log(ratio)
+    """Run CUSUMs over rows: ``stored`` (J, streams) are their values before, ``step`` (J, n)."""
     floor = np.zeros_like(step)
-    stored = state["shape_cusum"].T[:, part.slot[first]]
     floor[:, first] = np.maximum(stored + step[:, first], 0)
     step[:, first] = -np.inf
     return cusum_path(step, floor, longest)
+
+
+def _last_rest(cusum: FloatArray, begin: IntArray) -> IntArray:
+    """Return for every row the last one of its stream, so far, at which the CUSUM was zero."""
+    rest = np.maximum.accumulate(np.where(cusum <= 0, np.arange(cusum.shape[1]), -1), axis=1)
+    return np.where(rest >= begin, rest, -1)
 
 
 def _shape_ratios(state: States, rules: Rules, part: Rows) -> FloatArray:

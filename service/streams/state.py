@@ -12,11 +12,12 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.bank import SHAPES
+from service.detection.bank import RARE_VIEWS, SHAPES
 from service.digits.significand import IntArray
 from service.digits.views import CELLS, VIEW_OF_CELL
 
 FORMAT = 1
+RARE = len(RARE_VIEWS)
 
 UNDECIDED, BY_LAW, BY_OWN = 0, 1, 2
 """What a view is compared with; undecided while its baseline is being learned."""
@@ -44,6 +45,13 @@ STATE = np.dtype(
         ("shape_cusum", "<f8", SHAPES),
         ("shape_onset", "<i8", SHAPES),
         ("shape_onset_at", "<i8", SHAPES),  # event time of the row before it
+        ("rare_value", "<f8", (RARE, 2)),  # of the rare cells detectors, by view and contamination
+        ("rare_cusum", "<f8", RARE),
+        ("rare_onset", "<i8", RARE),
+        ("rare_onset_at", "<i8", RARE),
+        ("rare_hits", "<i8", RARE),  # since onset, and their amounts, and rows seen by the view
+        ("rare_spent", "<f8", RARE),
+        ("rare_seen", "<i8", RARE),
         ("value", "<f8", (CELLS, 3)),  # of a cell's detectors right after its last hit
         ("hit", "<i8", CELLS),  # the view's clock at the cell's last hit or the last restart
         ("cusum", "<f8", CELLS),  # after the last hit
@@ -65,6 +73,8 @@ STATE = np.dtype(
         ("base", "<u4", CELLS),  # the baseline's counts
         ("bound", "<f4", CELLS),  # own upper bounds, before tolerance
         ("excepted", "u1", CELLS),  # cells with their own bound though the law was accepted
+        ("rare", "u1", CELLS),  # cells hardly used in the baseline
+        ("rare_bound", "<f4", RARE),  # of their joint share; 0 before there is a baseline
         ("shape_scale", "<f8", SHAPES),  # c of the projection; infinite for a dropped detector
         ("shape_norm", "<f8", SHAPES),  # z of the alternative
         # the open alarm
@@ -282,6 +292,13 @@ def restart(state: States, s: int, at: int) -> None:
     state["shape_cusum"][s] = 0
     state["shape_onset"][s] = state["rows"][s] + 1
     state["shape_onset_at"][s] = at
+    state["rare_value"][s] = 0
+    state["rare_cusum"][s] = 0
+    state["rare_onset"][s] = state["rows"][s] + 1
+    state["rare_onset_at"][s] = at
+    state["rare_hits"][s] = 0
+    state["rare_spent"][s] = 0
+    state["rare_seen"][s] = 0
     state["value"][s] = 0
     state["hit"][s] = state["clock"][s][VIEW_OF_CELL]
     state["cusum"][s] = 0

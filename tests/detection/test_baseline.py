@@ -9,15 +9,19 @@ from statsmodels.stats.proportion import proportion_confint
 
 from service.detection.bank import LAW
 from service.detection.baseline import (
+    BOUNDS,
     REFUTING_LEVEL,
     exceptions,
     law_verdict,
     own_bounds,
     own_shares,
+    rare_cells,
     spent_alpha,
 )
 from service.detection.policy import Policy
 from service.digits.views import CELLS, LEAD_PAIR, TAIL_PAIR, WATCHED
+from service.streams.state import BY_OWN
+from tests.streams.plain import cells_of
 from tests.streams.test_fold import START, law_amounts, records, run
 
 DAY = 86_400_000
@@ -35,11 +39,11 @@ def test_bounds_are_clopper_pearson_at_the_bonferroni_level() -> None:
     count = counts_of(np.random.default_rng(0), 1000)
     alpha = 0.0005
     bounds = own_bounds(count, np.full(3, 1000), *NO_BLOCKS, alpha)
-    _, upper = proportion_confint(count, 1000, alpha=2 * alpha / CELLS, method="beta")
+    _, upper = proportion_confint(count, 1000, alpha=2 * alpha / BOUNDS, method="beta")
     np.testing.assert_allclose(bounds, upper, rtol=1e-9)
     never = count == 0
     assert never.any()
-    np.testing.assert_allclose(bounds[never], 1 - (alpha / CELLS) ** (1 / 1000), rtol=1e-12)
+    np.testing.assert_allclose(bounds[never], 1 - (alpha / BOUNDS) ** (1 / 1000), rtol=1e-12)
 
 
 def test_a_view_without_rows_bounds_nothing() -> None:
@@ -74,7 +78,7 @@ def test_a_cell_that_comes_in_bursts_gets_its_busiest_block() -> None:
     bounds = own_bounds(
         blocks.sum(axis=0), rows.sum(axis=0), blocks, rows, np.zeros(10, int), alpha
     )
-    _, busiest = proportion_confint(blocks[3, 20], 100, alpha=2 * alpha / CELLS, method="beta")
+    _, busiest = proportion_confint(blocks[3, 20], 100, alpha=2 * alpha / BOUNDS, method="beta")
     assert bounds[20] == pytest.approx(busiest)
     pooled = own_bounds(blocks.sum(axis=0), rows.sum(axis=0), *NO_BLOCKS, alpha)
     assert bounds[20] > 3 * pooled[20]
@@ -164,3 +168,70 @@ def test_a_merchant_near_the_law_is_not_judged_by_the_law_where_it_differs() -> 
     ending = TAIL_PAIR.start + 99
     assert folded.state["excepted"][:, ending].mean() > 0.7
     assert folded.state["excepted"][:, LEAD_PAIR].mean() < 0.3
+
+
+def test_rare_cells_are_bounded_together_with_the_stated_confidence() -> None:
+    # chosen by one half and bounded by the other, so that the choice does not bias the bound
+    rng = np.random.default_rng(9)
+    shares = np.concatenate([np.sort(rng.dirichlet(np.full(k, 0.3))) for k in (9, 90, 100)])
+    missed, alpha, trials = 0, 0.5, 600
+    for _ in range(trials):
+        blocks = np.stack([counts_of(rng, 64, shares) for _ in range(16)])
+        rare, bound = rare_cells(blocks, np.full((16, 3), 64), alpha)
+        truth = [shares[cells][rare[cells]].sum() for cells in (LEAD_PAIR, TAIL_PAIR)]
+        missed += sum(b < t for b, t in zip(bound, truth, strict=True))
+        assert rare[LEAD_PAIR].any()
+        assert not rare[: LEAD_PAIR.start].any()
+    level = 2 * alpha / BOUNDS
+    assert missed <= trials * level + 4 * np.sqrt(trials * level) + 1
+
+
+def test_an_even_spread_has_no_rare_cells() -> None:
+    rng = np.random.default_rng(10)
+    blocks = np.stack([counts_of(rng, 1000, np.ones(CELLS)) for _ in range(16)])
+    rare, bound = rare_cells(blocks, np.full((16, 3), 1000), 0.0005)
+    assert np.all(bound[rare[[LEAD_PAIR.start, TAIL_PAIR.start]]] > 0.1)
+    assert rare_cells(np.zeros((0, CELLS), int), np.zeros((0, 3), int), 0.01)[1].tolist() == [1, 1]
+
+
+def test_invented_amounts_are_found_against_an_own_baseline() -> None:
+    # no single cell can find them: each rare cell's own bound is far above its share of them
+    rng = np.random.default_rng(11)
+    streams, clean, rows = 20, 2500, 3500
+    prices = np.unique(np.concatenate([np.arange(99, 3000, 100), np.arange(500, 10_000, 500)]))
+    at = START + np.arange(rows) * 15 * 60_000
+    amounts = rng.choice(prices, (streams, rows))
+    bad = (np.arange(rows) >= clean) & (rng.random((streams, rows)) < 0.3)
+    invented = rng.integers(1000, 10_000, (streams, rows))
+    logs = [records(a, at=at) for a in np.where(bad, invented, amounts)]
+    _, crossings = run(logs, {1: Policy()})
+    assert {c.slot for c in crossings} == set(range(streams))
+    first = [next(c for c in crossings if c.slot == s) for s in range(streams)]
+    assert all(clean < c.rows < clean + 300 for c in first)
+    assert {c.findings[0].pattern for c in first} == {"rare_cells"}
+    told = first[0].findings[0]
+    assert told.observed > told.bound > told.expected
+    assert len(told.members) > len(told.cells) == 9
+    assert clean - 30 < told.onset_row <= first[0].rows
+
+
+def test_rare_cells_obey_their_recurrence() -> None:
+    rng = np.random.default_rng(12)
+    n = 2400
+    prices = np.array([199, 299, 499, 999, 1499, 2499, 4999, 9999])
+    amounts = np.where(rng.random(n) < 0.02, rng.integers(1000, 10_000, n), rng.choice(prices, n))
+    log = records(amounts, at=START + np.arange(n) * 15 * 60_000)
+    folded, crossings = run([log], {1: Policy(transactions_per_false_alarm=1e9)})
+    assert not crossings
+    state = folded.state[0]
+    assert np.all(state["reference"] == BY_OWN)
+    learned = int(state["base_rows"])
+    for place, (view, tolerance) in enumerate(((1, 0.10), (2, 0.05))):
+        u = float(state["rare_bound"][place]) * (1 + tolerance)
+        for e, eps in enumerate((0.12, 0.40)):
+            value = 0.0
+            for amount in amounts[learned:].tolist():
+                cell = cells_of(amount)[view]
+                if cell >= 0:
+                    value = (1 + value) * (1 - eps + eps * bool(state["rare"][cell]) / u)
+            assert state["rare_value"][place, e] == pytest.approx(value, rel=1e-9)

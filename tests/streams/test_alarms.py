@@ -35,6 +35,7 @@ def finding(**changes) -> Finding:
         "view": "lead_pair",
         "pattern": "cell",
         "cells": ("49",),
+        "members": (48,),
         "weight": 0.9,
         "onset_row": 2072,
         "onset_at": NINE_14,

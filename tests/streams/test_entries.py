@@ -148,7 +148,7 @@ def test_the_window_forgets_by_itself_and_keeps_every_row_of_seven_days() -> Non
 def test_baseline_blocks_are_not_the_window() -> None:
     n = 100
     folded, _ = run([records(np.full(n, 1234), at=spread(n, 1))], {1: AUTO})
-    assert folded.buckets.count[folded.buckets.cell == 0].sum() == 3 * n
+    assert folded.buckets.count[folded.buckets.cell == 0].sum() == 4 * n
     for cells in (slice(0, 9), slice(9, 99), slice(99, 199)):
         assert window_counts(folded, cells, START + DAY).sum() == n
 
@@ -165,6 +165,10 @@ def test_evidence_is_the_weighted_sum_of_what_is_in_force(town) -> None:
         if counts[1]:
             on = np.isfinite(state["shape_scale"][s])
             total += (state["shape"][s] * bank.SHAPE_WEIGHTS)[on].sum()
+        for place, view in enumerate((1, 2)):
+            own = state["reference"][s, view] == BY_OWN
+            if counts[view] and own and 0 < state["rare_bound"][s, place] < 0.5:
+                total += 0.016 * state["rare_value"][s, place].mean()
         # a resting alarm's values reach the ceiling, where they are held apart from each other
         expected = min(math.log10(max(1.0, total)), 90)
         assert min(got[s], 90) == pytest.approx(expected, abs=0.0051)
