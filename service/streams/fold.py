@@ -21,7 +21,7 @@ from service.streams.record import Records
 from service.streams.rows import Rows, columns
 from service.streams.rules import Rules, adopt, refresh
 from service.streams.running import Cells, Rare, Running, Shapes, evaluate
-from service.streams.state import Folded, States
+from service.streams.state import UNDECIDED, Folded, States
 from service.streams.window import tally
 
 PASS_ROWS = 2 * PAUSE_ROWS
@@ -148,6 +148,7 @@ def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.b
     )
     state["circle"][streams] += np.add.reduceat(part.wave[:, rows], starts, axis=1).T
     learn(folded, part, rows, streams, starts)
+    _compare_neighbours(state, part, rows)
     follow(state, part, path.cells.row[used], path.cells.key[used], clock)
     state["rows"] += np.bincount(slot, minlength=n)
     state["clock"] += clock
@@ -157,6 +158,22 @@ def _row_numbers(state: States, part: Rows) -> IntArray:
     """Return each row's number among its stream's rows with an amount, from 1."""
     rank = np.arange(len(part.slot)) - np.searchsorted(part.slot, part.slot)
     return np.asarray(state["rows"][part.slot] + rank + 1)
+
+
+def _compare_neighbours(state: States, part: Rows, rows: IntArray) -> None:
+    """Count how often a row has the lead pair of the one before, in streams that have learned."""
+    learned = np.all(state["reference"] != UNDECIDED, axis=1)
+    seen = rows[(part.cell[1, rows] >= 0) & learned[part.slot[rows]]]
+    if not seen.size:
+        return
+    slot, pair = part.slot[seen], part.cell[1, seen]
+    first = np.concatenate([[True], slot[1:] != slot[:-1]])
+    before = np.where(first, state["neighbour"][slot], np.roll(pair, 1))
+    n = len(state)
+    state["neighbours"] += np.bincount(slot[before > 0], minlength=n)
+    state["repeats"] += np.bincount(slot[before == pair], minlength=n)
+    last = np.concatenate([slot[1:] != slot[:-1], [True]])
+    state["neighbour"][slot[last]] = pair[last]
 
 
 def _apply_shapes(

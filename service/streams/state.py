@@ -77,6 +77,10 @@ STATE = np.dtype(
         ("rare_bound", "<f4", RARE),  # of their joint share; 0 before there is a baseline
         ("shape_scale", "<f8", SHAPES),  # c of the projection; infinite for a dropped detector
         ("shape_norm", "<f8", SHAPES),  # z of the alternative
+        # dependence between neighbours, counted once a baseline is complete
+        ("neighbour", "<i8"),  # lead pair of the last row that has one, 0 for none
+        ("neighbours", "<i8"),  # rows compared with the one before, and those of the same pair
+        ("repeats", "<i8"),
         # the open alarm
         ("alarm", "S16"),  # id, binary; empty for none
         ("alarm_crossings", "<u4"),

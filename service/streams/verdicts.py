@@ -10,7 +10,7 @@ from service.detection.baseline import HARMONICS_FROM, law_verdict, spent_alpha
 from service.detection.policy import Policy
 from service.digits.intervals import always_valid
 from service.digits.significand import IntArray
-from service.digits.views import TAIL_PAIR, WATCHED, WATCHED_VIEWS, cell_label
+from service.digits.views import LEAD_PAIR, TAIL_PAIR, WATCHED, WATCHED_VIEWS, cell_label
 from service.streams.explanation import percent
 from service.streams.fit import bounds
 from service.streams.record import Stream
@@ -28,6 +28,13 @@ from service.streams.state import (
 
 WEEK_DAYS = 7
 """Days that a baseline must span to have seen a merchant's week."""
+
+NEIGHBOURS_FROM = 300
+"""Rows below which nothing is said about neighbours."""
+DEPENDENT_Z = 4.0
+"""Standard errors from which repeated neighbours are no chance."""
+DOUBTFUL_REPEATS, VOID_REPEATS = 1.2, 2.0
+"""How many times as often as chance neighbours repeat before the promise is doubtful, or void."""
 
 _TAIL = WATCHED_VIEWS.index("tail_pair")
 _VERB = {"lead_digit": "begin with", "lead_pair": "begin with", "tail_pair": "end in"}
@@ -97,7 +104,8 @@ def law_applies(state: States, policy: Policy) -> dict[str, str]:
 def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
     """Say whether the condition of the false-alarm promise is plausible for one stream.
 
-    Serial dependence of the amounts is not measured, and the reason says so where it matters.
+    Serial dependence is looked for in neighbours only: how often a row begins with the two digits
+    of the one before, against what the shares of the pairs let one expect.
 
     Parameters
     ----------
@@ -138,10 +146,38 @@ def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
         doubt, ground = _law_taken(state, policy, by_law)
         doubts += doubt
         grounds += ground
+    ratio, z = dependence(state)
+    if z > DEPENDENT_Z and ratio > DOUBTFUL_REPEATS:
+        doubts.append(
+            f"Amounts that begin alike follow each other {ratio:.1f} times as often as chance "
+            "would have it, so bursts may raise alarms without cause."
+        )
+        if ratio > VOID_REPEATS:
+            return {"status": "void", "reason": " ".join(doubts + grounds)}
     if doubts:
         return {"status": "doubtful", "reason": " ".join(doubts + grounds)}
-    grounds.append("Dependence between neighbouring amounts is not measured.")
+    if int(state["neighbours"]) < NEIGHBOURS_FROM:
+        grounds.append("There are too few rows yet to see whether neighbours depend on each other.")
+    else:
+        grounds.append("Neighbouring amounts do not depend on each other visibly.")
     return {"status": "holds", "reason": " ".join(grounds)}
+
+
+def dependence(state: States) -> tuple[float, float]:
+    """Return how often neighbours repeat their lead pair, as a multiple of chance, and its z.
+
+    Were rows independent, a row would repeat the pair before it with probability
+    ``sum p_k**2``; the shares are those of the stream's life. 1 and 0 where nothing is known.
+    """
+    n = int(state["neighbours"])
+    counts = state["count"][LEAD_PAIR].astype(np.float64)
+    if n < NEIGHBOURS_FROM or not counts.sum():
+        return 1.0, 0.0
+    chance = float(((counts / counts.sum()) ** 2).sum())
+    if chance >= 1:
+        return 1.0, 0.0
+    repeats = int(state["repeats"])
+    return repeats / n / chance, (repeats - n * chance) / float(np.sqrt(n * chance * (1 - chance)))
 
 
 def _short(state: States, policy: Policy) -> list[str]:

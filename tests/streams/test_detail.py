@@ -182,7 +182,7 @@ def test_a_shop_is_promised_with_the_stated_confidence() -> None:
     assert found["guarantee"]["status"] == "holds"
     # The first baseline may spend half of 1 - 0.9995.
     assert "confidence 0.99975" in found["guarantee"]["reason"]
-    assert "not measured" in found["guarantee"]["reason"]
+    assert "do not depend on each other visibly" in found["guarantee"]["reason"]
 
 
 def test_a_baseline_of_a_morning_is_doubtful() -> None:
@@ -272,3 +272,16 @@ def test_a_stricter_policy_makes_an_old_baseline_short() -> None:
     assert found["guarantee"]["status"] == "doubtful"
     assert "shorter than the policy asks" in found["guarantee"]["reason"]
     assert found["policy_version"] == 2
+
+
+def test_bursts_void_the_guarantee_and_chance_does_not() -> None:
+    rng = np.random.default_rng(61)
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], 4000)
+    steady = of(shop, Policy(reference="own"), 40)["guarantee"]
+    assert steady["status"] == "holds"
+    bursts = np.repeat(shop[:1000], 4)  # each customer buys the same thing four times
+    broken = of(bursts, Policy(reference="own"), 40)["guarantee"]
+    assert broken["status"] == "void"
+    assert "follow each other" in broken["reason"]
+    some = np.where(rng.random(4000) < 0.05, np.roll(shop, 1), shop)
+    assert of(some, Policy(reference="own"), 40)["guarantee"]["status"] in ("holds", "doubtful")
