@@ -63,7 +63,7 @@ def business_of(kind: str, i: int, seed: int) -> list[Row]:
         if chance < 0.15 and amount:
             row["amount"] = -amount
         if chance < 0.6:
-            ago = timedelta(hours=float(rng.choice([1, 30, 100, 200, 400])))
+            ago = timedelta(hours=float(rng.choice([1, 30, 165, 200, 400])))
             row["at"] = (now - ago).isoformat()
         rows.append(row)
     return rows
