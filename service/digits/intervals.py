@@ -2,14 +2,26 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
 import numpy.typing as npt
-from scipy.special import betainccinv, betaincinv, betaln, xlogy
+from scipy.special import (
+    betainc,
+    betaincc,
+    betainccinv,
+    betaincinv,
+    betaln,
+    expit,
+    xlogy,
+)
 
 from service.digits.significand import FloatArray
 from service.digits.tally import checked_counts, checked_total, nan_if_empty
+
+_TAIL_ERROR = 1e-6
+"""Relative error of alpha up to which a bound is taken as found."""
 
 
 class Interval(NamedTuple):
@@ -36,6 +48,7 @@ def clopper_pearson_upper(
         Amounts in all; for counts (..., K) pass n (..., 1).
     alpha : array
         Chance that the bound is below the true share, above 0 and below 1; as small as 1e-300.
+        It is met within 1e-6, relative.
 
     Returns
     -------
@@ -48,7 +61,9 @@ def clopper_pearson_upper(
         If an argument is outside its range.
     """
     c, total, a = _checked_shares(counts, n, alpha)
-    inside = betainccinv(c + 1, np.maximum(total - c, 1), a)  # complement: keeps a small alpha
+    more, rest = c + 1, np.maximum(total - c, 1)
+    inside = betainccinv(more, rest, a)  # complement: keeps a small alpha
+    inside = _mended(inside, betaincc, more, rest, a, -1.0)
     none = -np.expm1(np.log(a) / np.maximum(total, 1))
     return np.asarray(np.where(c == total, 1.0, np.where(c == 0, none, inside)))
 
@@ -62,7 +77,8 @@ def clopper_pearson_lower(
     the cell; arguments and errors as ``clopper_pearson_upper``.
     """
     c, total, a = _checked_shares(counts, n, alpha)
-    inside = betaincinv(np.maximum(c, 1), total - c + 1, a)
+    some, more = np.maximum(c, 1), total - c + 1
+    inside = _mended(betaincinv(some, more, a), betainc, some, more, a, 1.0)
     every = np.exp(np.log(a) / np.maximum(total, 1))
     return np.asarray(np.where(c == 0, 0.0, np.where(c == total, every, inside)))
 
@@ -144,6 +160,36 @@ def _share_at(share: FloatArray, room: FloatArray, side: float) -> FloatArray:
         if np.all(np.abs(step) <= 1e-12 * (1 + np.abs(x))):
             break
     return np.asarray(1 / (1 + np.exp(-np.clip(x, -700, 700))))
+
+
+def _mended(
+    found: FloatArray,
+    tail: Callable[[FloatArray, FloatArray, FloatArray], FloatArray],
+    a: FloatArray,
+    b: FloatArray,
+    alpha: FloatArray,
+    sign: float,
+) -> FloatArray:
+    """Return x with tail(a, b, x) = alpha, found again by bisection where it was not.
+
+    SciPy's inverses lose their way at a thousand in 10**9, and below an alpha of 1e-150. The tail
+    rises with x (sign 1) or falls (-1).
+    """
+    a, b, alpha = np.broadcast_arrays(a, b, alpha)
+    with np.errstate(invalid="ignore"):
+        lost = ~(np.abs(tail(a, b, found) - alpha) <= _TAIL_ERROR * alpha)
+    if not lost.any():
+        return found
+    a, b, alpha = a[lost], b[lost], alpha[lost]
+    low = np.full(a.shape, -800.0)  # as logits
+    high = -low
+    for _ in range(70):
+        middle = (low + high) / 2
+        beyond = sign * (tail(a, b, expit(middle)) - alpha) > 0
+        low, high = np.where(beyond, low, middle), np.where(beyond, middle, high)
+    mended = np.array(found)
+    mended[lost] = expit(high if sign < 0 else low)
+    return mended
 
 
 def _checked_shares(

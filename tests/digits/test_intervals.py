@@ -64,6 +64,17 @@ def test_edges_of_clopper_pearson_in_closed_form() -> None:
     assert float(clopper_pearson_upper(0, 10**15, 0.05)) == pytest.approx(2.995732e-15, rel=1e-6)
 
 
+def test_where_the_inverse_of_scipy_loses_its_way() -> None:
+    """It gives NaN for two hits at an alpha of 1e-200, and 0.0000019 for a thousand of 10**9."""
+    few = float(clopper_pearson_lower(2, 30, 1e-200))
+    assert few == pytest.approx((1e-200 / 435) ** 0.5, rel=1e-6)  # 435 pairs of 30
+    many = clopper_pearson_lower([1000, 1000], [[10**8], [10**9]], [0.025, 1e-9])
+    share = np.array([[1e-5], [1e-6]])
+    assert np.all((many < share) & (many > 0.8 * share))
+    exact = stats.gamma.ppf(0.025, 1000) / 1e9
+    assert float(many[1, 0]) == pytest.approx(exact, rel=1e-6)
+
+
 def test_a_rare_cell_is_bounded_as_the_design_says() -> None:
     """A 1 % cell at n = 2000: about 2.0 to 2.4 times its share between alpha 0.05 and 0.0005."""
     bounds = clopper_pearson_upper(20, 2000, np.array([0.05, 0.0005]) / 199)
