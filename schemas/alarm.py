@@ -13,7 +13,7 @@ CELL = validate.Regexp(r"^[0-9]{1,2}$", error="Expected one or two digits.")
 class Finding(Answer):
     """One thing that left its bounds."""
 
-    view = words.watched_view(required=True)
+    view = words.alarmed_view(required=True)
     pattern = fields.String(
         required=True,
         validate=words.one_of(*words.PATTERNS),
@@ -130,7 +130,7 @@ class AlarmsQuery(Asked):
     merchant = words.merchant()
     flow = words.flow("Only alarms of this flow.")
     currency = words.currency("Only alarms in this currency.")
-    view = words.watched_view()
+    view = words.alarmed_view()
     cell = fields.String(
         validate=CELL, metadata=said("Only alarms with a finding in this cell.", example="49")
     )

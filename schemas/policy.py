@@ -9,6 +9,8 @@ from marshmallow import fields, validate
 
 from schemas import words
 from schemas.base import Answer, Asked, Number, Whole, said
+from service.detection.bank import LIMITS
+from service.digits.significand import MAX_AMOUNT
 from service.digits.views import WATCHED_VIEWS
 
 REFERENCES = ("auto", "law", "own")
@@ -26,6 +28,29 @@ def _reference(value: str) -> None:
 def _distinct(values: list[str] | None) -> None:
     if values is not None and len(set(values)) < len(values):
         raise ma.ValidationError("Expected each only once.")
+
+
+def _few_a_currency(limits: list[dict[str, Any]]) -> None:
+    currencies = [limit["currency"] for limit in limits]
+    most = max((currencies.count(c) for c in currencies), default=0)
+    if most > LIMITS:
+        raise ma.ValidationError(f"Expected at most {LIMITS} limits in one currency.")
+
+
+class ReviewLimit(Asked):
+    """A limit from which amounts are reviewed; those just below it are a cell of their own."""
+
+    currency = words.currency(required=True)
+    amount = Whole(
+        required=True,
+        validate=words.between(10, MAX_AMOUNT),
+        metadata=said("Minor units; amounts from this on are reviewed.", example=1_000_000),
+    )
+    margin = Number(
+        load_default=0.1,
+        validate=words.between(0.001, 0.9),
+        metadata=said("Share of the limit below it that counts as just below."),
+    )
 
 
 class PolicySettings(Asked):
@@ -93,6 +118,19 @@ class PolicySettings(Asked):
             "Flows that may raise alarms; null: all but authorisation, chargeback and test."
         ),
     )
+    limits = fields.List(
+        fields.Nested(ReviewLimit),
+        load_default=list,
+        validate=[
+            validate.Length(max=100, error="Expected at most 100 limits."),
+            _few_a_currency,
+        ],
+        metadata=said(
+            "Review limits. How often amounts come just below each is learned with the baseline, "
+            "or anew when the limits change; more than that raises an alarm.",
+            default=[],
+        ),
+    )
 
 
 class Policy(Answer):
@@ -111,6 +149,7 @@ class Policy(Answer):
     minimum_count = Whole(required=True, validate=words.between(1, 1_000_000))
     views = fields.List(words.watched_view(), required=True)
     flows = fields.List(words.flow("A flow."), required=True, allow_none=True)
+    limits = fields.List(fields.Nested(ReviewLimit), required=True)
 
 
 class Policies(Answer):

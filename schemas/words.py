@@ -17,6 +17,7 @@ POLICY = re.compile(r"[a-z0-9_-]{1,32}")
 SPANS = ("window", "lifetime")
 STANDINGS = ("learning", "steady", "alarmed")
 STATES = ("open", "acknowledged", "confirmed", "dismissed")
+LIMIT = "limit"
 PATTERNS = ("cell", "rare_cells", "shape")
 REFERENCES = ("law", "own", "category")
 
@@ -96,6 +97,15 @@ def celled_view(**kwargs: Any) -> fields.String:
         ),
         **kwargs,
     )
+
+
+def alarmed_view(**kwargs: Any) -> fields.String:
+    """A view, or the amounts just below a review limit."""
+    metadata = said(
+        "A view that detectors watch; `limit` for amounts just below a review limit of the "
+        "policy, whose cell is the limit in minor units."
+    )
+    return fields.String(validate=one_of(*WATCHED_VIEWS, LIMIT), metadata=metadata, **kwargs)
 
 
 def watched_view(**kwargs: Any) -> fields.String:

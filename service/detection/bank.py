@@ -1,7 +1,8 @@
 """The bank of detectors: each a contamination alternative to "no cell exceeds its bound".
 
 A *cell* detector bets that one cell holds a share ``eps`` too much, a *shape* detector that the
-whole lead pair moved, a *rare cells* detector that cells which the merchant hardly used come up.
+whole lead pair moved, a *joint* detector that cells which the merchant hardly used come up, or
+amounts just below a review limit.
 Each multiplies its capital by a likelihood ratio L whose expectation is at most 1 while every
 cell's probability is at most its bound u; the mixture Shiryaev-Roberts statistic of the bank
 crosses A at most once in A transactions on average, without calibration.
@@ -32,14 +33,14 @@ CUSUM_GAIN = float(EPSILONS[_CUSUM_EPSILON])
 
 
 def _cell_weights() -> FloatArray:
-    """Weights of the cells over all contaminations: 0.86 in all, more where people cheat."""
+    """Weights of the cells over all contaminations: 0.84 in all, more where people cheat."""
     weights = np.empty(CELLS)
     weights[LEAD_DIGIT] = 0.12 / 9
-    pair = np.full(90, 0.33 * 0.6 / 81)
-    pair[9::10] = 0.33 * 0.4 / 9  # just under a round number
+    pair = np.full(90, 0.32 * 0.6 / 81)
+    pair[9::10] = 0.32 * 0.4 / 9  # just under a round number
     weights[LEAD_PAIR] = pair
-    tail = np.full(100, 0.41 * 0.6 / 92)
-    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.41 * 0.4 / 8
+    tail = np.full(100, 0.40 * 0.6 / 92)
+    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.40 * 0.4 / 8
     weights[TAIL_PAIR] = tail
     return weights
 
@@ -59,9 +60,16 @@ SHAPE_WEIGHTS = np.concatenate([np.full(2, 0.03), np.full(12, 0.004)])
 
 RARE_VIEWS = (1, 2)
 """Watched views that have a rare cells detector: lead pair and tail pair."""
-RARE_EPSILONS = np.array([0.12, 0.40])
-RARE_WEIGHTS = np.array([0.016, 0.016])
-"""Weight of each view's rare cells, shared evenly by the contaminations."""
+
+LIMITS = 4
+"""Most review limits that a policy may name for one currency."""
+
+JOINT = len(RARE_VIEWS) + LIMITS
+"""Joint detectors: for the rare cells of each such view, and for the amounts below each limit."""
+
+JOINT_EPSILONS = np.array([0.12, 0.40])
+JOINT_WEIGHTS = np.array([0.016, 0.016, 0.005, 0.005, 0.005, 0.005])
+"""Weight of each joint detector, shared evenly by the contaminations."""
 
 
 def _shift_waves() -> FloatArray:

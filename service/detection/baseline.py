@@ -13,12 +13,12 @@ import numpy as np
 import numpy.typing as npt
 from scipy import special
 
-from service.detection.bank import LAW, RARE_VIEWS
+from service.detection.bank import JOINT, LAW, RARE_VIEWS
 from service.digits.intervals import clopper_pearson_lower, clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS
 
-BOUNDS = CELLS + len(RARE_VIEWS)
+BOUNDS = CELLS + JOINT
 """Bounds that one baseline gives, over which its error is shared (Bonferroni)."""
 
 DISPERSION_LEVEL = 0.0001

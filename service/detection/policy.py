@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import asdict, dataclass, fields
 from typing import Any
 
@@ -12,6 +13,29 @@ QUIET_FLOWS = ("authorisation", "chargeback", "test")
 
 LEADING_TOLERANCE = 0.10
 TAIL_TOLERANCE = 0.05
+
+
+@dataclass(frozen=True)
+class Limit:
+    """A review limit: amounts just below it are watched as a cell of their own.
+
+    Attributes
+    ----------
+    currency : str
+    amount : int
+        Minor units; amounts from this on are reviewed.
+    margin : float
+        Share of the limit below it that counts as just below, 0 to 1.
+    """
+
+    currency: str
+    amount: int
+    margin: float = 0.1
+
+    @property
+    def lowest(self) -> int:
+        """Return the smallest amount that is just below the limit, in minor units."""
+        return math.ceil(self.amount * (1 - self.margin))
 
 
 @dataclass(frozen=True)
@@ -28,6 +52,8 @@ class Policy:
         half of it the tail pair.
     flows : tuple of str or None
         Flows that may raise alarms; None for all but ``QUIET_FLOWS``.
+    limits : tuple of Limit
+        At most four for one currency.
     """
 
     name: str = "standard"
@@ -41,6 +67,7 @@ class Policy:
     minimum_count: int = 200
     views: tuple[str, ...] = WATCHED_VIEWS
     flows: tuple[str, ...] | None = None
+    limits: tuple[Limit, ...] = ()
 
     @classmethod
     def from_document(cls, document: dict[str, Any]) -> Policy:
@@ -50,6 +77,7 @@ class Policy:
         for name in ("views", "flows"):
             if values.get(name) is not None:
                 values[name] = tuple(values[name])
+        values["limits"] = tuple(Limit(**limit) for limit in values.get("limits") or ())
         return cls(**values)
 
     def document(self) -> dict[str, Any]:
@@ -59,6 +87,10 @@ class Policy:
     def watches(self, flow: str) -> bool:
         """Return whether a flow's streams may raise alarms."""
         return flow not in QUIET_FLOWS if self.flows is None else flow in self.flows
+
+    def limits_in(self, currency: str) -> tuple[Limit, ...]:
+        """Return the review limits for one currency."""
+        return tuple(limit for limit in self.limits if limit.currency == currency)
 
     def tolerances(self) -> tuple[float, float, float]:
         """Return the tolerance of lead digit, lead pair and tail pair."""

@@ -18,6 +18,7 @@ from service.store.logs import COMPACT_ROWS, Blobs, Logs
 from service.streams.crossing import FEW_CROSSINGS, Crossing
 from service.streams.fold import fold
 from service.streams.record import Stream
+from service.streams.rules import Kind
 from service.streams.state import Folded, write_snapshots
 
 log = logging.getLogger(__name__)
@@ -84,7 +85,7 @@ class Judge:
             loaded.records,
             loaded.slot,
             policies,
-            [stream_of(b.path)[1].flow for b in blobs],
+            [Kind(s.flow, s.currency) for _, s in map(stream_of, (b.path for b in blobs))],
             [b.path.encode() for b in blobs],
         )
         return loaded, crossings

@@ -11,10 +11,10 @@ import numpy.typing as npt
 
 from service.digits.significand import IntArray
 from service.digits.views import CELLS, WATCHED_VIEWS
-from service.streams.findings import Finding, findings
+from service.streams.findings import LIMIT, Finding, findings
 from service.streams.rows import Rows
 from service.streams.rules import Rules
-from service.streams.state import REFUTED_BY_BANK, UNDECIDED, States, restart
+from service.streams.state import NO_VIEW, REFUTED_BY_BANK, UNDECIDED, States, restart
 
 FEW_CROSSINGS = 16
 """Crossings of one alarm that are all told; after them it is looked at every ``PAUSE_ROWS``."""
@@ -123,12 +123,19 @@ def cross(
 
 
 def follow(
-    state: States, part: Rows, hit_row: IntArray, hit_key: IntArray, clock: IntArray
+    state: States,
+    part: Rows,
+    rows: IntArray,
+    hit_row: IntArray,
+    hit_key: IntArray,
+    clock: IntArray,
 ) -> None:
     """Count what goes on in the cells of open alarms.
 
     Parameters
     ----------
+    rows : int64 array
+        Rows of ``part`` that were consumed.
     hit_row, hit_key : int64 arrays (h,)
         Row in ``part`` and ``slot * 199 + cell`` of the hits of the pass.
     clock : int64 array (n, 3)
@@ -139,11 +146,15 @@ def follow(
         return
     slot, cell = hit_key // CELLS, hit_key % CELLS
     mine = state["alarm_cells"][slot, cell] > 0
-    slot, row = slot[mine], hit_row[mine]
+    low, high = state["alarm_low"][part.slot], state["alarm_high"][part.slot]
+    below = rows[((part.amount >= low) & (part.amount < high))[rows]]
+    row = np.concatenate([hit_row[mine], below])
+    slot = part.slot[row]
     n = len(state)
+    seen = np.concatenate([clock, np.bincount(part.slot[rows], minlength=n)[:, None]], axis=1)
     state["alarm_hits"] += np.bincount(slot, minlength=n)
     state["alarm_spent"] += np.bincount(slot, part.amount[row], minlength=n)
-    state["alarm_seen"][open_] += clock[open_, state["alarm_view"][open_]]
+    state["alarm_seen"][open_] += seen[open_, state["alarm_view"][open_]]
     last = np.full(n, -1, np.int64)
     np.maximum.at(last, slot, row)
     state["alarm_hit_at"] = np.where(last >= 0, part.at[last], state["alarm_hit_at"])
@@ -164,7 +175,10 @@ def _alarm(
     state: States, rules: Rules, part: Rows, i: int, evidence: float, name: bytes
 ) -> Crossing:
     s = int(part.slot[i])
-    found = findings(state[s], rules.tolerance[s], rules.active[s], rules.shapes[s], rules.rare[s])
+    limits = list(zip(rules.low[s].tolist(), rules.high[s].tolist(), strict=True))
+    found = findings(
+        state[s], rules.tolerance[s], rules.active[s], rules.shapes[s], rules.joint[s], limits
+    )
     number = int(part.number[i])
     historic = bool(part.historic[i])
     if not state["alarm_crossings"][s]:
@@ -200,7 +214,8 @@ def _open(state: States, s: int, top: Finding, at: int) -> None:
     """Begin to count what goes on in the cells of a new alarm, from its onset."""
     state["alarm_severity"][s] = 0.0
     state["alarm_live"][s] = 0
-    state["alarm_view"][s] = WATCHED_VIEWS.index(top.view)
+    state["alarm_view"][s] = NO_VIEW if top.view == LIMIT else WATCHED_VIEWS.index(top.view)
+    state["alarm_low"][s], state["alarm_high"][s] = top.low, top.high
     state["alarm_cells"][s] = 0
     state["alarm_cells"][s, list(top.members)] = 1
     state["alarm_share"][s] = top.expected

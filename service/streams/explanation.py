@@ -54,8 +54,13 @@ def explanation(
         if finding["view"] == "tail_pair" and finding["reference"] == "law"
         else _REFERENCE[finding["reference"]]
     )
+    cells = (
+        _below(finding, stream.currency, exponent)
+        if finding["view"] == "limit"
+        else _cells(finding)
+    )
     return (
-        f"{since}{percent(finding['observed'])} of the amounts {_cells(finding)}, where at most "
+        f"{since}{percent(finding['observed'])} of the amounts {cells}, where at most "
         f"{percent(finding['bound'])} is expected {where}"
         f"{_excess(excess or 0, excess_amount or 0, stream.currency, exponent)}. "
         "The alarm itself chose the time from which this share is counted, so the share is biased "
@@ -78,6 +83,11 @@ def _time(ms: int) -> str:
 
 def _listed(cells: Sequence[str], word: str) -> str:
     return cells[0] if len(cells) == 1 else f"{', '.join(cells[:-1])} {word} {cells[-1]}"
+
+
+def _below(finding: Mapping[str, Any], currency: str, exponent: int | None) -> str:
+    limit = _money(finding["high"], currency, exponent)
+    return f"lie just below the review limit of {limit}"
 
 
 def _cells(finding: Mapping[str, Any]) -> str:
@@ -110,9 +120,12 @@ def _shape(finding: Mapping[str, Any]) -> str:
 def _excess(rows: float, amount: float, currency: str, exponent: int | None) -> str:
     if round(rows) < 1:
         return ""
-    if exponent is None:
-        money = f"{amount:,.0f} minor units of {currency}"
-    else:
-        money = f"{amount / 10**exponent:,.{exponent}f} {currency}"
+    money = _money(amount, currency, exponent)
     amounts = "amount" if round(rows) == 1 else "amounts"
     return f"; that is about {rows:,.0f} {amounts} more than expected so far, worth about {money}"
+
+
+def _money(amount: float, currency: str, exponent: int | None) -> str:
+    if exponent is None:
+        return f"{amount:,.0f} minor units of {currency}"
+    return f"{amount / 10**exponent:,.{exponent}f} {currency}"

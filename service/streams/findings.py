@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +15,8 @@ from service.streams.state import BY_OWN, States
 
 NOTABLE = 0.05
 """Share of the evidence below which a view or shape is not mentioned."""
+
+LIMIT = "limit"
 
 MOST_CELLS = 9
 """Cells named of a pattern that has many."""
@@ -29,6 +32,7 @@ class Finding:
     Attributes
     ----------
     view : str
+        A watched view, or ``limit`` for amounts just below a review limit.
     pattern : str
         ``cell``, ``rare_cells`` or ``shape``.
     cells : tuple of str
@@ -54,6 +58,8 @@ class Finding:
         Rows in the cells, and rows that the view saw, since the onset.
     spent : float
         Minor units of the rows in the cells.
+    low, high : int
+        Of a review limit: amounts from the first to below the second, in minor units.
     shape : str
         For a shape: ``invented`` or ``shifted``.
     """
@@ -73,6 +79,8 @@ class Finding:
     hits: int = 0
     seen: int = 0
     spent: float = 0.0
+    low: int = 0
+    high: int = 0
     shape: str = ""
 
 
@@ -93,7 +101,8 @@ def findings(
     tolerance: FloatArray,
     active: FloatArray,
     shapes: FloatArray,
-    rare: FloatArray,
+    joint: FloatArray,
+    limits: Sequence[tuple[int, int]],
 ) -> list[Finding]:
     """Return what carries one stream's evidence, strongest first.
 
@@ -104,13 +113,15 @@ def findings(
         Of the watched views.
     shapes : float64 array (14,)
         Weights of the shape detectors in force.
-    rare : float64 array (2,)
-        Weights of the rare cells detectors in force.
+    joint : float64 array (6,)
+        Weights of the joint detectors in force.
+    limits : sequence of (int, int)
+        Amounts just below each review limit are from the first to below the second.
     """
     cells = evidence_of_cells(state) * active[VIEW_OF_CELL]
     shape = state["shape"] * shapes
-    scarce = state["rare_value"].mean(axis=-1) * rare
-    whole = float(cells.sum() + shape.sum() + scarce.sum())
+    together = state["joint_value"].mean(axis=-1) * joint
+    whole = float(cells.sum() + shape.sum() + together.sum())
     if whole <= 0:
         return []
     found = [
@@ -119,9 +130,8 @@ def findings(
         if cells[part].sum() >= NOTABLE * whole
     ]
     found += [
-        _rare(state, place, float(scarce[place]) / whole, float(tolerance[view]))
-        for place, view in enumerate(bank.RARE_VIEWS)
-        if scarce[place] >= NOTABLE * whole
+        _joint(state, place, float(together[place]) / whole, tolerance, limits)
+        for place in np.flatnonzero(together >= NOTABLE * whole).tolist()
     ]
     if shape.sum() >= NOTABLE * whole:
         found.append(_shape(state, shape, whole, float(tolerance[1])))
@@ -175,29 +185,48 @@ def _cells(
     )
 
 
-def _rare(state: States, place: int, weight: float, tolerance: float) -> Finding:
-    view = bank.RARE_VIEWS[place]
-    part = WATCHED[WATCHED_VIEWS[view]]
-    members = part.start + np.flatnonzero(state["rare"][part])
-    often = members[np.argsort(-state["run"][members].astype(np.int64), kind="stable")]
-    base = state["base"].astype(np.float64)
-    seen = max(int(state["rare_seen"][place]), 1)
+def _joint(
+    state: States,
+    place: int,
+    weight: float,
+    tolerance: FloatArray,
+    limits: Sequence[tuple[int, int]],
+) -> Finding:
+    """Describe cells that are bounded together: rare ones, or the amounts below a limit."""
+    if place < len(bank.RARE_VIEWS):
+        view = bank.RARE_VIEWS[place]
+        part = WATCHED[WATCHED_VIEWS[view]]
+        members = part.start + np.flatnonzero(state["rare"][part])
+        often = members[np.argsort(-state["run"][members].astype(np.int64), kind="stable")]
+        base = state["base"].astype(np.float64)
+        name, pattern = WATCHED_VIEWS[view], "rare_cells"
+        cells = tuple(cell_label(int(k)) for k in often[:MOST_CELLS])
+        expected = float(base[members].sum() / max(base[part].sum(), 1.0))
+        low = high = 0
+    else:
+        k = place - len(bank.RARE_VIEWS)
+        low, high = limits[k]
+        view, name, pattern, cells, members = 1, LIMIT, "cell", (str(high),), np.empty(0, int)
+        expected = float(state["limit_base"][k]) / max(int(state["limit_rows"]), 1)
+    seen = max(int(state["joint_seen"][place]), 1)
     return Finding(
-        view=WATCHED_VIEWS[view],
-        pattern="rare_cells",
-        cells=tuple(cell_label(int(k)) for k in often[:MOST_CELLS]),
+        view=name,
+        pattern=pattern,
+        cells=cells,
         members=tuple(members.tolist()),
         weight=weight,
-        onset_row=max(int(state["rare_onset"][place]), 1),
-        onset_at=int(state["rare_onset_at"][place]) or int(state["first_at"]),
-        observed=int(state["rare_hits"][place]) / seen,
-        expected=float(base[members].sum() / max(base[part].sum(), 1.0)),
-        bound=min(float(state["rare_bound"][place]) * (1 + tolerance), 1.0),
+        onset_row=max(int(state["joint_onset"][place]), 1),
+        onset_at=int(state["joint_onset_at"][place]) or int(state["first_at"]),
+        observed=int(state["joint_hits"][place]) / seen,
+        expected=expected,
+        bound=min(float(state["joint_bound"][place]) * (1 + float(tolerance[view])), 1.0),
         reference="own",
-        severity=float(state["rare_cusum"][place]),
-        hits=int(state["rare_hits"][place]),
+        severity=float(state["joint_cusum"][place]),
+        hits=int(state["joint_hits"][place]),
         seen=seen,
-        spent=float(state["rare_spent"][place]),
+        spent=float(state["joint_spent"][place]),
+        low=low,
+        high=high,
     )
 
 

@@ -16,11 +16,11 @@ from service.detection.policy import Policy
 from service.digits.significand import IntArray
 from service.digits.views import CELLS
 from service.streams.crossing import PAUSE_ROWS, Crossing, cross, follow, paused
-from service.streams.learning import decide, learn, until_complete
+from service.streams.learning import decide, learn, learn_limits, until_complete
 from service.streams.record import Records
 from service.streams.rows import Rows, columns
-from service.streams.rules import Rules, adopt, refresh
-from service.streams.running import Cells, Rare, Running, Shapes, evaluate
+from service.streams.rules import Kind, Rules, adopt, refresh
+from service.streams.running import Cells, Joint, Running, Shapes, evaluate
 from service.streams.state import UNDECIDED, Folded, States
 from service.streams.window import tally
 
@@ -33,7 +33,7 @@ def fold(
     records: Records,
     slot: IntArray,
     policies: Mapping[int, Policy],
-    flows: Sequence[str],
+    kinds: Sequence[Kind],
     names: Sequence[bytes],
 ) -> list[Crossing]:
     """Fold log records into the states, in place, and return the crossings in order.
@@ -48,8 +48,8 @@ def fold(
         Stream of each record, ascending.
     policies : mapping
         Every policy version that the records name.
-    flows : sequence of str, length n
-        Flow of each stream.
+    kinds : sequence of Kind, length n
+        Flow and currency of each stream.
     names : sequence of bytes, length n
         A name of each stream that no other stream of any tenant bears; enters alarm ids.
 
@@ -66,7 +66,7 @@ def fold(
     rows = rows.take(np.flatnonzero(rows.amount > 0))
     rules = Rules.empty(len(state))
     fresh = np.unique(rows.slot)
-    adopt(state, fresh, state["policy"][fresh], rules, policies, flows)
+    adopt(state, fresh, state["policy"][fresh], rules, policies, kinds)
     start = np.searchsorted(rows.slot, np.arange(len(state)))
     end = np.searchsorted(rows.slot, np.arange(len(state)), side="right")
     crossings: list[Crossing] = []
@@ -77,24 +77,23 @@ def fold(
         first_policy = rows.policy[start[left]]
         changed = state["policy"][left] != first_policy
         if changed.any():
-            adopt(state, left[changed], first_policy[changed], rules, policies, flows)
+            adopt(state, left[changed], first_policy[changed], rules, policies, kinds)
         taken = _take(rows, left, start, end)
         part = rows.take(taken)
         part, complete = until_complete(state, rules, part)
         path = evaluate(state, rules, part)
         crossed, consumed = _until_crossed(state, rules, part, path)
-        _apply(folded, part, path, consumed)
+        _apply(folded, rules, part, path, consumed)
         start += np.bincount(part.slot[consumed], minlength=len(state))
         for i in crossed.tolist():
             crossing = cross(state, rules, part, i, float(path.total[i]), names)
             if crossing is not None:
                 crossings.append(crossing)
-        done = complete[np.isin(complete, np.flatnonzero(consumed))]
-        for i in done.tolist():
+        for i in complete[consumed[complete]].tolist():
             s = int(part.slot[i])
-            version = int(state["policy"][s])
-            decide(folded, s, policies[version], int(part.at[i]))
-            refresh(state, np.array([s]), rules, policies[version], flows)
+            policy = policies[int(state["policy"][s])]
+            decide(folded, s, policy, rules, int(part.at[i]))
+            refresh(state, np.array([s]), rules, policy, kinds)
     crossings.sort(key=lambda c: (c.slot, c.record))
     return crossings
 
@@ -127,7 +126,13 @@ def _until_crossed(
     return np.flatnonzero(over & consumed), consumed
 
 
-def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.bool_]) -> None:
+def _apply(
+    folded: Folded,
+    rules: Rules,
+    part: Rows,
+    path: Running,
+    consumed: npt.NDArray[np.bool_],
+) -> None:
     """Write what the consumed rows did to the states."""
     state = folded.state
     n = len(state)
@@ -139,8 +144,8 @@ def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.b
     number = _row_numbers(state, part)
     state["sums"][streams] = path.sums[:, last].T.reshape(-1, 3, 3)
     _apply_shapes(state, part, path.shapes, number, streams, last)
-    if path.rare is not None:
-        _apply_rare(state, part, path.rare, number, streams, last)
+    if path.joint is not None:
+        _apply_joint(state, part, path.joint, number, streams, last)
     used = consumed[path.cells.row]
     _apply_cells(state, part, path.cells, number, used)
     clock = np.stack(
@@ -148,8 +153,9 @@ def _apply(folded: Folded, part: Rows, path: Running, consumed: npt.NDArray[np.b
     )
     state["circle"][streams] += np.add.reduceat(part.wave[:, rows], starts, axis=1).T
     learn(folded, part, rows, streams, starts)
+    learn_limits(state, rules, part, rows)
     _compare_neighbours(state, part, rows)
-    follow(state, part, path.cells.row[used], path.cells.key[used], clock)
+    follow(state, part, rows, path.cells.row[used], path.cells.key[used], clock)
     state["rows"] += np.bincount(slot, minlength=n)
     state["clock"] += clock
 
@@ -196,35 +202,35 @@ def _apply_shapes(
     )
 
 
-def _apply_rare(
+def _apply_joint(
     state: States,
     part: Rows,
-    rare: Rare,
+    joint: Joint,
     number: IntArray,
     streams: IntArray,
     last: IntArray,
 ) -> None:
     begin = np.searchsorted(part.slot, streams)
-    rest = rare.rest[:, last].T
-    rested = rest >= 0
-    since = np.where(rested, rest, begin[:, None] - 1)  # rows after this one are new to the run
-    for name, amount in (
-        ("rare_hits", rare.member.astype(np.int64)),
-        ("rare_spent", rare.member * part.amount.astype(np.float64)),
-        ("rare_seen", rare.seen.astype(np.int64)),
-    ):
-        so_far = np.concatenate([np.zeros((len(amount), 1), amount.dtype), amount], axis=1)
-        so_far = np.cumsum(so_far, axis=1)
-        new = np.stack(
-            [so_far[j, last + 1] - so_far[j, since[:, j] + 1] for j in range(len(amount))], axis=1
+    for j, place in enumerate(joint.place):
+        rest = joint.rest[j, last]
+        rested = rest >= 0
+        since = np.where(rested, rest, begin - 1)  # rows after this one are new to the run
+        for name, amount in (
+            ("joint_hits", joint.member[j].astype(np.int64)),
+            ("joint_spent", joint.member[j] * part.amount.astype(np.float64)),
+            ("joint_seen", joint.seen[j].astype(np.int64)),
+        ):
+            so_far = np.concatenate([[0], np.cumsum(amount)])
+            before = np.where(rested, 0, state[name][streams, place])
+            state[name][streams, place] = before + so_far[last + 1] - so_far[since + 1]
+        state["joint_value"][streams, place] = joint.value[j][:, last].T
+        state["joint_cusum"][streams, place] = joint.cusum[j, last]
+        state["joint_onset"][streams, place] = np.where(
+            rested, number[rest] + 1, state["joint_onset"][streams, place]
         )
-        state[name][streams] = np.where(rested, 0, state[name][streams]) + new
-    state["rare_value"][streams] = np.moveaxis(rare.value[..., last], -1, 0)
-    state["rare_cusum"][streams] = rare.cusum[:, last].T
-    state["rare_onset"][streams] = np.where(rested, number[rest] + 1, state["rare_onset"][streams])
-    state["rare_onset_at"][streams] = np.where(
-        rested, part.at[rest], state["rare_onset_at"][streams]
-    )
+        state["joint_onset_at"][streams, place] = np.where(
+            rested, part.at[rest], state["joint_onset_at"][streams, place]
+        )
 
 
 def _apply_cells(

@@ -13,7 +13,7 @@ from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED_VIEWS
 from service.streams.state import BY_OWN, REFUTED_BY_BANK, UNDECIDED, States
 
-RARE_AT_MOST = 0.5
+JOINT_AT_MOST = 0.5
 """A joint bound above this leaves nothing to be found."""
 
 _LEAD_PAIR = WATCHED_VIEWS.index("lead_pair")
@@ -28,13 +28,14 @@ class Weights(NamedTuple):
         1 for a watched view whose cells count, else 0.
     shapes : float64 array (n, 14)
         Of the shape detectors, 0 for those that are dropped.
-    rare : float64 array (n, 2)
-        Of the rare cells detectors, 0 where the law is the reference or a bound says nothing.
+    joint : float64 array (n, 6)
+        Of the joint detectors, 0 where a bound is not learned or says nothing; rare cells count
+        against an own baseline only.
     """
 
     views: FloatArray
     shapes: FloatArray
-    rare: FloatArray
+    joint: FloatArray
 
 
 def policy_of(policies: Mapping[int, Policy], version: int) -> Policy:
@@ -64,13 +65,14 @@ def weights(state: States, slots: IntArray, policy: Policy) -> Weights:
     silenced = learning[:, None] & ((state["refuted"][slots] & REFUTED_BY_BANK) > 0)
     active = np.array([view in policy.views for view in WATCHED_VIEWS]) & ~silenced
     counts = np.isfinite(state["shape_scale"][slots]) & active[:, _LEAD_PAIR, None]
-    views = list(bank.RARE_VIEWS)
-    rare = active[:, views] & (state["reference"][slots][:, views] == BY_OWN)
-    rare &= (state["rare_bound"][slots] > 0) & (state["rare_bound"][slots] < RARE_AT_MOST)
+    bound = state["joint_bound"][slots]
+    joint = (bound > 0) & (bound < JOINT_AT_MOST) & ~learning[:, None]
+    views, rare = list(bank.RARE_VIEWS), slice(0, len(bank.RARE_VIEWS))
+    joint[:, rare] &= active[:, views] & (state["reference"][slots][:, views] == BY_OWN)
     return Weights(
         active.astype(np.float64),
         np.where(counts, bank.SHAPE_WEIGHTS, 0.0),
-        np.where(rare, bank.RARE_WEIGHTS, 0.0),
+        np.where(joint, bank.JOINT_WEIGHTS, 0.0),
     )
 
 
@@ -100,5 +102,5 @@ def evidence(state: States, policies: Mapping[int, Policy]) -> FloatArray:
         cells = state["sums"][slots].sum(axis=2)
         total[slots] = (cells * weight.views).sum(axis=1)
         total[slots] += (state["shape"][slots] * weight.shapes).sum(axis=1)
-        total[slots] += (state["rare_value"][slots].mean(axis=2) * weight.rare).sum(axis=1)
+        total[slots] += (state["joint_value"][slots].mean(axis=2) * weight.joint).sum(axis=1)
     return np.asarray(np.log10(np.maximum(total, 1.0)))

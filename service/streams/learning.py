@@ -5,12 +5,19 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.baseline import law_verdict, own_bounds, rare_cells, spent_alpha
+from service.detection.baseline import BOUNDS, law_verdict, own_bounds, rare_cells, spent_alpha
 from service.detection.policy import Policy
+from service.digits.intervals import clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, WATCHED
 from service.streams.rows import Rows
-from service.streams.rules import DAY_MS, Rules, choose_references
+from service.streams.rules import (
+    DAY_MS,
+    LIMIT_DETECTORS,
+    Rules,
+    below_limits,
+    choose_references,
+)
 from service.streams.state import (
     HOUR_BLOCK,
     REFUTED_BY_CELL,
@@ -34,39 +41,74 @@ HOUR_BLOCK_MS = 3 * 3600 * 1000
 
 
 def until_complete(state: States, rules: Rules, part: Rows) -> tuple[Rows, IntArray]:
-    """Cut each learning stream's rows after the one that completes its baseline.
+    """Cut each stream's rows after the first that completes something it learns.
 
     Returns the rows kept and the indices among them of the completing rows.
     """
-    learning = np.any(state["reference"] == UNDECIDED, axis=1)[part.slot]
-    if not learning.any():
+    complete = _completes(
+        part,
+        rules,
+        learns_baseline(state),
+        state["base_rows"],
+        state["base_first_at"],
+        state["base_last_at"],
+    ) | _completes(
+        part,
+        rules,
+        learns_limits(state),
+        state["limit_rows"],
+        state["limit_first_at"],
+        state["limit_last_at"],
+    )
+    if not complete.any():
         return part, np.empty(0, np.int64)
     first = np.searchsorted(part.slot, part.slot)
-    index = np.arange(len(part.slot))
-    rank = index - first + 1
-    known = state["base_rows"][part.slot] > 0
-    low = np.where(known, np.minimum(part.at, state["base_first_at"][part.slot]), part.at)
-    high = np.where(known, np.maximum(part.at, state["base_last_at"][part.slot]), part.at)
+    done_before: IntArray = np.cumsum(complete) - complete
+    kept = np.flatnonzero(done_before == done_before[first])
+    return part.take(kept), np.flatnonzero(complete[kept])
+
+
+def learns_baseline(state: States) -> npt.NDArray[np.bool_]:
+    """Return which streams still learn their baseline."""
+    return np.asarray(np.any(state["reference"] == UNDECIDED, axis=-1))
+
+
+def learns_limits(state: States) -> npt.NDArray[np.bool_]:
+    """Return which streams have review limits whose bounds they still learn."""
+    unknown = np.all(state["joint_bound"][..., LIMIT_DETECTORS] == 0, axis=-1)
+    return np.asarray((state["limits"] > 0) & unknown)
+
+
+def _completes(
+    part: Rows,
+    rules: Rules,
+    learning: npt.NDArray[np.bool_],
+    rows: IntArray,
+    first_at: IntArray,
+    last_at: IntArray,
+) -> npt.NDArray[np.bool_]:
+    """Return which rows, and all after them, have both the rows and the days that are needed."""
+    slot = part.slot
+    learns = learning[slot]
+    if not learns.any():
+        return np.zeros(len(slot), bool)
+    index = np.arange(len(slot))
+    first = np.searchsorted(slot, slot)
+    known = rows[slot] > 0
+    low = np.where(known, np.minimum(part.at, first_at[slot]), part.at)
+    high = np.where(known, np.maximum(part.at, last_at[slot]), part.at)
     # one scan for all streams: each is lifted above the one before
     lift = np.cumsum(index == first) * (int(high.max()) - int(low.min()) + 1)
     oldest = np.minimum.accumulate(low - lift) + lift
     newest = np.maximum.accumulate(high + lift) - lift
-    complete = (
-        learning
-        & (state["base_rows"][part.slot] + rank >= rules.size[part.slot])
-        & (newest - oldest >= rules.span[part.slot])
-    )
-    if not complete.any():
-        return part, np.empty(0, np.int64)
-    done_before = np.cumsum(complete) - complete
-    kept = np.flatnonzero(done_before == done_before[first])
-    return part.take(kept), np.flatnonzero(complete[kept])
+    enough = rows[slot] + index - first + 1 >= rules.size[slot]
+    return np.asarray(learns & enough & (newest - oldest >= rules.span[slot]))
 
 
 def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts: IntArray) -> None:
     """Add consumed rows to the baselines of the streams that are still learning."""
     state = folded.state
-    learning = np.any(state["reference"] == UNDECIDED, axis=1)
+    learning = learns_baseline(state)
     if not learning[streams].any():
         return
     slot = part.slot[rows]
@@ -75,13 +117,7 @@ def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts:
     at = part.at[rows]
     low = np.minimum.reduceat(at, starts)[which]
     high = np.maximum.reduceat(at, starts)[which]
-    new = state["base_rows"][pupils] == 0
-    state["base_first_at"][pupils] = np.where(
-        new, low, np.minimum(low, state["base_first_at"][pupils])
-    )
-    state["base_last_at"][pupils] = np.where(
-        new, high, np.maximum(high, state["base_last_at"][pupils])
-    )
+    _widen(state, "base", pupils, low, high)
     sums = np.add.reduceat(part.wave[:4][:, rows], starts, axis=1).T
     state["base_circle"][pupils] += sums[which]
     rank = np.arange(len(slot)) - np.searchsorted(slot, slot)
@@ -99,6 +135,29 @@ def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts:
     view, row = np.nonzero(cell >= 0)
     np.add.at(state["base"], (slot[mine][row], cell[view, row]), 1)
     state["base_rows"] = grown
+
+
+def learn_limits(state: States, rules: Rules, part: Rows, rows: IntArray) -> None:
+    """Count consumed rows just below review limits whose bounds are still learned."""
+    mine = rows[learns_limits(state)[part.slot[rows]]]
+    if not mine.size:
+        return
+    part = part.take(mine)
+    starts = np.flatnonzero(np.concatenate([[True], part.slot[1:] != part.slot[:-1]]))
+    pupils = part.slot[starts]
+    low, high = np.minimum.reduceat(part.at, starts), np.maximum.reduceat(part.at, starts)
+    _widen(state, "limit", pupils, low, high)
+    state["limit_rows"] += np.bincount(part.slot, minlength=len(state))
+    below = below_limits(rules, part).astype(np.int64)
+    state["limit_base"][pupils] += np.add.reduceat(below, starts, axis=1).T
+
+
+def _widen(state: States, what: str, slots: IntArray, low: IntArray, high: IntArray) -> None:
+    """Widen the span of event times of a baseline, or of the limits'."""
+    new = state[f"{what}_rows"][slots] == 0
+    first, last = f"{what}_first_at", f"{what}_last_at"
+    state[first][slots] = np.where(new, low, np.minimum(low, state[first][slots]))
+    state[last][slots] = np.where(new, high, np.maximum(high, state[last][slots]))
 
 
 def _pair_up(folded: Folded, pupils: IntArray, grown: IntArray) -> None:
@@ -123,10 +182,34 @@ def _pair_up(folded: Folded, pupils: IntArray, grown: IntArray) -> None:
     folded.buckets = Buckets.empty().plus(buckets.slot, moved, buckets.cell, buckets.count)
 
 
-def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
-    """Complete a baseline: accept the law for a view, or bound the merchant's own cells."""
+def decide(folded: Folded, s: int, policy: Policy, rules: Rules, at: int) -> None:
+    """Complete what a stream has learned: its baseline, the bounds of its review limits, or both.
+
+    A limit's bound is as those of the cells, Clopper-Pearson at the same share of the error.
+    """
     state = folded.state
     alpha = spent_alpha(policy.baseline_confidence, int(state["relearns"][s]))
+    if learns_limits(state[s]) and _is_long(state[s], "limit", policy):
+        upper = clopper_pearson_upper(
+            state["limit_base"][s], np.array([state["limit_rows"][s]]), alpha / BOUNDS
+        )
+        named = rules.high[s] > 0  # places without a limit get the bound that finds nothing
+        state["joint_bound"][s, LIMIT_DETECTORS] = _rounded_up(np.where(named, upper, 1.0))
+    if learns_baseline(state[s]) and _is_long(state[s], "base", policy):
+        _decide_references(folded, s, policy, alpha)
+        restart(state, s, at)
+
+
+def _is_long(state: States, what: str, policy: Policy) -> bool:
+    span = int(state[f"{what}_last_at"]) - int(state[f"{what}_first_at"])
+    return bool(
+        state[f"{what}_rows"] >= policy.baseline_size and span >= policy.baseline_days * DAY_MS
+    )
+
+
+def _decide_references(folded: Folded, s: int, policy: Policy, alpha: float) -> None:
+    """Accept the law for a view, or bound the merchant's own cells."""
+    state = folded.state
     count = state["base"][s].astype(np.int64)
     rows = np.array([int(count[cells].sum()) for cells in WATCHED.values()])
     mine = folded.buckets.slot == s
@@ -141,7 +224,7 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     rare, joint = rare_cells(per_block[runs], seen[runs], alpha)
     state["bound"][s] = _rounded_up(bounds)
     state["rare"][s] = rare
-    state["rare_bound"][s] = _rounded_up(joint)
+    state["joint_bound"][s, : len(joint)] = _rounded_up(joint)
     verdict = law_verdict(
         count,
         rows,
@@ -154,7 +237,6 @@ def decide(folded: Folded, s: int, policy: Policy, at: int) -> None:
     ).astype(np.uint8)
     folded.buckets = folded.buckets.where(~blocks)
     choose_references(state, np.array([s]), policy)
-    restart(state, s, at)
 
 
 def _rounded_up(bounds: FloatArray) -> npt.NDArray[np.float32]:

@@ -5,20 +5,35 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cache
+from hashlib import blake2b
+from typing import NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 
 from service.detection import bank
 from service.detection.baseline import own_shares
-from service.detection.policy import Policy
+from service.detection.policy import Limit, Policy
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_PAIR, VIEW_OF_CELL
 from service.streams.in_force import weights
 from service.streams.ordinary import bound_of, bounds_of_view, except_cells
+from service.streams.rows import Rows
 from service.streams.state import BY_LAW, BY_OWN, UNDECIDED, States
 
 DAY_MS = 86_400_000
+LIMIT_DETECTORS = slice(len(bank.RARE_VIEWS), bank.JOINT)
+"""Places of the review limits among the joint detectors."""
+
+JOINT_VIEWS = (*bank.RARE_VIEWS, *([1] * bank.LIMITS))
+"""The view whose tolerance serves each joint detector; a limit is one of leading digits."""
+
+
+class Kind(NamedTuple):
+    """What of a stream's name matters to its rules."""
+
+    flow: str
+    currency: str
 
 
 @dataclass
@@ -30,7 +45,9 @@ class Rules:
     watching: npt.NDArray[np.bool_]  # (n,) flows that may raise alarms
     active: FloatArray  # (n, 3), 1 for a view that counts
     shapes: FloatArray  # (n, 14), weights of the shape detectors
-    rare: FloatArray  # (n, 2), weights of the rare cells detectors
+    joint: FloatArray  # (n, 6), weights of the joint detectors
+    low: IntArray  # (n, 4) amounts just below each review limit are low <= amount < high
+    high: IntArray
     size: IntArray  # (n,) rows and span of a complete baseline
     span: IntArray
 
@@ -42,7 +59,9 @@ class Rules:
             np.zeros(n, bool),
             np.zeros((n, 3)),
             np.zeros((n, bank.SHAPES)),
-            np.zeros((n, len(bank.RARE_VIEWS))),
+            np.zeros((n, bank.JOINT)),
+            np.zeros((n, bank.LIMITS), np.int64),
+            np.zeros((n, bank.LIMITS), np.int64),
             np.zeros(n, np.int64),
             np.zeros(n, np.int64),
         )
@@ -54,7 +73,7 @@ def adopt(
     versions: IntArray,
     rules: Rules,
     policies: Mapping[int, Policy],
-    flows: Sequence[str],
+    kinds: Sequence[Kind],
 ) -> None:
     """Put policy versions into force for some streams (version 0: none yet)."""
     for version in np.unique(versions[versions > 0]).tolist():
@@ -62,8 +81,29 @@ def adopt(
         changed = mine[np.not_equal(state["policy"][mine], version)]
         if changed.size:
             state["policy"][changed] = version
+            _learn_limits_anew(state, changed, policies[version], kinds)
             choose_references(state, changed, policies[version])
-        refresh(state, mine, rules, policies[version], flows)
+        refresh(state, mine, rules, policies[version], kinds)
+
+
+def _learn_limits_anew(
+    state: States, slots: IntArray, policy: Policy, kinds: Sequence[Kind]
+) -> None:
+    """Forget what was learned of review limits where they have changed."""
+    for s in slots.tolist():
+        mark = fingerprint(policy.limits_in(kinds[s].currency))
+        if mark != int(state["limits"][s]):
+            state["limits"][s] = mark
+            state["limit_rows"][s] = 0
+            state["limit_base"][s] = 0
+            for name in ("bound", "value", "cusum", "onset", "onset_at", "hits", "spent", "seen"):
+                state[f"joint_{name}"][s, LIMIT_DETECTORS] = 0
+
+
+def fingerprint(limits: Sequence[Limit]) -> int:
+    """Return a number that stands for review limits, 0 for none."""
+    text = repr([(limit.lowest, limit.amount) for limit in limits]).encode()
+    return int.from_bytes(blake2b(text, digest_size=8).digest(), "little") if limits else 0
 
 
 def choose_references(state: States, slots: IntArray, policy: Policy) -> None:
@@ -105,13 +145,17 @@ def _law_shapes(tolerance: float) -> tuple[FloatArray, FloatArray]:
 
 
 def refresh(
-    state: States, slots: IntArray, rules: Rules, policy: Policy, flows: Sequence[str]
+    state: States, slots: IntArray, rules: Rules, policy: Policy, kinds: Sequence[Kind]
 ) -> None:
     """Recompute the rules of streams under one policy."""
     rules.tolerance[slots] = policy.tolerances()
     rules.threshold[slots] = policy.transactions_per_false_alarm
-    rules.watching[slots] = [policy.watches(flows[s]) for s in slots.tolist()]
-    rules.active[slots], rules.shapes[slots], rules.rare[slots] = weights(state, slots, policy)
+    rules.watching[slots] = [policy.watches(kinds[s].flow) for s in slots.tolist()]
+    rules.active[slots], rules.shapes[slots], rules.joint[slots] = weights(state, slots, policy)
+    if policy.limits:
+        for s in slots.tolist():
+            for place, limit in enumerate(policy.limits_in(kinds[s].currency)):
+                rules.low[s, place], rules.high[s, place] = limit.lowest, limit.amount
     rules.size[slots] = policy.baseline_size
     rules.span[slots] = int(policy.baseline_days * DAY_MS)
 
@@ -120,3 +164,9 @@ def bounds(state: States, rules: Rules, slot: IntArray, cell: IntArray) -> Float
     """Return the bound u of (stream, cell) pairs, tolerance included."""
     tolerance = rules.tolerance[slot, VIEW_OF_CELL[cell]]
     return np.minimum(bound_of(state, slot, cell) * (1 + tolerance), 1.0)
+
+
+def below_limits(rules: Rules, part: Rows) -> npt.NDArray[np.bool_]:
+    """Return which rows lie just below each review limit, (4, n)."""
+    low, high = rules.low[part.slot].T, rules.high[part.slot].T
+    return np.asarray((part.amount >= low) & (part.amount < high))

@@ -12,7 +12,7 @@ from service.detection.paths import affine_path, cusum_path
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import CELLS, LEAD_PAIR, VIEW_OF_CELL
 from service.streams.rows import Rows
-from service.streams.rules import Rules, bounds
+from service.streams.rules import JOINT_VIEWS, Rules, below_limits, bounds
 from service.streams.state import BY_OWN, States
 
 _EPS = bank.EPSILONS[:, None]
@@ -70,19 +70,23 @@ class Shapes:
 
 
 @dataclass(frozen=True)
-class Rare:
-    """Rare cells detectors after every row.
+class Joint:
+    """Joint detectors after every row; J of them are in force in some stream of the pass.
 
     Attributes
     ----------
-    value : float64 array (2, 2, n)
-        By view and contamination.
-    cusum : float64 array (2, n)
-    rest : int64 array (2, n)
+    place : list of int
+        Which ones they are, length J.
+    value : float64 array (J, 2, n)
+        By contamination.
+    cusum : float64 array (J, n)
+    rest : int64 array (J, n)
         As of `Shapes`.
-    seen, member : bool arrays (2, n)
-        Rows that a detector sees, and those of them that are in a rare cell.
+    seen, member : bool arrays (J, n)
+        Rows that a detector sees, and those of them in its cells.
     """
+
+    place: list[int]
 
     value: FloatArray
     cusum: FloatArray
@@ -103,7 +107,7 @@ class Running:
         Weighted sums of the cells, by view and contamination.
     cells : Cells
     shapes : Shapes
-    rare : Rare or None
+    joint : Joint or None
         None where no stream of the pass has such detectors in force.
     """
 
@@ -111,7 +115,7 @@ class Running:
     sums: FloatArray
     cells: Cells
     shapes: Shapes
-    rare: Rare | None
+    joint: Joint | None
 
 
 def evaluate(state: States, rules: Rules, part: Rows) -> Running:
@@ -139,11 +143,13 @@ def evaluate(state: States, rules: Rules, part: Rows) -> Running:
     stored = state["shape_cusum"].T[:, part.slot[first]]
     cusum = _cusum(stored, first, longest, np.log(ratio))
     shapes = Shapes(shape, cusum, _last_rest(cusum, begin))
-    rare = None
-    if rules.rare[part.slot[first]].any():
-        rare = _rare(state, rules, part, first, begin, longest)
-        total += (rare.value.mean(axis=1) * rules.rare[part.slot].T).sum(axis=0)
-    return Running(total, sums, cells, shapes, rare)
+    joint = None
+    places = np.flatnonzero(rules.joint[part.slot[first]].any(axis=0)).tolist()
+    if places:
+        joint = _joint(state, rules, part, first, begin, longest, places)
+        weight = rules.joint[part.slot][:, places].T
+        total += (joint.value.mean(axis=1) * weight).sum(axis=0)
+    return Running(total, sums, cells, shapes, joint)
 
 
 def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
@@ -221,33 +227,47 @@ def _values(
     return affine_path(a, b, longest)
 
 
-def _rare(
+def _joint(
     state: States,
     rules: Rules,
     part: Rows,
     first: npt.NDArray[np.bool_],
     begin: IntArray,
     longest: int,
-) -> Rare:
-    """Run the rare cells detectors: ``L = (1 - eps) + eps 1{rare} / u`` with their joint bound."""
-    views = list(bank.RARE_VIEWS)
-    slot, cell = part.slot, part.cell[views]
-    seen = (cell >= 0) & (rules.rare[slot].T > 0)
-    member = seen & (state["rare"][slot, np.maximum(cell, 0)] > 0)
-    tolerance = rules.tolerance[slot][:, views].T
-    u = np.minimum(state["rare_bound"][slot].T.astype(np.float64) * (1 + tolerance), 1.0)
-    u = np.where(seen, u, 1.0)
-    eps = bank.RARE_EPSILONS[None, :, None]
+    places: list[int],
+) -> Joint:
+    """Run the joint detectors: ``L = (1 - eps) + eps 1{member} / u`` with a joint bound u."""
+    slot = part.slot
+    in_force = rules.joint[slot][:, places].T > 0
+    seen, member = _membership(state, rules, part)
+    seen = seen[places] & in_force
+    member = member[places] & seen
+    tolerance = rules.tolerance[slot][:, [JOINT_VIEWS[p] for p in places]].T
+    bound = state["joint_bound"][slot][:, places].T.astype(np.float64)
+    u = np.where(seen, np.minimum(bound * (1 + tolerance), 1.0), 1.0)
+    eps = bank.JOINT_EPSILONS[None, :, None]
     ratio = (1 - eps) + eps * (member / u)[:, None, :]
     a = np.where(seen[:, None, :], ratio, 1.0)
     b = np.where(seen[:, None, :], ratio, 0.0)
-    b[..., first] += a[..., first] * np.moveaxis(state["rare_value"][slot[first]], 0, -1)
+    stored = np.moveaxis(state["joint_value"][slot[first]][:, places], 0, -1)
+    b[..., first] += a[..., first] * stored
     a[..., first] = 0
     value = affine_path(a, b, longest)
     step = np.log(bank.CUSUM_RETAINED + bank.CUSUM_GAIN * member / u) * seen
-    cusum = _cusum(state["rare_cusum"].T[:, slot[first]], first, longest, step)
-    rest = np.where(rules.rare[slot].T > 0, _last_rest(cusum, begin), -1)
-    return Rare(value, cusum, rest, seen, member)
+    cusum = _cusum(state["joint_cusum"][slot[first]][:, places].T, first, longest, step)
+    rest = np.where(in_force, _last_rest(cusum, begin), -1)
+    return Joint(places, value, cusum, rest, seen, member)
+
+
+def _membership(
+    state: States, rules: Rules, part: Rows
+) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.bool_]]:
+    """Return which rows each joint detector sees, and which are in its cells, (6, n) each."""
+    cell = part.cell[list(bank.RARE_VIEWS)]
+    rare = (cell >= 0) & (state["rare"][part.slot, np.maximum(cell, 0)] > 0)
+    below = below_limits(rules, part)
+    seen = np.concatenate([cell >= 0, np.ones_like(below)])
+    return seen, np.concatenate([rare, below])
 
 
 def _cusum(

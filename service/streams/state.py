@@ -12,18 +12,20 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.bank import RARE_VIEWS, SHAPES
+from service.detection.bank import JOINT, LIMITS, SHAPES
 from service.digits.significand import IntArray
 from service.digits.views import CELLS, VIEW_OF_CELL
 
 FORMAT = 1
-RARE = len(RARE_VIEWS)
 
 UNDECIDED, BY_LAW, BY_OWN = 0, 1, 2
 """What a view is compared with; undecided while its baseline is being learned."""
 
 REFUTED_BY_CIRCLE, REFUTED_BY_CELL, REFUTED_BY_BANK, TOO_FEW = 1, 2, 4, 8
 """Why the law was not accepted for a view."""
+
+NO_VIEW = 3
+"""Stands for a view that sees every amount above zero: the limits'."""
 
 STATE = np.dtype(
     [
@@ -45,13 +47,13 @@ STATE = np.dtype(
         ("shape_cusum", "<f8", SHAPES),
         ("shape_onset", "<i8", SHAPES),
         ("shape_onset_at", "<i8", SHAPES),  # event time of the row before it
-        ("rare_value", "<f8", (RARE, 2)),  # of the rare cells detectors, by view and contamination
-        ("rare_cusum", "<f8", RARE),
-        ("rare_onset", "<i8", RARE),
-        ("rare_onset_at", "<i8", RARE),
-        ("rare_hits", "<i8", RARE),  # since onset, and their amounts, and rows seen by the view
-        ("rare_spent", "<f8", RARE),
-        ("rare_seen", "<i8", RARE),
+        ("joint_value", "<f8", (JOINT, 2)),  # of the joint detectors, by contamination
+        ("joint_cusum", "<f8", JOINT),
+        ("joint_onset", "<i8", JOINT),
+        ("joint_onset_at", "<i8", JOINT),
+        ("joint_hits", "<i8", JOINT),  # since onset, their amounts, and rows seen
+        ("joint_spent", "<f8", JOINT),
+        ("joint_seen", "<i8", JOINT),
         ("value", "<f8", (CELLS, 3)),  # of a cell's detectors right after its last hit
         ("hit", "<i8", CELLS),  # the view's clock at the cell's last hit or the last restart
         ("cusum", "<f8", CELLS),  # after the last hit
@@ -74,7 +76,12 @@ STATE = np.dtype(
         ("bound", "<f4", CELLS),  # own upper bounds, before tolerance
         ("excepted", "u1", CELLS),  # cells with their own bound though the law was accepted
         ("rare", "u1", CELLS),  # cells hardly used in the baseline
-        ("rare_bound", "<f4", RARE),  # of their joint share; 0 before there is a baseline
+        ("joint_bound", "<f4", JOINT),  # of joint shares; 0 before there is a baseline
+        ("limits", "<u8"),  # fingerprint of the review limits in force, 0 for none
+        ("limit_rows", "<i8"),  # rows from which the bounds of the limits are learned
+        ("limit_first_at", "<i8"),
+        ("limit_last_at", "<i8"),
+        ("limit_base", "<i8", LIMITS),  # those of them just below each limit
         ("shape_scale", "<f8", SHAPES),  # c of the projection; infinite for a dropped detector
         ("shape_norm", "<f8", SHAPES),  # z of the alternative
         # dependence between neighbours, counted once a baseline is complete
@@ -84,12 +91,14 @@ STATE = np.dtype(
         # the open alarm
         ("alarm", "S16"),  # id, binary; empty for none
         ("alarm_crossings", "<u4"),
-        ("alarm_view", "u1"),
+        ("alarm_view", "u1"),  # place in ``WATCHED_VIEWS``; NO_VIEW for a limit's
         ("alarm_shape", "u1"),  # 1 if its pattern is a shape
         ("alarm_live", "u1"),  # 1 once a crossing was not historic
         ("alarm_severity", "<f8"),
         ("alarm_share", "<f8"),  # expected in its cells
         ("alarm_cells", "u1", CELLS),
+        ("alarm_low", "<i8"),  # amounts from this to below that, for a limit's
+        ("alarm_high", "<i8"),
         ("alarm_hits", "<i8"),  # rows in its cells since its onset, and their amounts
         ("alarm_spent", "<f8"),
         ("alarm_seen", "<i8"),  # rows its view saw since the onset
@@ -296,13 +305,13 @@ def restart(state: States, s: int, at: int) -> None:
     state["shape_cusum"][s] = 0
     state["shape_onset"][s] = state["rows"][s] + 1
     state["shape_onset_at"][s] = at
-    state["rare_value"][s] = 0
-    state["rare_cusum"][s] = 0
-    state["rare_onset"][s] = state["rows"][s] + 1
-    state["rare_onset_at"][s] = at
-    state["rare_hits"][s] = 0
-    state["rare_spent"][s] = 0
-    state["rare_seen"][s] = 0
+    state["joint_value"][s] = 0
+    state["joint_cusum"][s] = 0
+    state["joint_onset"][s] = state["rows"][s] + 1
+    state["joint_onset_at"][s] = at
+    state["joint_hits"][s] = 0
+    state["joint_spent"][s] = 0
+    state["joint_seen"][s] = 0
     state["value"][s] = 0
     state["hit"][s] = state["clock"][s][VIEW_OF_CELL]
     state["cusum"][s] = 0

@@ -43,13 +43,13 @@ def get_policy(name: str) -> Response:
 @policies.path("/v1/policies/<name>", "PUT", parameters=[NAME])
 @requires("tune")
 @policies.takes(PolicySettings)
-@policies.answers(Policy, "The policy as it is in force from the next row on.")
+@policies.answers(Policy, "The policy as it is from now on.")
 @policies.fails(400, 413, 415, 422, 503)
 def put_policy(settings: dict[str, Any], name: str) -> Response:
     """Make or replace a policy.
 
     The body replaces the policy as a whole: what it leaves out takes its default. Rows that arrive
-    from then on are judged by the new version.
+    a second later or more are judged by the new version, whichever worker takes them.
     """
     if POLICY.fullmatch(name) is None:
         expected = "Expected 1 to 32 characters of a-z 0-9 _ -."

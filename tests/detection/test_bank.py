@@ -12,10 +12,10 @@ from service.digits.laws import leading_law
 
 
 def test_weights_sum_to_one() -> None:
-    whole = bank.CELL_WEIGHTS.sum() + bank.SHAPE_WEIGHTS.sum() + bank.RARE_WEIGHTS.sum()
+    whole = bank.CELL_WEIGHTS.sum() + bank.SHAPE_WEIGHTS.sum() + bank.JOINT_WEIGHTS.sum()
     assert whole == pytest.approx(1, abs=1e-12)
     assert bank.EPSILON_SHARES.sum() == pytest.approx(1)
-    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.12, 0.33, 0.41])
+    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.12, 0.32, 0.40])
 
 
 @pytest.mark.parametrize("tolerance", [0.02, 0.1, 0.3])

@@ -227,11 +227,11 @@ def test_rare_cells_obey_their_recurrence() -> None:
     assert np.all(state["reference"] == BY_OWN)
     learned = int(state["base_rows"])
     for place, (view, tolerance) in enumerate(((1, 0.10), (2, 0.05))):
-        u = float(state["rare_bound"][place]) * (1 + tolerance)
+        u = float(state["joint_bound"][place]) * (1 + tolerance)
         for e, eps in enumerate((0.12, 0.40)):
             value = 0.0
             for amount in amounts[learned:].tolist():
                 cell = cells_of(amount)[view]
                 if cell >= 0:
                     value = (1 + value) * (1 - eps + eps * bool(state["rare"][cell]) / u)
-            assert state["rare_value"][place, e] == pytest.approx(value, rel=1e-9)
+            assert state["joint_value"][place, e] == pytest.approx(value, rel=1e-9)

@@ -19,6 +19,7 @@ from service.store.keys import Partition, path, stream_of
 from service.store.loading import kept_records
 from service.streams.fold import Crossing, fold
 from service.streams.record import HEADER, Records, Stream
+from service.streams.rules import Kind
 from service.streams.state import Folded
 from service.tallies import Tallies
 from tests.scenarios import oracle
@@ -139,7 +140,7 @@ def pure_fold(
         np.concatenate(records),
         np.repeat(np.arange(len(paths)), [len(r) for r in records]),
         tallies.catalogue.of(TENANT, fresh=True).by_version,
-        [stream_of(p)[1].flow for p in paths],
+        [Kind(s.flow, s.currency) for _, s in map(stream_of, paths)],
         [p.encode() for p in paths],
     )
     return folded, crossings

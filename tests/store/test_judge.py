@@ -130,10 +130,10 @@ def test_poison_keeps_nothing_from_the_others(tallies: Tallies, harm: str) -> No
 
 
 def test_any_error_of_the_fold_is_poison(tallies: Tallies, monkeypatch) -> None:
-    def fold(folded, records, slot, policies, flows, names):
+    def fold(folded, records, slot, policies, kinds, names):
         if b"main/poison/sale/EUR" in names:
             raise TypeError("nobody foresaw this")
-        return sound(folded, records, slot, policies, flows, names)
+        return sound(folded, records, slot, policies, kinds, names)
 
     sound = judge.fold
     monkeypatch.setattr(judge, "fold", fold)

@@ -167,8 +167,8 @@ def test_evidence_is_the_weighted_sum_of_what_is_in_force(town) -> None:
             total += (state["shape"][s] * bank.SHAPE_WEIGHTS)[on].sum()
         for place, view in enumerate((1, 2)):
             own = state["reference"][s, view] == BY_OWN
-            if counts[view] and own and 0 < state["rare_bound"][s, place] < 0.5:
-                total += 0.016 * state["rare_value"][s, place].mean()
+            if counts[view] and own and 0 < state["joint_bound"][s, place] < 0.5:
+                total += 0.016 * state["joint_value"][s, place].mean()
         # a resting alarm's values reach the ceiling, where they are held apart from each other
         expected = min(math.log10(max(1.0, total)), 90)
         assert min(got[s], 90) == pytest.approx(expected, abs=0.0051)

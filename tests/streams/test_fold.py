@@ -6,11 +6,12 @@ import numpy as np
 import pytest
 
 from service.detection import bank
-from service.detection.policy import Policy
+from service.detection.policy import Limit, Policy
 from service.digits.views import VIEW_OF_CELL
 from service.streams.findings import evidence_of_cells
 from service.streams.fold import Crossing, fold
 from service.streams.record import HISTORIC, RECORD
+from service.streams.rules import Kind
 from service.streams.state import (
     BY_LAW,
     BY_OWN,
@@ -42,7 +43,7 @@ def run(logs, policies, *, cuts=None, snapshots=False) -> tuple[Folded, list[Cro
     """Fold one log per stream, whole or in pieces; optionally through snapshots in between."""
     folded = Folded.new(len(logs))
     names = [f"t/m{i}".encode() for i in range(len(logs))]
-    flows = ["sale"] * len(logs)
+    kinds = [Kind("sale", "EUR")] * len(logs)
     crossings = []
     edges = [[0, *c, len(log)] for c, log in zip(cuts or [[]] * len(logs), logs, strict=True)]
     for k in range(max(map(len, edges)) - 1):
@@ -51,7 +52,7 @@ def run(logs, policies, *, cuts=None, snapshots=False) -> tuple[Folded, list[Cro
             for e, log in zip(edges, logs, strict=True)
         ]
         slot = np.repeat(np.arange(len(logs)), [len(p) for p in parts])
-        crossings += fold(folded, np.concatenate(parts), slot, policies, flows, names)
+        crossings += fold(folded, np.concatenate(parts), slot, policies, kinds, names)
         if snapshots:
             blobs = write_snapshots(folded, np.ones(len(logs), np.int64))
             folded, _ = read_snapshots(blobs)
@@ -119,7 +120,13 @@ def test_cuts_and_snapshots_change_nothing(seed: int) -> None:
     policies = {
         1: Policy(baseline_size=400, baseline_days=1.0),
         2: LAW,
-        3: Policy(baseline_size=300, baseline_days=0, tolerance=0.2, version=3),
+        3: Policy(
+            baseline_size=300,
+            baseline_days=0,
+            tolerance=0.2,
+            version=3,
+            limits=(Limit("EUR", 500_000), Limit("EUR", 10_000, 0.2), Limit("USD", 1000)),
+        ),
     }
     shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], 2500)
     lengths = (2500, 2000, 700, 40)
@@ -265,11 +272,60 @@ def test_the_first_live_crossing_of_an_old_alarm_says_so() -> None:
     assert 20 < first.rows <= 25
 
 
+def test_amounts_just_below_a_review_limit_are_a_cell_of_their_own() -> None:
+    # 9 000.00 to 9 999.99, spread over many pairs and endings, in a merchant of large amounts
+    rng = np.random.default_rng(9)
+    n, change = 3500, 2500
+    at = START + np.arange(n) * 15 * 60_000
+    amounts = (10 ** rng.normal(5.6, 0.35, n)).astype(np.int64)
+    below = (np.arange(n) >= change) & (rng.random(n) < 0.2)
+    amounts[below] = rng.integers(900_000, 1_000_000, below.sum())
+    limited = Policy(reference="own", limits=(Limit("EUR", 1_000_000), Limit("USD", 5)))
+    folded, crossings = run([records(amounts, at=at)], {1: limited})
+    state = folded.state[0]
+    learned = int(state["limit_rows"])
+    inside = (amounts[:learned] >= 900_000) & (amounts[:learned] < 1_000_000)
+    assert state["limit_base"].tolist() == [inside.sum(), 0, 0, 0]
+    assert state["joint_bound"][2] > inside.mean()
+    first = crossings[0]
+    assert change < first.rows < change + 120
+    found = {f.view: f for f in first.findings}["limit"]
+    assert (found.cells, found.low, found.high) == (("1000000",), 900_000, 1_000_000)
+    since = amounts[found.onset_row - 1 : first.rows]
+    assert found.observed == pytest.approx(
+        ((since >= 900_000) & (since < 1_000_000)).mean(), abs=1e-12
+    )
+    without = run([records(amounts, at=at)], {1: Policy(reference="own")})[1]
+    assert all(f.view != "limit" for c in without for f in c.findings)
+    assert not without or without[0].rows > first.rows
+
+
+def test_new_limits_are_learned_anew() -> None:
+    rng = np.random.default_rng(10)
+    n = 2500
+    at = START + np.arange(n) * 30 * 60_000
+    versions = np.repeat([1, 2], (1200, 1300))
+    policies = {
+        1: Policy(limits=(Limit("EUR", 1_000_000),)),
+        2: Policy(version=2, limits=(Limit("EUR", 2_000_000),)),
+    }
+    folded, _ = run([records(law_amounts(rng, n, 4, 8), at=at, policy=versions)], policies)
+    state = folded.state[0]
+    assert state["limit_rows"] == 1000
+    assert 0 < state["joint_bound"][2] < 1
+    np.testing.assert_array_equal(state["joint_bound"][3:], 1)  # no limits there
+    halfway, _ = run(
+        [records(law_amounts(rng, 2000, 4, 8), at=at[:2000], policy=versions[:2000])], policies
+    )
+    assert halfway.state["joint_bound"][0, 2] == 0
+    assert halfway.state["limit_rows"][0] == 800
+
+
 def test_quiet_flows_are_tallied_but_raise_nothing() -> None:
     folded = Folded.new(1)
     log = records(np.full(500, 4900))
     slot = np.zeros(500, np.int64)
-    assert fold(folded, log, slot, {1: LAW}, ["chargeback"], [b"x"]) == []
+    assert fold(folded, log, slot, {1: LAW}, [Kind("chargeback", "EUR")], [b"x"]) == []
     assert folded.state["rows"][0] == 500
     assert folded.state["crossed_row"][0] > 0
     assert not folded.state["alarm_crossings"][0]
