@@ -14,9 +14,17 @@ from __future__ import annotations
 
 import numpy as np
 
+from service.detection.cells import (
+    CELLS,
+    HALVES,
+    QUARTERS,
+    THIRDS,
+    VIEW_OF_CELL,
+    with_coarse,
+)
 from service.digits.laws import law_cells, leading_law
 from service.digits.significand import FloatArray
-from service.digits.views import CELLS, LEAD_DIGIT, LEAD_PAIR, TAIL_PAIR, WATCHED
+from service.digits.views import LEAD_DIGIT, LEAD_PAIR, TAIL_PAIR
 
 EPSILONS = np.array([0.04, 0.12, 0.40])
 """Contaminations that the cell detectors bet on."""
@@ -24,7 +32,8 @@ EPSILONS = np.array([0.04, 0.12, 0.40])
 RETAINED = 1 - EPSILONS
 EPSILON_SHARES = np.array([1.0, 1.0, 1.5]) / 3.5
 
-LAW = law_cells()
+LAW = with_coarse(law_cells())
+"""Shares of all cells under the law, (224,)."""
 
 _CUSUM_EPSILON = 1
 CUSUM_RETAINED = float(RETAINED[_CUSUM_EPSILON])
@@ -33,20 +42,23 @@ CUSUM_GAIN = float(EPSILONS[_CUSUM_EPSILON])
 
 
 def _cell_weights() -> FloatArray:
-    """Weights of the cells over all contaminations: 0.84 in all, more where people cheat."""
+    """Weights of the cells over all contaminations: 0.86 in all, more where people cheat."""
     weights = np.empty(CELLS)
-    weights[LEAD_DIGIT] = 0.12 / 9
-    pair = np.full(90, 0.32 * 0.6 / 81)
-    pair[9::10] = 0.32 * 0.4 / 9  # just under a round number
+    weights[LEAD_DIGIT] = 0.11 / 9
+    pair = np.full(90, 0.28 * 0.6 / 81)
+    pair[9::10] = 0.28 * 0.4 / 9  # just under a round number
     weights[LEAD_PAIR] = pair
-    tail = np.full(100, 0.40 * 0.6 / 92)
-    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.40 * 0.4 / 8
+    tail = np.full(100, 0.36 * 0.6 / 92)
+    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.36 * 0.4 / 8
     weights[TAIL_PAIR] = tail
+    for cells, weight in ((HALVES, 0.05), (QUARTERS, 0.03), (THIRDS, 0.03)):
+        weights[cells] = weight / (cells.stop - cells.start)
     return weights
 
 
 CELL_WEIGHTS = _cell_weights()
-VIEW_WEIGHTS = np.array([CELL_WEIGHTS[cells].sum() for cells in WATCHED.values()])
+VIEW_WEIGHTS = np.bincount(VIEW_OF_CELL, CELL_WEIGHTS)
+"""Weights of all cells that count with each watched view, (3,)."""
 
 INVENTED = np.array([0.15, 0.40])
 """Shares of invented amounts (digits uniform) in the first shape detectors."""
@@ -56,7 +68,7 @@ _PHASES = np.arange(6) / 6
 SHIFT_RHO = np.repeat(_RHO, len(_PHASES))
 SHIFT_PHASE = np.tile(_PHASES, len(_RHO))
 SHAPES = len(INVENTED) + len(SHIFT_RHO)
-SHAPE_WEIGHTS = np.concatenate([np.full(2, 0.03), np.full(12, 0.004)])
+SHAPE_WEIGHTS = np.concatenate([np.full(2, 0.025), np.full(12, 0.04 / 12)])
 
 RARE_VIEWS = (1, 2)
 """Watched views that have a rare cells detector: lead pair and tail pair."""
@@ -68,7 +80,7 @@ JOINT = len(RARE_VIEWS) + LIMITS
 """Joint detectors: for the rare cells of each such view, and for the amounts below each limit."""
 
 JOINT_EPSILONS = np.array([0.12, 0.40])
-JOINT_WEIGHTS = np.array([0.016, 0.016, 0.005, 0.005, 0.005, 0.005])
+JOINT_WEIGHTS = np.array([0.015, 0.015, 0.005, 0.005, 0.005, 0.005])
 """Weight of each joint detector, shared evenly by the contaminations."""
 
 

@@ -14,9 +14,10 @@ import numpy.typing as npt
 from scipy import special
 
 from service.detection.bank import JOINT, LAW, RARE_VIEWS
+from service.detection.cells import CELLS, VIEW_OF_CELL
 from service.digits.intervals import clopper_pearson_lower, clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import CELLS, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS
+from service.digits.views import WATCHED, WATCHED_VIEWS
 
 BOUNDS = CELLS + JOINT
 """Bounds that one baseline gives, over which its error is shared (Bonferroni)."""
@@ -66,11 +67,11 @@ def own_bounds(
 
     Parameters
     ----------
-    count : int64 array (199,)
+    count : int64 array (224,)
         The baseline's counts.
     rows : int64 array (3,)
         Baseline rows seen by each watched view.
-    block_count : int64 array (B, 199)
+    block_count : int64 array (B, 224)
         Counts per block.
     block_rows : int64 array (B, 3)
         Rows of each block seen by each view.
@@ -82,7 +83,7 @@ def own_bounds(
 
     Returns
     -------
-    float64 array (199,)
+    float64 array (224,)
         In (0, 1]; 1 for every cell of a view without rows.
     """
     if not 0 < alpha < 1:
@@ -135,7 +136,7 @@ def rare_cells(
 
     Parameters
     ----------
-    block_count : int64 array (B, 199)
+    block_count : int64 array (B, 224)
         Counts of blocks of consecutive rows, in order.
     block_rows : int64 array (B, 3)
         Rows of each block seen by each view.
@@ -144,7 +145,7 @@ def rare_cells(
 
     Returns
     -------
-    rare : bool array (199,)
+    rare : bool array (224,)
     bound : float64 array (2,)
         Joint upper bounds for lead pair and tail pair, tolerance not included.
     """
@@ -222,7 +223,7 @@ def law_verdict(
     n = rows[VIEW_OF_CELL]
     lower = clopper_pearson_lower(count, n, REFUTING_LEVEL / CELLS)
     too_much = lower > LAW * (1 + tol[VIEW_OF_CELL])
-    cell = np.array([bool(too_much[cells].any()) for cells in WATCHED.values()])
+    cell = np.bincount(VIEW_OF_CELL, too_much) > 0
     off_circle = np.zeros(3, dtype=bool)
     if circle_rows < HARMONICS_FROM:
         off_circle[:2] = True
@@ -240,7 +241,7 @@ def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
 
     Parameters
     ----------
-    count : int array (..., 199)
+    count : int array (..., 224)
         The baseline's counts.
     """
     counts = np.asarray(count, dtype=np.float64)
@@ -250,7 +251,7 @@ def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
 
 
 def own_shares(count: npt.ArrayLike) -> FloatArray:
-    """Return the baseline's shares of all cells with half a row added to each, (..., 199)."""
+    """Return the baseline's shares of all cells with half a row added to each, (..., 224)."""
     smoothed = np.asarray(count, dtype=np.float64) + 0.5
     for cells in WATCHED.values():
         smoothed[..., cells] /= smoothed[..., cells].sum(axis=-1, keepdims=True)

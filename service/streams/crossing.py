@@ -9,8 +9,9 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from service.detection.cells import CELLS
 from service.digits.significand import IntArray
-from service.digits.views import CELLS, WATCHED_VIEWS
+from service.digits.views import WATCHED_VIEWS
 from service.streams.findings import LIMIT, Finding, findings
 from service.streams.rows import Rows
 from service.streams.rules import Rules
@@ -137,7 +138,7 @@ def follow(
     rows : int64 array
         Rows of ``part`` that were consumed.
     hit_row, hit_key : int64 arrays (h,)
-        Row in ``part`` and ``slot * 199 + cell`` of the hits of the pass.
+        Row in ``part`` and ``slot * 224 + cell`` of the hits of the pass.
     clock : int64 array (n, 3)
         Rows of the pass seen by each view.
     """

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from service.detection import bank
+from service.detection.cells import COARSE, VIEW_OF_CELL, pairs_of
 from service.digits.significand import FloatArray
-from service.digits.views import LEAD_PAIR, VIEW_OF_CELL, WATCHED, WATCHED_VIEWS, cell_label
-from service.streams.ordinary import bounds_of_view
+from service.digits.views import LEAD_PAIR, WATCHED, WATCHED_VIEWS, cell_label
+from service.streams.ordinary import bounds_of_cells, bounds_of_view
 from service.streams.state import BY_OWN, States
 
 NOTABLE = 0.05
@@ -39,7 +40,7 @@ class Finding:
         Strongest first; of rare cells those that came up most; for a shape the cells most in
         excess under it.
     members : tuple of int
-        Numbers of all cells whose rows are counted for it.
+        Numbers of the cells whose rows are counted for it; one coarse cell stands for its pairs.
     weight : float
         Share of the whole evidence, 0 to 1.
     onset_row : int
@@ -85,7 +86,7 @@ class Finding:
 
 
 def evidence_of_cells(state: States) -> FloatArray:
-    """Return the weighted value of every cell's detectors now, (..., 199).
+    """Return the weighted value of every cell's detectors now, (..., 224).
 
     Between hits a value decays in closed form: n misses act as
     ``R -> r**n R + r (1 - r**n) / (1 - r)``.
@@ -126,8 +127,8 @@ def findings(
         return []
     found = [
         _cells(state, view, cells, whole, float(tolerance[view]))
-        for view, part in enumerate(WATCHED.values())
-        if cells[part].sum() >= NOTABLE * whole
+        for view, part in enumerate(np.bincount(VIEW_OF_CELL, cells).tolist())
+        if part >= NOTABLE * whole
     ]
     found += [
         _joint(state, place, float(together[place]) / whole, tolerance, limits)
@@ -138,50 +139,53 @@ def findings(
     return sorted(found, key=lambda f: -f.weight)
 
 
-def _reference(state: States, view: int) -> tuple[str, FloatArray, FloatArray]:
-    """Name, expected shares and bounds (before tolerance) of a view's cells."""
-    part = WATCHED[WATCHED_VIEWS[view]]
+def _reference(state: States, view: int) -> tuple[str, FloatArray]:
+    """Name of a view's reference, and its shares of all cells, (224,)."""
     if state["reference"][view] == BY_OWN:
-        base = state["base"][part].astype(np.float64)
-        return "own", base / max(base.sum(), 1.0), bounds_of_view(state, view)
-    return "law", bank.LAW[part], bounds_of_view(state, view)
+        rows = state["base"][WATCHED[WATCHED_VIEWS[view]]].sum()
+        return "own", state["base"].astype(np.float64) / max(rows, 1.0)
+    return "law", bank.LAW
 
 
 def _cells(
     state: States, view: int, evidence: FloatArray, whole: float, tolerance: float
 ) -> Finding:
-    name = WATCHED_VIEWS[view]
-    part = WATCHED[name]
-    mine = evidence[part]
-    strongest = int(np.argmax(mine))
-    chosen = np.flatnonzero((mine >= COMPANION * mine[strongest]) & (state["run"][part] > 0))
-    chosen = chosen[np.argsort(-mine[chosen], kind="stable")]
-    if not chosen.size:
+    numbers = np.flatnonzero(view == VIEW_OF_CELL)
+    strongest = int(numbers[np.argmax(evidence[numbers])])
+    if strongest >= COARSE.start:
         chosen = np.array([strongest])
-    label, share, bound = _reference(state, view)
-    onset = int(state["onset"][part][chosen].min()) or int(state["rows"])
-    first = chosen[np.argmin(state["onset"][part][chosen])]
-    since = int(state["clock"][view]) - int(state["onset_clock"][part][first]) + 1
-    hits = int(state["run"][part][chosen].sum())
-    expected = float(share[chosen].sum())
-    misses = int(state["clock"][view]) - int(state["hit"][part][strongest])
-    cusum = float(state["cusum"][part][strongest]) + misses * float(np.log(bank.CUSUM_RETAINED))
+        named = pairs_of(strongest)
+    else:
+        fine = numbers[numbers < COARSE.start]
+        strong = evidence[fine] >= COMPANION * evidence[strongest]
+        chosen = fine[strong & (state["run"][fine] > 0)]
+        chosen = chosen[np.argsort(-evidence[chosen], kind="stable")]
+        if not chosen.size:
+            chosen = np.array([strongest])
+        named = chosen.tolist()
+    label, share = _reference(state, view)
+    first = chosen[np.argmin(state["onset"][chosen])]
+    since = int(state["clock"][view]) - int(state["onset_clock"][first]) + 1
+    hits = int(state["run"][chosen].sum())
+    misses = int(state["clock"][view]) - int(state["hit"][strongest])
+    cusum = float(state["cusum"][strongest]) + misses * float(np.log(bank.CUSUM_RETAINED))
+    bound = float(bounds_of_cells(state, chosen).sum()) * (1 + tolerance)
     return Finding(
-        view=name,
+        view=WATCHED_VIEWS[view],
         pattern="cell",
-        cells=tuple(cell_label(part.start + int(k)) for k in chosen),
-        members=tuple(part.start + int(k) for k in chosen),
-        weight=float(mine.sum()) / whole,
-        onset_row=onset,
-        onset_at=int(state["onset_at"][part][first]),
+        cells=tuple(cell_label(k) for k in named),
+        members=tuple(chosen.tolist()),
+        weight=float(evidence[numbers].sum()) / whole,
+        onset_row=int(state["onset"][first]) or int(state["rows"]),
+        onset_at=int(state["onset_at"][first]),
         observed=hits / since,
-        expected=expected,
-        bound=min(float(bound[chosen].sum()) * (1 + tolerance), 1.0),
+        expected=float(share[chosen].sum()),
+        bound=min(bound, 1.0),
         reference=label,
         severity=max(cusum, 0.0),
         hits=hits,
         seen=since,
-        spent=float(state["spent"][part][chosen].sum()),
+        spent=float(state["spent"][chosen].sum()),
     )
 
 
@@ -232,7 +236,8 @@ def _joint(
 
 def _shape(state: States, evidence: FloatArray, whole: float, tolerance: float) -> Finding:
     j = int(np.argmax(evidence))
-    label, share, bound = _reference(state, 1)
+    label, shares = _reference(state, 1)
+    share, bound = shares[LEAD_PAIR], bounds_of_view(state, 1)
     q = bank.alternatives(share + 1e-12)[0][j]
     most = np.argsort(-(q - share), kind="stable")[:MOST_CELLS]
     return Finding(

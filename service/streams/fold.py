@@ -12,9 +12,9 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 import numpy.typing as npt
 
+from service.detection.cells import CELLS
 from service.detection.policy import Policy
 from service.digits.significand import IntArray
-from service.digits.views import CELLS
 from service.streams.crossing import PAUSE_ROWS, Crossing, cross, follow, paused
 from service.streams.learning import decide, learn, learn_limits, until_complete
 from service.streams.record import Records

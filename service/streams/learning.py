@@ -6,10 +6,11 @@ import numpy as np
 import numpy.typing as npt
 
 from service.detection.baseline import BOUNDS, law_verdict, own_bounds, rare_cells, spent_alpha
+from service.detection.cells import CELLS, all_hits
 from service.detection.policy import Policy
 from service.digits.intervals import clopper_pearson_upper
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import CELLS, WATCHED
+from service.digits.views import WATCHED
 from service.streams.rows import Rows
 from service.streams.rules import (
     DAY_MS,
@@ -126,7 +127,7 @@ def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts:
     _pair_up(folded, pupils, grown)
     mine = learning[slot]
     chosen = rows[mine]
-    cell = part.cell[:, chosen]
+    cell = all_hits(part.cell[:, chosen])
     run = RUN_BLOCK + (position[mine] >> state["block_level"][slot[mine]].astype(np.int64))
     hour = HOUR_BLOCK + part.at[chosen] % DAY_MS // HOUR_BLOCK_MS
     weekday = WEEKDAY_BLOCK + part.at[chosen] // DAY_MS % 7

@@ -13,8 +13,9 @@ import numpy.typing as npt
 
 from service.detection.bank import LAW
 from service.detection.baseline import exceptions
+from service.detection.cells import VIEW_OF_CELL
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import VIEW_OF_CELL, WATCHED, WATCHED_VIEWS
+from service.digits.views import WATCHED, WATCHED_VIEWS
 from service.streams.state import BY_LAW, BY_OWN, States
 
 
@@ -31,8 +32,13 @@ def bound_of(state: States, slot: IntArray, cell: IntArray) -> FloatArray:
 def bounds_of_view(state: States, view: int) -> FloatArray:
     """Return the bounds of a watched view's cells, float64 (..., K), tolerance not included."""
     cells = WATCHED[WATCHED_VIEWS[view]]
+    return bounds_of_cells(state, np.arange(cells.start, cells.stop))
+
+
+def bounds_of_cells(state: States, cells: IntArray) -> FloatArray:
+    """Return the bounds of some cells of every stream, float64 (..., k), tolerance not included."""
     return _chosen(
-        state["reference"][..., view, None],
+        state["reference"][..., VIEW_OF_CELL[cells]],
         state["excepted"][..., cells],
         state["bound"][..., cells],
         LAW[cells],

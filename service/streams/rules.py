@@ -13,9 +13,10 @@ import numpy.typing as npt
 
 from service.detection import bank
 from service.detection.baseline import own_shares
+from service.detection.cells import VIEW_OF_CELL
 from service.detection.policy import Limit, Policy
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import LEAD_PAIR, VIEW_OF_CELL
+from service.digits.views import LEAD_PAIR
 from service.streams.in_force import weights
 from service.streams.ordinary import bound_of, bounds_of_view, except_cells
 from service.streams.rows import Rows

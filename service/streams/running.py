@@ -8,9 +8,10 @@ import numpy as np
 import numpy.typing as npt
 
 from service.detection import bank
+from service.detection.cells import CELLS, VIEW_OF_CELL, all_hits
 from service.detection.paths import affine_path, cusum_path
 from service.digits.significand import FloatArray, IntArray
-from service.digits.views import CELLS, LEAD_PAIR, VIEW_OF_CELL
+from service.digits.views import LEAD_PAIR
 from service.streams.rows import Rows
 from service.streams.rules import JOINT_VIEWS, Rules, below_limits, bounds
 from service.streams.state import BY_OWN, States
@@ -29,7 +30,7 @@ class Cells:
     row : int64 array (h,)
         Index of the row.
     key : int64 array (h,)
-        ``slot * 199 + cell``.
+        ``slot * 224 + cell``.
     value : float64 array (3, h)
         Of the cell's detectors right after the hit.
     weight : float64 array (3, h)
@@ -157,12 +158,13 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     seen = part.cell >= 0
     clock: IntArray = np.cumsum(seen, axis=1)
     clock += state["clock"][part.slot].T - (clock - seen)[:, begin]
-    view, row = np.nonzero(seen)
-    cell = part.cell[view, row]
+    hit = all_hits(part.cell)
+    which, row = np.nonzero(hit >= 0)
+    cell = hit[which, row]
     key = part.slot[row] * CELLS + cell
     order = np.argsort(key, kind="stable")
-    view, row, cell, key = view[order], row[order], cell[order], key[order]
-    at_hit = clock[view, row]
+    row, cell, key = row[order], cell[order], key[order]
+    at_hit = clock[VIEW_OF_CELL[cell], row]
     hits = np.arange(len(key))
     first = np.concatenate([[True], key[1:] != key[:-1]])
     longest = int((hits - np.maximum.accumulate(np.where(first, hits, 0))).max()) + 1
@@ -220,7 +222,7 @@ def _values(
     b = np.concatenate([np.where(watched, entering, 0.0), np.where(seen[1], ratio, 0.0)])
     view = VIEW_OF_CELL[cells.key % CELLS]
     for e in range(3):
-        b[view * 3 + e, cells.row] += cells.weight[e]
+        np.add.at(b, (view * 3 + e, cells.row), cells.weight[e])  # a row hits several of a view
     stored = np.concatenate([state["sums"].reshape(-1, 9).T, state["shape"].T])
     b[:, first] += a[:, first] * stored[:, part.slot[first]]
     a[:, first] = 0

@@ -13,8 +13,8 @@ import numpy as np
 import numpy.typing as npt
 
 from service.detection.bank import JOINT, LIMITS, SHAPES
+from service.detection.cells import CELLS, VIEW_OF_CELL
 from service.digits.significand import IntArray
-from service.digits.views import CELLS, VIEW_OF_CELL
 
 FORMAT = 1
 

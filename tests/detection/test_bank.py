@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy.optimize import linprog
 
-from service.detection import bank
+from service.detection import bank, cells
 from service.detection.paths import affine_path, cusum_path
 from service.digits.laws import leading_law
 
@@ -15,7 +15,7 @@ def test_weights_sum_to_one() -> None:
     whole = bank.CELL_WEIGHTS.sum() + bank.SHAPE_WEIGHTS.sum() + bank.JOINT_WEIGHTS.sum()
     assert whole == pytest.approx(1, abs=1e-12)
     assert bank.EPSILON_SHARES.sum() == pytest.approx(1)
-    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.12, 0.32, 0.40])
+    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.11, 0.28 + 0.11, 0.36])
 
 
 @pytest.mark.parametrize("tolerance", [0.02, 0.1, 0.3])
@@ -87,3 +87,21 @@ def test_enormous_values_stay_finite_and_above_every_threshold() -> None:
     path = affine_path(a, b, 400)
     assert np.all(np.isfinite(path))
     assert np.all(path[0, 60:] > 1e90)
+
+
+def test_coarse_cells_are_partitions_of_the_pairs() -> None:
+    assert cells.CELLS == 224
+    assert cells.COARSE_OF_PAIR.shape == (3, 90)
+    for row, part in zip(
+        cells.COARSE_OF_PAIR, (cells.HALVES, cells.QUARTERS, cells.THIRDS), strict=True
+    ):
+        assert np.all(np.diff(row) >= 0)
+        np.testing.assert_array_equal(np.unique(row), np.arange(part.start, part.stop))
+        np.testing.assert_allclose(bank.LAW[part].sum(), 1)
+    assert [p - 9 + 10 for p in cells.pairs_of(cells.HALVES.stop - 1)] == [95, 96, 97, 98, 99]
+    assert [p - 9 + 10 for p in cells.pairs_of(cells.QUARTERS.start + 1)] == list(range(20, 50))
+    counts = np.arange(199.0)
+    assert cells.with_coarse(counts)[cells.HALVES.start] == sum(range(9, 14))
+    hits = cells.all_hits(np.array([[0, 8], [-1, 98], [-1, 198]]))
+    assert hits[3:, 0].tolist() == [-1, -1, -1]
+    assert hits[3:, 1].tolist() == [cells.HALVES.stop - 1, cells.QUARTERS.stop - 1, 223]

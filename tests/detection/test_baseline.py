@@ -18,8 +18,9 @@ from service.detection.baseline import (
     rare_cells,
     spent_alpha,
 )
+from service.detection.cells import CELLS, with_coarse
 from service.detection.policy import Policy
-from service.digits.views import CELLS, LEAD_PAIR, TAIL_PAIR, WATCHED
+from service.digits.views import LEAD_PAIR, TAIL_PAIR, WATCHED
 from service.streams.state import BY_OWN
 from tests.streams.plain import cells_of
 from tests.streams.test_fold import START, law_amounts, records, run
@@ -29,9 +30,8 @@ NO_BLOCKS = (np.zeros((0, CELLS), np.int64), np.zeros((0, 3), np.int64), np.zero
 
 
 def counts_of(rng, n, shares=LAW):
-    return np.concatenate(
-        [rng.multinomial(n, shares[c] / shares[c].sum()) for c in WATCHED.values()]
-    )
+    views = [rng.multinomial(n, shares[c] / shares[c].sum()) for c in WATCHED.values()]
+    return with_coarse(np.concatenate(views)).astype(np.int64)
 
 
 def test_bounds_are_clopper_pearson_at_the_bonferroni_level() -> None:
@@ -54,7 +54,7 @@ def test_a_view_without_rows_bounds_nothing() -> None:
 def test_all_bounds_hold_together_with_the_stated_confidence() -> None:
     # 2000 baselines at 95 %: the number that miss is at most binomial(2000, 0.05); 4 sd above
     rng = np.random.default_rng(1)
-    shares = own_shares(counts_of(rng, 300))
+    shares = with_coarse(own_shares(counts_of(rng, 300))[:199])
     missed = 0
     for _ in range(2000):
         bounds = own_bounds(counts_of(rng, 400, shares), np.full(3, 400), *NO_BLOCKS, 0.05)
@@ -174,6 +174,7 @@ def test_rare_cells_are_bounded_together_with_the_stated_confidence() -> None:
     # chosen by one half and bounded by the other, so that the choice does not bias the bound
     rng = np.random.default_rng(9)
     shares = np.concatenate([np.sort(rng.dirichlet(np.full(k, 0.3))) for k in (9, 90, 100)])
+    shares = with_coarse(shares)
     missed, alpha, trials = 0, 0.5, 600
     for _ in range(trials):
         blocks = np.stack([counts_of(rng, 64, shares) for _ in range(16)])

@@ -11,8 +11,8 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from service.detection import bank
+from service.detection.cells import VIEW_OF_CELL
 from service.digits.laws import leading_law
-from service.digits.views import VIEW_OF_CELL
 
 
 def cells_of(amount: int) -> list[int]:
@@ -26,18 +26,31 @@ def cells_of(amount: int) -> list[int]:
     return cells
 
 
+def coarse_of(amount: int) -> list[int]:
+    """Ranges of the lead pair: halves of a digit, four ranges, three ranges."""
+    text = str(amount)
+    if len(text) < 2:
+        return []
+    pair = int(text[:2])
+    return [
+        199 + pair // 5 - 2,
+        217 + (pair >= 20) + (pair >= 50) + (pair >= 80),
+        221 + (pair >= 30) + (pair >= 60),
+    ]
+
+
 @dataclass
 class PlainStream:
-    """Detectors of one stream against fixed bounds (199,), evaluated row by row."""
+    """Detectors of one stream against fixed bounds (224,), evaluated row by row."""
 
     bounds: np.ndarray
     pair_shares: np.ndarray
     threshold: float = math.inf
-    value: np.ndarray = field(default_factory=lambda: np.zeros((199, 3)))
-    cusum: np.ndarray = field(default_factory=lambda: np.zeros(199))
-    onset: np.ndarray = field(default_factory=lambda: np.zeros(199, int))
+    value: np.ndarray = field(default_factory=lambda: np.zeros((224, 3)))
+    cusum: np.ndarray = field(default_factory=lambda: np.zeros(224))
+    onset: np.ndarray = field(default_factory=lambda: np.zeros(224, int))
     shape: np.ndarray = field(default_factory=lambda: np.zeros(bank.SHAPES))
-    count: np.ndarray = field(default_factory=lambda: np.zeros(199, int))
+    count: np.ndarray = field(default_factory=lambda: np.zeros(224, int))
     rows: int = 0
     crossings: list[tuple[int, float]] = field(default_factory=list)
 
@@ -80,13 +93,14 @@ class PlainStream:
         for view, cell in enumerate(cells_of(amount)):
             if cell < 0:
                 continue
-            self.count[cell] += 1
+            hit = [cell, *(coarse_of(amount) if view == 1 else [])]
+            self.count[hit] += 1
             mine = view == VIEW_OF_CELL
-            ratio = np.ones((199, 3)) * (1 - bank.EPSILONS)
-            ratio[cell] += bank.EPSILONS / self.bounds[cell]
+            ratio = np.ones((224, 3)) * (1 - bank.EPSILONS)
+            ratio[hit] += bank.EPSILONS / self.bounds[hit, None]
             self.value[mine] = ((1 + self.value) * ratio)[mine]
-            gain = np.full(199, math.log(0.88))
-            gain[cell] = math.log(0.88 + 0.12 / self.bounds[cell])
+            gain = np.full(224, math.log(0.88))
+            gain[hit] = np.log(0.88 + 0.12 / self.bounds[hit])
             rested = mine & (self.cusum <= 0)
             self.onset[rested] = self.rows
             self.cusum[mine] = np.maximum(self.cusum + gain, 0)[mine]

@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 
 from service.detection import bank
+from service.detection.cells import VIEW_OF_CELL
 from service.detection.policy import Limit, Policy
-from service.digits.views import VIEW_OF_CELL
 from service.streams.findings import evidence_of_cells
 from service.streams.fold import Crossing, fold
 from service.streams.record import HISTORIC, RECORD
