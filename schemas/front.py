@@ -17,5 +17,5 @@ class Front(Answer):
         keys=fields.String(),
         values=fields.String(),
         required=True,
-        metadata=said("Paths by what they are for; all but health and the document need a key."),
+        metadata=said("Paths by what they are for; health, method and document need no key."),
     )

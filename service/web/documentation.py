@@ -9,11 +9,12 @@ from flask import Response, current_app
 
 from schemas.front import Front
 from service import __version__
+from service.web.method.page import method
 from service.web.openapi import Api
 from service.web.resource import Resource, reply
 
 documentation = Resource("documentation", __name__, description="This document. No key is needed.")
-
+METHOD = method()
 
 CAUTION = (
     "An alarm is a reason to look, never proof of fraud. A person reviews it, on lawful grounds, "
@@ -23,6 +24,7 @@ LINKS = {
     "merchants": "/v1/merchants?sort=evidence",
     "alarms": "/v1/alarms",
     "policies": "/v1/policies",
+    "method": "/method",
     "description": "/v1/openapi.json",
     "health": "/health/ready",
 }
@@ -35,6 +37,13 @@ def front_door() -> Response:
     return reply(
         {"service": "Tallyward", "version": __version__, "caution": CAUTION, "links": LINKS}
     )
+
+
+@documentation.path("/method")
+@documentation.answers_raw("text/html", {"type": "string"}, "A page that needs nothing else.")
+def get_method() -> Response:
+    """Explain what is measured, promised and not promised, for analysts and reviewers."""
+    return Response(METHOD.html, mimetype="text/html", headers=METHOD.headers)
 
 
 @documentation.path("/v1/openapi.json")

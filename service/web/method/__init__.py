@@ -1,0 +1,1 @@
+"""The method, written down for those who must judge it, and served as one page."""
