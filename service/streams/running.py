@@ -162,22 +162,24 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     which, row = np.nonzero(hit >= 0)
     cell = hit[which, row]
     key = part.slot[row] * CELLS + cell
-    order = np.argsort(key, kind="stable")
+    order = _sorted(key)
     row, cell, key = row[order], cell[order], key[order]
     at_hit = clock[VIEW_OF_CELL[cell], row]
     hits = np.arange(len(key))
     first = np.concatenate([[True], key[1:] != key[:-1]])
     longest = int((hits - np.maximum.accumulate(np.where(first, hits, 0))).max()) + 1
-    stored = part.slot[row], cell
-    previous = np.where(first, state["hit"][stored], np.roll(at_hit, 1))
+    opening = np.flatnonzero(first)
+    at_opening = part.slot[row[opening]], cell[opening]
+    previous = np.roll(at_hit, 1)
+    previous[opening] = state["hit"][at_opening]
     misses = (at_hit - previous - 1).astype(np.float64)
-    u = bounds(state, rules, *stored)
+    u = bounds(state, rules, part.slot[row], cell)
     gain = _KEEP + _EPS / u
     kept = _KEEP**misses
     a = kept * gain
     b = gain * (1 - kept * _KEEP) / _EPS
-    b[:, first] += (a * state["value"][stored].T)[:, first]
-    a[:, first] = 0
+    b[:, opening] += a[:, opening] * state["value"][at_opening].T
+    a[:, opening] = 0
     value = affine_path(a, b, longest)
 
     # the CUSUM, from which onset and severity are read, is touched at hits only, too
@@ -185,10 +187,13 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     decay = misses * np.log(bank.CUSUM_RETAINED)
     step = decay + up
     level = up.copy()
-    level[first] = np.maximum(state["cusum"][stored] + step, up)[first]
-    step[first] = -np.inf
+    before = state["cusum"][at_opening]
+    level[opening] = np.maximum(before + step[opening], up[opening])
+    step[opening] = -np.inf
     cusum = cusum_path(step, level, longest)
-    begins = np.where(first, state["cusum"][stored], np.roll(cusum, 1)) + decay <= 0
+    preceding = np.roll(cusum, 1)
+    preceding[opening] = before
+    begins = preceding + decay <= 0
     start = np.maximum.accumulate(np.where(begins | first, hits, 0))
     return Cells(
         row=row,
@@ -200,6 +205,13 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
         start=start,
         carried=~begins[start],
     )
+
+
+def _sorted(key: IntArray) -> IntArray:
+    """Return the stable order of non-negative keys; short keys are sorted by radix."""
+    if key.size and int(key.max()) < 1 << 16:
+        return np.argsort(key.astype(np.uint16), kind="stable")
+    return np.argsort(key, kind="stable")
 
 
 def _values(
@@ -214,6 +226,7 @@ def _values(
 
     A view's sum over its cells obeys ``S <- r (S + W) + w_k (1 + R_k) eps / u_k``.
     """
+    n = len(part.slot)
     seen = part.cell >= 0
     keep = np.tile(bank.RETAINED, 3)[:, None]
     entering = (bank.VIEW_WEIGHTS[:, None] * bank.EPSILON_SHARES).reshape(9, 1) * keep
@@ -222,7 +235,7 @@ def _values(
     b = np.concatenate([np.where(watched, entering, 0.0), np.where(seen[1], ratio, 0.0)])
     view = VIEW_OF_CELL[cells.key % CELLS]
     for e in range(3):
-        np.add.at(b, (view * 3 + e, cells.row), cells.weight[e])  # a row hits several of a view
+        b[e:9:3] += np.bincount(view * n + cells.row, cells.weight[e], 3 * n).reshape(3, n)
     stored = np.concatenate([state["sums"].reshape(-1, 9).T, state["shape"].T])
     b[:, first] += a[:, first] * stored[:, part.slot[first]]
     a[:, first] = 0
