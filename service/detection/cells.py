@@ -66,4 +66,5 @@ def with_coarse(counts: npt.ArrayLike) -> npt.NDArray[np.float64]:
 
 def pairs_of(cell: int) -> list[int]:
     """Return the lead-pair cells of a coarse cell."""
-    return (LEAD_PAIR.start + np.flatnonzero((cell == COARSE_OF_PAIR).any(axis=0))).tolist()
+    inside = np.isin(COARSE_OF_PAIR, [cell]).any(axis=0)
+    return (LEAD_PAIR.start + np.flatnonzero(inside)).tolist()
