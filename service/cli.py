@@ -14,6 +14,7 @@ from service.admin_key import kept_key
 from service.serving import Running, ServingError, local_url
 from service.serving import serve as serve_until_stopped
 from service.settings import Settings, SettingsError
+from service.simulation.command import simulate
 from service.store.errors import StoreError
 
 
@@ -24,6 +25,9 @@ def main() -> None:
 
     Settings are environment variables TALLYWARD_*; `tallyward settings` lists them.
     """
+
+
+main.add_command(simulate)
 
 
 @main.command()
