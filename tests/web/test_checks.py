@@ -105,9 +105,7 @@ def test_zeros_alone_have_no_digits(client: DescribedClient) -> None:
         ("", "decimal string"),
     ],
 )
-def test_what_is_no_amount_is_named(
-    client: DescribedClient, amount: object, expected: str
-) -> None:
+def test_what_is_no_amount_is_named(client: DescribedClient, amount: object, expected: str) -> None:
     answer = client.post("/v1/checks", json={"amounts": [1, amount, "2"]})
     assert answer.status_code == 422
     (error,) = answer.get_json(force=True)["errors"]

@@ -119,9 +119,7 @@ def test_only_so_many_may_wait_at_once(served: Flask, caller: DescribedClient) -
         ("state=closed", "state"),
     ],
 )
-def test_wrong_parameters_are_named(
-    caller: DescribedClient, query: str, parameter: str
-) -> None:
+def test_wrong_parameters_are_named(caller: DescribedClient, query: str, parameter: str) -> None:
     answer = caller.get(f"/v1/alarms?{query}")
     assert answer.status_code == 422
     assert [e["parameter"] for e in answer.get_json(force=True)["errors"]] == [parameter]

@@ -15,8 +15,15 @@ from service.web.following import Wanted, read, wants
 
 def _alarm(number: int, merchant: str, **more: Any) -> Document:
     return {
-        "cursor": f"{number}-0", "merchant": merchant, "flow": "sale", "currency": "EUR",
-        "state": "open", "view": "lead_pair", "cells": ["49"], "findings": [], **more,
+        "cursor": f"{number}-0",
+        "merchant": merchant,
+        "flow": "sale",
+        "currency": "EUR",
+        "state": "open",
+        "view": "lead_pair",
+        "cells": ["49"],
+        "findings": [],
+        **more,
     }
 
 

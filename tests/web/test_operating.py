@@ -26,7 +26,11 @@ def test_the_standard_policy_is_there_from_the_start(caller: DescribedClient) ->
 def test_a_policy_is_replaced_as_a_whole(caller: DescribedClient) -> None:
     made = caller.put("/v1/policies/strict", json={"tolerance": 0, "views": ["tail_pair"]})
     assert made.get_json() == {
-        **defaults(), "name": "strict", "version": 2, "tolerance": 0, "views": ["tail_pair"],
+        **defaults(),
+        "name": "strict",
+        "version": 2,
+        "tolerance": 0,
+        "views": ["tail_pair"],
     }
     again = caller.put("/v1/policies/strict", json={"flows": ["sale", "till-7"]}).get_json()
     assert again == {**defaults(), "name": "strict", "version": 3, "flows": ["sale", "till-7"]}

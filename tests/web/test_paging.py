@@ -13,7 +13,8 @@ from service.web.paging import Entry, Query, page
 
 values = st.one_of(st.none(), st.integers(-3, 3), st.floats(-3, 3))
 streams = st.tuples(
-    st.sampled_from(["a", "b", "c", "A"]), st.sampled_from(["sale", "refund"]),
+    st.sampled_from(["a", "b", "c", "A"]),
+    st.sampled_from(["sale", "refund"]),
     st.sampled_from(["EUR", "JPY"]),
 )
 listings = st.dictionaries(streams, values, max_size=16).map(
@@ -23,9 +24,18 @@ listings = st.dictionaries(streams, values, max_size=16).map(
 
 def _entry(merchant: str, flow: str = "sale", currency: str = "EUR", **more: Any) -> Entry:
     return {
-        "merchant": merchant, "flow": flow, "currency": currency, "standing": "steady",
-        "category": None, "evidence": 0.0, "score": None, "misfit": None, "law_misfit": None,
-        "count": 0, "updated": None, **more,
+        "merchant": merchant,
+        "flow": flow,
+        "currency": currency,
+        "standing": "steady",
+        "category": None,
+        "evidence": 0.0,
+        "score": None,
+        "misfit": None,
+        "law_misfit": None,
+        "count": 0,
+        "updated": None,
+        **more,
     }
 
 

@@ -28,8 +28,11 @@ def test_defaults_are_those_of_the_detectors() -> None:
         ("baseline_days", [0, 0.5, 366], [-1, 367]),
         ("baseline_confidence", [0.9, 0.999999], [0.89, 1]),
         ("minimum_count", [1, 1_000_000], [0, 1_000_001, 1.5]),
-        ("views", [["lead_digit"], ["tail_pair", "lead_pair"]],
-         [[], ["circle"], ["lead_digit"] * 2, "lead_digit", None]),
+        (
+            "views",
+            [["lead_digit"], ["tail_pair", "lead_pair"]],
+            [[], ["circle"], ["lead_digit"] * 2, "lead_digit", None],
+        ),
         ("flows", [None, [], ["sale", "till-7"]], [["Sale"], ["sale", "sale"], ["a" * 17], [1]]),
         ("reference", ["auto", "law", "own"], ["benford", None, 1]),
     ],

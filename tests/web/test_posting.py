@@ -26,8 +26,15 @@ def test_a_batch_is_counted_per_stream(caller: DescribedClient) -> None:
     ]
     receipt = post(caller, sent)
     assert receipt == {
-        "accepted": 6, "duplicates": 0, "late": 0, "zero": 0, "unverified": 0, "rejected": [],
-        "exactly_once": True, "durability": receipt["durability"], "alarms": [],
+        "accepted": 6,
+        "duplicates": 0,
+        "late": 0,
+        "zero": 0,
+        "unverified": 0,
+        "rejected": [],
+        "exactly_once": True,
+        "durability": receipt["durability"],
+        "alarms": [],
     }
     assert _counted(caller) == {
         "harbour-books sale EUR": 3,
@@ -46,9 +53,7 @@ def test_a_batch_sent_again_changes_nothing(caller: DescribedClient) -> None:
 
 
 def test_source_and_offset_identify_a_row(caller: DescribedClient) -> None:
-    sent = [
-        {"merchant": "fish", "amount": 100 + i, "source": "p-3", "offset": i} for i in range(9)
-    ]
+    sent = [{"merchant": "fish", "amount": 100 + i, "source": "p-3", "offset": i} for i in range(9)]
     assert post(caller, sent)["accepted"] == 9
     assert post(caller, sent)["duplicates"] == 9
 

@@ -43,7 +43,11 @@ def test_one_stream_in_full(caller: DescribedClient) -> None:
     found = caller.get("/v1/merchants/harbour-books").get_json()
     assert (found["count"], found["category"], found["policy"]) == (400, "5942", "standard")
     assert set(found["views"]) == {
-        "lead_digit", "second_digit", "lead_pair", "tail_pair", "circle",
+        "lead_digit",
+        "second_digit",
+        "lead_pair",
+        "tail_pair",
+        "circle",
     }
     assert "mad" not in found["views"]["lead_digit"]
     assert found["guarantee"]["reason"]
@@ -71,8 +75,13 @@ def test_flow_and_currency_choose_the_stream(caller: DescribedClient) -> None:
     def count(query: str) -> Any:
         return caller.get(f"/v1/merchants/harbour-books{query}").get_json()
 
-    post(caller, [{"merchant": "harbour-books", "amount": 7, "currency": "JPY", "id": f"y{i}"}
-                  for i in range(30)])
+    post(
+        caller,
+        [
+            {"merchant": "harbour-books", "amount": 7, "currency": "JPY", "id": f"y{i}"}
+            for i in range(30)
+        ],
+    )
     busiest = count("")
     assert (busiest["currency"], busiest["flow"]) == ("JPY", "sale")
     assert count("?currency=EUR")["count"] == 20
@@ -152,10 +161,18 @@ def test_the_circle_has_no_cells(caller: DescribedClient) -> None:
 def test_the_last_rows_are_kept_as_sent(caller: DescribedClient) -> None:
     post(caller, rows([1999, 250], at="2025-11-30T12:00:00.250+01:00"))
     assert caller.get("/v1/merchants/harbour-books/rows").get_json()["rows"] == [
-        {"id": "harbour-books-000000", "amount": 1999, "currency": "EUR",
-         "at": "2025-11-30T11:00:00.250Z"},
-        {"id": "harbour-books-000001", "amount": 250, "currency": "EUR",
-         "at": "2025-11-30T11:00:00.250Z"},
+        {
+            "id": "harbour-books-000000",
+            "amount": 1999,
+            "currency": "EUR",
+            "at": "2025-11-30T11:00:00.250Z",
+        },
+        {
+            "id": "harbour-books-000001",
+            "amount": 250,
+            "currency": "EUR",
+            "at": "2025-11-30T11:00:00.250Z",
+        },
     ]
 
 
