@@ -30,7 +30,7 @@ EPSILONS = np.array([0.04, 0.12, 0.40])
 """Contaminations that the cell detectors bet on."""
 
 RETAINED = 1 - EPSILONS
-EPSILON_SHARES = np.array([1.0, 1.0, 1.5]) / 3.5
+EPSILON_SHARES = np.array([1.0, 1.0, 2.0]) / 4
 
 LAW = with_coarse(law_cells())
 """Shares of all cells under the law, (224,)."""
@@ -45,11 +45,11 @@ def _cell_weights() -> FloatArray:
     """Weights of the cells over all contaminations: 0.86 in all, more where people cheat."""
     weights = np.empty(CELLS)
     weights[LEAD_DIGIT] = 0.11 / 9
-    pair = np.full(90, 0.28 * 0.6 / 81)
-    pair[9::10] = 0.28 * 0.4 / 9  # just under a round number
+    pair = np.full(90, 0.30 * 0.55 / 81)
+    pair[9::10] = 0.30 * 0.45 / 9  # just under a round number
     weights[LEAD_PAIR] = pair
-    tail = np.full(100, 0.36 * 0.6 / 92)
-    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.36 * 0.4 / 8
+    tail = np.full(100, 0.34 * 0.6 / 92)
+    tail[[0, 25, 49, 50, 75, 90, 95, 99]] = 0.34 * 0.4 / 8
     weights[TAIL_PAIR] = tail
     for cells, weight in ((HALVES, 0.05), (QUARTERS, 0.03), (THIRDS, 0.03)):
         weights[cells] = weight / (cells.stop - cells.start)

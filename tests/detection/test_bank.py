@@ -15,7 +15,7 @@ def test_weights_sum_to_one() -> None:
     whole = bank.CELL_WEIGHTS.sum() + bank.SHAPE_WEIGHTS.sum() + bank.JOINT_WEIGHTS.sum()
     assert whole == pytest.approx(1, abs=1e-12)
     assert bank.EPSILON_SHARES.sum() == pytest.approx(1)
-    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.11, 0.28 + 0.11, 0.36])
+    np.testing.assert_allclose(bank.VIEW_WEIGHTS, [0.11, 0.30 + 0.11, 0.34])
 
 
 @pytest.mark.parametrize("tolerance", [0.02, 0.1, 0.3])
