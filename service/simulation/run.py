@@ -37,7 +37,7 @@ CURRENCY = "EUR"
 _STREAM = Stream("simulated", "sale", CURRENCY)
 _SALES = Kind(_STREAM.flow, _STREAM.currency)
 
-GROUP = 40
+GROUP = 20
 """Streams folded together, and `STEP` rows of each at a time: what fits a core's cache."""
 STEP = 128
 
@@ -189,17 +189,20 @@ class Flock:
         n, step = amounts.shape
         if int(at.max()) >= _LATEST_MS:
             raise ValueError("rows must end before 2106: take fewer rows, or more of them a day")
-        records = self._records[:, :step].reshape(-1) if step < STEP else self._records.reshape(-1)
-        records["amount"] = amounts.reshape(-1)
-        shape = (n, step)
-        records["at_s"] = np.broadcast_to(at // 1000, shape).reshape(-1)
-        records["at_ms"] = np.broadcast_to(at % 1000, shape).reshape(-1)
+        part = self._records[:, :step]
+        part["amount"] = amounts
+        seconds, part["at_ms"] = np.divmod(at, 1000)
+        part["at_s"] = seconds
         # arriving after the rolling window has passed, rows skip the window: no detector needs it
-        records["arrived_s"] = records["at_s"] + (WINDOW_MS // 1000 + 1)
-        slot = np.repeat(np.arange(n), step)
+        part["arrived_s"] = seconds + (WINDOW_MS // 1000 + 1)
         names = [str(number).encode() for number in self.numbers.tolist()]
         crossings = fold(
-            self.folded, records, slot, {self._policy.version: self._policy}, [_SALES] * n, names
+            self.folded,
+            part.reshape(-1),
+            np.repeat(np.arange(n), step),
+            {self._policy.version: self._policy},
+            [_SALES] * n,
+            names,
         )
         self.folded.state["alarm_crossings"] = 0  # settled
         self.rows += step
