@@ -14,20 +14,30 @@ from service.admin_key import kept_key
 from service.serving import Running, ServingError, local_url
 from service.serving import serve as serve_until_stopped
 from service.settings import Settings, SettingsError
-from service.simulation.command import simulate
 from service.store.errors import StoreError
 
 
-@click.group()
+class _Commands(click.Group):
+    """The commands; `simulate` is imported when asked for: its numerics take a while to load."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return sorted([*super().list_commands(ctx), "simulate"])
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        if cmd_name == "simulate":
+            from service.simulation.command import simulate
+
+            return simulate
+        return super().get_command(ctx, cmd_name)
+
+
+@click.group(cls=_Commands)
 @click.version_option(__version__, prog_name="tallyward")
 def main() -> None:
     """Watch the digits of payment amounts, merchant by merchant.
 
     Settings are environment variables TALLYWARD_*; `tallyward settings` lists them.
     """
-
-
-main.add_command(simulate)
 
 
 @main.command()

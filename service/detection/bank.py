@@ -108,7 +108,14 @@ def alternatives(reference: FloatArray) -> tuple[FloatArray, FloatArray]:
         Invented digits ``(1-e) p0 + e/90``; shifts ``p0 (1 + rho cos 2 pi (y - phase)) / z``.
     z : float64 array (..., 14)
         1 for invented digits.
+
+    Raises
+    ------
+    ValueError
+        If reference has not 90 positive shares.
     """
+    if np.shape(reference)[-1:] != (90,) or np.min(reference) <= 0:
+        raise ValueError("reference must have 90 shares above 0, one for each lead pair")
     p0 = np.asarray(reference, dtype=np.float64)[..., None, :]
     invented = (1 - INVENTED[:, None]) * p0 + INVENTED[:, None] / 90
     waves = p0 * (1 + SHIFT_RHO[:, None] * SHIFT_WAVES)
@@ -118,6 +125,9 @@ def alternatives(reference: FloatArray) -> tuple[FloatArray, FloatArray]:
 
 def projection(q: FloatArray, bounds: FloatArray) -> FloatArray:
     """Return c with ``sum_k min(u_k, c q_k) = 1``: the reverse information projection of q.
+
+    Grünwald, de Heide & Koolen (2024), *J. R. Statist. Soc. B* 86, 1091-1128 (from memory): the
+    likelihood ratio of q to its projection is an e-value for the whole null.
 
     ``p*_k = min(u_k, c q_k)`` is the member of the null ``{p <= u}`` nearest to q, and the largest
     expectation of ``q/p*`` over the null is exactly 1. Where q itself lies in the null, c is 1.

@@ -8,6 +8,7 @@ blocks of the baseline gets the largest of its blocks' bounds.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -47,7 +48,16 @@ def spent_alpha(confidence: float, relearns: int) -> float:
     """Return the error probability of one baseline: alpha / (i (i + 1)) for the i-th.
 
     Over all relearns the series sums to ``1 - confidence``.
+
+    Raises
+    ------
+    ValueError
+        If the confidence is not between 0 and 1, or relearns is negative.
     """
+    if not 0 < confidence < 1:
+        raise ValueError(f"confidence must be between 0 and 1, got {confidence}")
+    if relearns < 0:
+        raise ValueError(f"relearns must be 0 or more, got {relearns}")
     i = relearns + 1
     return (1 - confidence) / (i * (i + 1))
 
@@ -61,6 +71,8 @@ def own_bounds(
     alpha: float,
 ) -> FloatArray:
     """Return upper bounds of all cells that hold together with probability ``1 - alpha``.
+
+    Clopper & Pearson (1934), *Biometrika* 26, 404-413, at an error shared by Bonferroni.
 
     Bonferroni over the cells of all views; a cell that is over-dispersed between blocks gets the
     largest of its blocks' bounds at the same level. Tolerance is not included.
@@ -85,9 +97,14 @@ def own_bounds(
     -------
     float64 array (224,)
         In (0, 1]; 1 for every cell of a view without rows.
+
+    Raises
+    ------
+    ValueError
+        If alpha is not between 0 and 1, or an array has not the shape said above.
     """
-    if not 0 < alpha < 1:
-        raise ValueError(f"alpha must be between 0 and 1, got {alpha}")
+    _check(alpha=alpha, count=count, rows=rows)
+    _check_blocks(block_count, block_rows)
     n = rows[VIEW_OF_CELL]
     level = alpha / BOUNDS
     pooled = clopper_pearson_upper(count, n, level)
@@ -97,6 +114,30 @@ def own_bounds(
         busiest = _burst_bound(block_count[mine], block_rows[mine][:, VIEW_OF_CELL], share, level)
         pooled = np.maximum(pooled, busiest)
     return pooled
+
+
+def _check(**arguments: Any) -> None:
+    """Raise ValueError for an argument out of its range; the names are those of the callers."""
+    for name, value in arguments.items():
+        if name == "alpha":
+            if not 0 < value < 1:
+                raise ValueError(f"alpha must be between 0 and 1, got {value}")
+            continue
+        width = 3 if name == "rows" else CELLS
+        if np.shape(value)[-1:] != (width,):
+            raise ValueError(f"{name} must have {width} values, got shape {np.shape(value)}")
+        if np.size(value) and np.min(value) < 0:
+            raise ValueError(f"{name} must be 0 or more, got {np.min(value)}")
+
+
+def _check_blocks(block_count: IntArray, block_rows: IntArray) -> None:
+    blocks = len(block_count)
+    for name, value, width in (
+        ("block_count", block_count, CELLS),
+        ("block_rows", block_rows, 3),
+    ):
+        if np.shape(value) != (blocks, width):
+            raise ValueError(f"{name} must have shape ({blocks}, {width}), got {np.shape(value)}")
 
 
 def _burst_bound(count: IntArray, rows: IntArray, share: FloatArray, level: float) -> FloatArray:
@@ -148,7 +189,14 @@ def rare_cells(
     rare : bool array (224,)
     bound : float64 array (2,)
         Joint upper bounds for lead pair and tail pair, tolerance not included.
+
+    Raises
+    ------
+    ValueError
+        If alpha is not between 0 and 1, or an array has not the shape said above.
     """
+    _check(alpha=alpha)
+    _check_blocks(block_count, block_rows)
     rare = np.zeros(CELLS, dtype=bool)
     bound = np.ones(len(RARE_VIEWS))
     for place, view in enumerate(RARE_VIEWS):
@@ -218,7 +266,13 @@ def law_verdict(
         Rows in those sums.
     tolerances : tuple of float
         Per watched view.
+
+    Raises
+    ------
+    ValueError
+        If count or rows has not the shape said above, or holds a negative number.
     """
+    _check(count=count, rows=rows)
     tol = np.asarray(tolerances)
     n = rows[VIEW_OF_CELL]
     lower = clopper_pearson_lower(count, n, REFUTING_LEVEL / CELLS)
@@ -244,6 +298,7 @@ def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
     count : int array (..., 224)
         The baseline's counts.
     """
+    _check(count=count)
     counts = np.asarray(count, dtype=np.float64)
     rows = np.stack([counts[..., cells].sum(axis=-1) for cells in WATCHED.values()], axis=-1)
     lower = clopper_pearson_lower(counts, rows[..., VIEW_OF_CELL], EXCEPTION_LEVEL)
@@ -252,6 +307,7 @@ def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
 
 def own_shares(count: npt.ArrayLike) -> FloatArray:
     """Return the baseline's shares of all cells with half a row added to each, (..., 224)."""
+    _check(count=count)
     smoothed = np.asarray(count, dtype=np.float64) + 0.5
     for cells in WATCHED.values():
         smoothed[..., cells] /= smoothed[..., cells].sum(axis=-1, keepdims=True)

@@ -49,15 +49,30 @@ def all_hits(cell: IntArray) -> IntArray:
     ----------
     cell : int64 array (3, n)
         Cells of the watched views, -1 where not seen.
+
+    Raises
+    ------
+    ValueError
+        If cell has not three rows.
     """
+    if len(cell) != 3:
+        raise ValueError(f"cell must have a row for each of 3 watched views, got {len(cell)}")
     pair = cell[1]
     coarse = np.where(pair >= 0, COARSE_OF_PAIR[:, np.maximum(pair - LEAD_PAIR.start, 0)], -1)
     return np.concatenate([cell, coarse])
 
 
 def with_coarse(counts: npt.ArrayLike) -> npt.NDArray[np.float64]:
-    """Return counts or shares of the views' cells (..., 199) with those of the coarse cells."""
+    """Return counts or shares of the views' cells (..., 199) with those of the coarse cells.
+
+    Raises
+    ------
+    ValueError
+        If counts has not 199 values.
+    """
     fine = np.asarray(counts, dtype=np.float64)
+    if fine.shape[-1:] != (views.CELLS,):
+        raise ValueError(f"counts must have {views.CELLS} values, got shape {fine.shape}")
     pairs = fine[..., LEAD_PAIR]
     belongs = np.zeros((90, COARSE.stop - COARSE.start))
     belongs[np.arange(90), COARSE_OF_PAIR - COARSE.start] = 1
@@ -65,6 +80,8 @@ def with_coarse(counts: npt.ArrayLike) -> npt.NDArray[np.float64]:
 
 
 def pairs_of(cell: int) -> list[int]:
-    """Return the lead-pair cells of a coarse cell."""
+    """Return the lead-pair cells of a coarse cell; ValueError for another cell."""
+    if not COARSE.start <= cell < COARSE.stop:
+        raise ValueError(f"cell must be {COARSE.start} to {COARSE.stop - 1}, got {cell}")
     inside = np.isin(COARSE_OF_PAIR, [cell]).any(axis=0)
     return (LEAD_PAIR.start + np.flatnonzero(inside)).tolist()

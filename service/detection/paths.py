@@ -32,7 +32,14 @@ def affine_path(a: FloatArray, b: FloatArray, longest: int) -> FloatArray:
     -------
     float64 array (..., n)
         Exact to rounding below ``CEILING``; at least ``CEILING`` where the true value is larger.
+
+    Raises
+    ------
+    ValueError
+        If a and b have not one shape.
     """
+    if a.shape != b.shape:
+        raise ValueError(f"a and b must have one shape, got {a.shape} and {b.shape}")
     np.minimum(b, CEILING, out=b)
     distance = 1
     while distance < longest:
@@ -54,7 +61,14 @@ def cusum_path(s: FloatArray, m: FloatArray, longest: int) -> FloatArray:
         Both are used as scratch space.
     longest : int
         Length of the longest segment.
+
+    Raises
+    ------
+    ValueError
+        If s and m have not one shape.
     """
+    if s.shape != m.shape:
+        raise ValueError(f"s and m must have one shape, got {s.shape} and {m.shape}")
     distance = 1
     while distance < longest:
         np.maximum(m[..., distance:], m[..., :-distance] + s[..., distance:], out=m[..., distance:])
