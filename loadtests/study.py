@@ -164,7 +164,7 @@ def main() -> None:
 
 def speed(seed: int) -> str:
     started = time.process_time()
-    rows, streams = 5_000, GROUP
+    rows, streams = 10_000, 5 * GROUP
     simulate(LAW, HONEST["law"](), streams=streams, rows=rows, seed=seed)
     spent = time.process_time() - started
     return f"Speed: {rows * streams / spent / 1e6:.2f} million transactions a second of CPU time."
