@@ -133,10 +133,16 @@ class Tallies:
             raise Unavailable("the store does not answer; send the same again later") from error
 
     def facts(self, fresh_seconds: float = 5.0) -> StoreFacts:
-        """Return what the store says about itself, at most some seconds old."""
+        """Return what the store says about itself, at most some seconds old.
+
+        Its charter is read again, too: a store that came back empty has another ident key, and
+        all workers must hash identities by the same one.
+        """
         now = time.monotonic()
         if self._facts is None or now - self._facts[0] > fresh_seconds:
             self._facts = (now, inspect(self.client))
+            with suppress(RedisError):  # a replica may not be asked to write one
+                self._charter = charter(self.client, self._partitions)
         return self._facts[1]
 
     @property

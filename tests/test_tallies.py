@@ -15,6 +15,7 @@ import numpy as np
 import pytest
 
 import service.tallies as module
+from service.settings import Settings
 from service.store.embedded import EmbeddedStore
 from service.store.keys import path
 from service.store.script import APPEND
@@ -377,3 +378,15 @@ class TestStreams:
         merchants = apart(tallies, "m")
         post(tallies, batch(merchants, [1999, 2999], ids=["x", "x"]))
         assert counts(tallies) == dict.fromkeys(merchants, 1)
+
+
+def test_a_store_that_comes_back_empty_gives_all_workers_one_ident_key(
+    fresh_store: str,
+) -> None:
+    first, second = (Tallies(Settings(redis_url=fresh_store)) for _ in range(2))
+    before = first.ident_key()
+    assert second.ident_key() == before
+    first.client.flushall()
+    assert first.facts(0)
+    assert second.facts(0)
+    assert first.ident_key() == second.ident_key() != before
