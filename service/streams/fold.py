@@ -63,7 +63,8 @@ def fold(
     state = folded.state
     rows = columns(state, records, slot)
     tally(folded, rows)
-    rows = rows.take(np.flatnonzero(rows.amount > 0))
+    if not np.all(rows.amount):
+        rows = rows.take(np.flatnonzero(rows.amount))
     rules = Rules.empty(len(state))
     fresh = np.unique(rows.slot)
     adopt(state, fresh, state["policy"][fresh], rules, policies, kinds)

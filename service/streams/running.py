@@ -19,6 +19,7 @@ from service.streams.state import BY_OWN, States
 _EPS = bank.EPSILONS[:, None]
 _KEEP = bank.RETAINED[:, None]
 _SHARE = bank.EPSILON_SHARES[:, None]
+_POWERS = _KEEP ** np.arange(4096.0)
 
 
 @dataclass(frozen=True)
@@ -172,10 +173,10 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     at_opening = part.slot[row[opening]], cell[opening]
     previous = np.roll(at_hit, 1)
     previous[opening] = state["hit"][at_opening]
-    misses = (at_hit - previous - 1).astype(np.float64)
+    misses = at_hit - previous - 1
     u = bounds(state, rules, part.slot[row], cell)
     gain = _KEEP + _EPS / u
-    kept = _KEEP**misses
+    kept = _retained(misses)
     a = kept * gain
     b = gain * (1 - kept * _KEEP) / _EPS
     b[:, opening] += a[:, opening] * state["value"][at_opening].T
@@ -205,6 +206,13 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
         start=start,
         carried=~begins[start],
     )
+
+
+def _retained(misses: IntArray) -> FloatArray:
+    """Return ``r**n`` for every contamination, (3, h); few misses are looked up."""
+    if misses.size and int(misses.max()) < _POWERS.shape[1]:
+        return np.take(_POWERS, misses, axis=1)
+    return np.asarray(_KEEP ** misses.astype(np.float64))
 
 
 def _sorted(key: IntArray) -> IntArray:
