@@ -40,6 +40,9 @@ ROWS_FROM = 500
 EXCEPTION_LEVEL = 0.2
 """Single-cell error at which an accepted law still gives way to the merchant's own bound."""
 
+EXCEPTION_ERROR = 0.01
+"""Single-cell error of that bound."""
+
 HARMONICS_FROM = 1000
 """Rows below which the circle says nothing about the law."""
 
@@ -287,22 +290,29 @@ def law_verdict(
     return LawVerdict(circle=off_circle, cell=cell, few=np.asarray(rows) < ROWS_FROM)
 
 
-def exceptions(count: npt.ArrayLike) -> npt.NDArray[np.bool_]:
-    """Return the cells that a baseline saw more often than the law lets one expect.
+def exceptions(count: npt.ArrayLike) -> FloatArray:
+    """Return bounds for the cells that a baseline saw more often than the law lets one expect.
 
     A cell is excepted when its one-sided lower bound at ``EXCEPTION_LEVEL``, for that cell alone,
-    is above the law's share: so mild a doubt that even a perfect merchant has a few such cells.
+    is above the law's share: so mild a doubt that even a perfect merchant has some such cells. Its
+    bound is mild for the same reason, the upper one at ``EXCEPTION_ERROR`` for that cell alone.
 
     Parameters
     ----------
     count : int array (..., 224)
         The baseline's counts.
+
+    Returns
+    -------
+    float64 array (..., 224)
+        0 where the law stands.
     """
     _check(count=count)
     counts = np.asarray(count, dtype=np.float64)
     rows = np.stack([counts[..., cells].sum(axis=-1) for cells in WATCHED.values()], axis=-1)
-    lower = clopper_pearson_lower(counts, rows[..., VIEW_OF_CELL], EXCEPTION_LEVEL)
-    return np.asarray(lower > LAW)
+    seen = rows[..., VIEW_OF_CELL]
+    above = clopper_pearson_lower(counts, seen, EXCEPTION_LEVEL) > LAW
+    return np.where(above, clopper_pearson_upper(counts, seen, EXCEPTION_ERROR), 0.0)
 
 
 def own_shares(count: npt.ArrayLike) -> FloatArray:

@@ -9,8 +9,9 @@ from service.detection.baseline import BOUNDS, law_verdict, own_bounds, rare_cel
 from service.detection.cells import CELLS, all_hits
 from service.detection.policy import Policy
 from service.digits.intervals import clopper_pearson_upper
-from service.digits.significand import FloatArray, IntArray
+from service.digits.significand import IntArray
 from service.digits.views import WATCHED
+from service.streams.ordinary import rounded_up
 from service.streams.rows import Rows
 from service.streams.rules import (
     DAY_MS,
@@ -195,7 +196,7 @@ def decide(folded: Folded, s: int, policy: Policy, rules: Rules, at: int) -> Non
             state["limit_base"][s], np.array([state["limit_rows"][s]]), alpha / BOUNDS
         )
         named = rules.high[s] > 0  # places without a limit get the bound that finds nothing
-        state["joint_bound"][s, LIMIT_DETECTORS] = _rounded_up(np.where(named, upper, 1.0))
+        state["joint_bound"][s, LIMIT_DETECTORS] = rounded_up(np.where(named, upper, 1.0))
     if learns_baseline(state[s]) and _is_long(state[s], "base", policy):
         _decide_references(folded, s, policy, alpha)
         restart(state, s, at)
@@ -223,9 +224,9 @@ def _decide_references(folded: Folded, s: int, policy: Policy, alpha: float) -> 
     bounds = own_bounds(count, rows, per_block, seen, partition, alpha)
     runs = partition == 0
     rare, joint = rare_cells(per_block[runs], seen[runs], alpha)
-    state["bound"][s] = _rounded_up(bounds)
+    state["bound"][s] = rounded_up(bounds)
     state["rare"][s] = rare
-    state["joint_bound"][s, : len(joint)] = _rounded_up(joint)
+    state["joint_bound"][s, : len(joint)] = rounded_up(joint)
     verdict = law_verdict(
         count,
         rows,
@@ -238,8 +239,3 @@ def _decide_references(folded: Folded, s: int, policy: Policy, alpha: float) -> 
     ).astype(np.uint8)
     folded.buckets = folded.buckets.where(~blocks)
     choose_references(state, np.array([s]), policy)
-
-
-def _rounded_up(bounds: FloatArray) -> npt.NDArray[np.float32]:
-    rounded = bounds.astype(np.float32)
-    return np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)

@@ -2,8 +2,8 @@
 
 Against its own baseline, the baseline's upper confidence bounds. Against the law, the law itself,
 but for *excepted* cells: those that the baseline saw more often than the law lets one expect,
-though not surely so. They get the larger of the law and their own bound. Accepting the law for a
-view says that nothing surely speaks against it, not that it holds in every cell.
+though not surely so. They get a bound of their own. Accepting the law for a view says that nothing
+surely speaks against it, not that it holds in every cell.
 """
 
 from __future__ import annotations
@@ -46,15 +46,21 @@ def bounds_of_cells(state: States, cells: IntArray) -> FloatArray:
 
 
 def except_cells(state: States, slots: IntArray) -> None:
-    """Mark the cells that a complete baseline excepts from the law."""
-    state["excepted"][slots] = exceptions(state["base"][slots])
+    """Set the bounds of the cells that a complete baseline excepts from the law."""
+    state["excepted"][slots] = rounded_up(exceptions(state["base"][slots]))
+
+
+def rounded_up(bounds: FloatArray) -> npt.NDArray[np.float32]:
+    """Return bounds in single precision, none below what it was."""
+    rounded = bounds.astype(np.float32)
+    return np.where(rounded < bounds, np.nextafter(rounded, np.float32(2)), rounded)
 
 
 def _chosen(
     reference: npt.NDArray[np.uint8],
-    excepted: npt.NDArray[np.uint8],
+    excepted: npt.NDArray[np.float32],
     bound: npt.NDArray[np.float32],
     law: FloatArray,
 ) -> FloatArray:
-    by_law = np.where((excepted > 0) & (reference == BY_LAW), np.maximum(law, bound), law)
+    by_law = np.where((excepted > 0) & (reference == BY_LAW), excepted, law)
     return np.asarray(np.where(reference == BY_OWN, bound, by_law), dtype=np.float64)

@@ -74,7 +74,7 @@ STATE = np.dtype(
         ("base_circle", "<f8", 4),
         ("base", "<u4", CELLS),  # the baseline's counts
         ("bound", "<f4", CELLS),  # own upper bounds, before tolerance
-        ("excepted", "u1", CELLS),  # cells with their own bound though the law was accepted
+        ("excepted", "<f4", CELLS),  # bounds of single cells though the law was accepted, else 0
         ("rare", "u1", CELLS),  # cells hardly used in the baseline
         ("joint_bound", "<f4", JOINT),  # of joint shares; 0 before there is a baseline
         ("limits", "<u8"),  # fingerprint of the review limits in force, 0 for none

@@ -146,6 +146,11 @@ def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
         doubt, ground = _law_taken(state, policy, by_law)
         doubts += doubt
         grounds += ground
+    if state["alarm_crossings"]:
+        doubts.append(
+            "An alarm is open. If what it shows has become the merchant's ordinary business, such "
+            "as a promotion or new prices, the bounds do not represent it any more."
+        )
     ratio, z = dependence(state)
     if z > DEPENDENT_Z and ratio > DOUBTFUL_REPEATS:
         doubts.append(

@@ -285,3 +285,13 @@ def test_bursts_void_the_guarantee_and_chance_does_not() -> None:
     assert "follow each other" in broken["reason"]
     some = np.where(rng.random(4000) < 0.05, np.roll(shop, 1), shop)
     assert of(some, Policy(reference="own"), 40)["guarantee"]["status"] in ("holds", "doubtful")
+
+
+def test_an_open_alarm_casts_doubt_on_the_bounds() -> None:
+    rng = np.random.default_rng(62)
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], 4000)
+    shop[3000:] = rng.choice([150, 250, 350, 950], 1000)  # a promotion: all prices end in 50
+    found = of(shop, Policy(reference="own"), 40)
+    assert found["standing"] == "alarmed"
+    assert found["guarantee"]["status"] != "holds"
+    assert "promotion" in found["guarantee"]["reason"]

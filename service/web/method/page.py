@@ -136,6 +136,7 @@ def _numbers() -> Iterator[tuple[str, str, str]]:
         "",
     )
     yield "level at which a cell is excepted from the law", f"{baseline.EXCEPTION_LEVEL:g}", ""
+    yield "level of an excepted cell's own bound", f"{baseline.EXCEPTION_ERROR:g}", ""
     yield "rows from which a view is judged for the law", f"{baseline.ROWS_FROM:,}", ""
     yield "rows from which harmonics are judged", f"{baseline.HARMONICS_FROM:,}", ""
     yield "contaminations ε of the cell detectors", _listed(bank.EPSILONS.tolist()), ""
