@@ -41,12 +41,16 @@ def affine_path(a: FloatArray, b: FloatArray, longest: int) -> FloatArray:
     if a.shape != b.shape:
         raise ValueError(f"a and b must have one shape, got {a.shape} and {b.shape}")
     np.minimum(b, CEILING, out=b)
+    scratch = np.empty_like(b)
     distance = 1
     while distance < longest:
-        b[..., distance:] += a[..., distance:] * b[..., :-distance]
+        product = scratch[..., distance:]
+        np.multiply(a[..., distance:], b[..., :-distance], out=product)
+        b[..., distance:] += product
         np.minimum(b, CEILING, out=b)
-        a[..., distance:] *= a[..., :-distance].copy()
-        np.minimum(a, CEILING, out=a)
+        if 2 * distance < longest:
+            np.multiply(a[..., distance:], a[..., :-distance], out=product)
+            np.minimum(product, CEILING, out=a[..., distance:])
         distance *= 2
     return b
 
