@@ -174,8 +174,13 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     previous = np.roll(at_hit, 1)
     previous[opening] = state["hit"][at_opening]
     misses = at_hit - previous - 1
-    u = bounds(state, rules, part.slot[row], cell)
-    gain = _KEEP + _EPS / u
+    # what does not change from hit to hit is computed once a cell
+    group = np.cumsum(first) - 1
+    u = bounds(state, rules, *at_opening)
+    factor = _KEEP + _EPS / u
+    share = bank.CELL_WEIGHTS[at_opening[1]] * _SHARE * (_EPS / u) / factor
+    up = np.log(bank.CUSUM_RETAINED + bank.CUSUM_GAIN / u)[group]
+    gain = np.take(factor, group, axis=1)
     kept = _retained(misses)
     a = kept * gain
     b = gain * (1 - kept * _KEEP) / _EPS
@@ -184,7 +189,6 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     value = affine_path(a, b, longest)
 
     # the CUSUM, from which onset and severity are read, is touched at hits only, too
-    up = np.log(bank.CUSUM_RETAINED + bank.CUSUM_GAIN / u)
     decay = misses * np.log(bank.CUSUM_RETAINED)
     step = decay + up
     level = up.copy()
@@ -200,7 +204,7 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
         row=row,
         key=key,
         value=value,
-        weight=bank.CELL_WEIGHTS[cell] * _SHARE * (value / gain) * (_EPS / u),
+        weight=np.take(share, group, axis=1) * value,
         clock=at_hit,
         cusum=cusum,
         start=start,
