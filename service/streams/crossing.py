@@ -188,6 +188,7 @@ def _alarm(
     ordinal = int(state["alarm_crossings"][s])
     live = not historic and not state["alarm_live"][s]
     state["alarm_crossings"][s] = ordinal + 1
+    state["crossings"][s] += 1
     state["alarm_severity"][s] += max(f.severity for f in found)
     state["alarm_live"][s] |= not historic
     excess, amount = _excess(state[s])

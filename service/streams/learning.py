@@ -199,6 +199,8 @@ def decide(folded: Folded, s: int, policy: Policy, rules: Rules, at: int) -> Non
         state["joint_bound"][s, LIMIT_DETECTORS] = rounded_up(np.where(named, upper, 1.0))
     if learns_baseline(state[s]) and _is_long(state[s], "base", policy):
         _decide_references(folded, s, policy, alpha)
+        state["crossings"][s] = 0
+        state["decided_row"][s] = state["rows"][s]
         restart(state, s, at)
 
 

@@ -104,6 +104,8 @@ STATE = np.dtype(
         ("alarm_seen", "<i8"),  # rows its view saw since the onset
         ("alarm_hit_at", "<i8"),
         ("crossed_row", "<i8"),  # row of the last crossing
+        ("crossings", "<u4"),  # since the references were decided, at a row of its own
+        ("decided_row", "<i8"),
     ],
     align=True,
 )

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
+from scipy import special
 
 from service.detection.baseline import HARMONICS_FROM, law_verdict, spent_alpha
 from service.detection.policy import Policy
@@ -28,6 +29,9 @@ from service.streams.state import (
 
 WEEK_DAYS = 7
 """Days that a baseline must span to have seen a merchant's week."""
+
+TOO_MANY, FAR_TOO_MANY = 0.01, 1e-6
+"""Chance of so many crossings at one in A rows at which the promise is doubtful, or void."""
 
 NEIGHBOURS_FROM = 300
 """Rows below which nothing is said about neighbours."""
@@ -151,6 +155,15 @@ def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
             "An alarm is open. If what it shows has become the merchant's ordinary business, such "
             "as a promotion or new prices, the bounds do not represent it any more."
         )
+    chance = chance_of_crossings(state, policy)
+    if chance < TOO_MANY:
+        doubts.append(
+            f"Its evidence reached the threshold {int(state['crossings']):,} times in "
+            f"{int(state['rows'] - state['decided_row']):,} amounts, more often than the promise "
+            "allows for chance: its digits have changed, or were never what they were taken for."
+        )
+        if chance < FAR_TOO_MANY:
+            return {"status": "void", "reason": " ".join(doubts + grounds)}
     ratio, z = dependence(state)
     if z > DEPENDENT_Z and ratio > DOUBTFUL_REPEATS:
         doubts.append(
@@ -166,6 +179,13 @@ def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
     else:
         grounds.append("Neighbouring amounts do not depend on each other visibly.")
     return {"status": "holds", "reason": " ".join(grounds)}
+
+
+def chance_of_crossings(state: States, policy: Policy) -> float:
+    """Return the chance of so many crossings or more, were they one in A rows (Poisson)."""
+    crossings = int(state["crossings"])
+    expected = int(state["rows"] - state["decided_row"]) / policy.transactions_per_false_alarm
+    return float(special.pdtrc(crossings - 1, expected)) if crossings else 1.0
 
 
 def dependence(state: States) -> tuple[float, float]:

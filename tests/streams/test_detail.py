@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -202,7 +203,7 @@ def test_the_law_taken_for_granted() -> None:
     assert (many["law_applies"]["status"], many["guarantee"]["status"]) == ("yes", "holds")
     narrow = of((10 ** rng.normal(3.5, 0.25, 3000)).astype(int))
     assert narrow["law_applies"]["status"] == "no"
-    assert narrow["guarantee"]["status"] == "doubtful"
+    assert narrow["guarantee"]["status"] != "holds"
     cheat = of(with_fraud(rng, 2000, 500, 0.3))
     assert "begin with 49, and 0.97 % is the bound" in cheat["guarantee"]["reason"]
 
@@ -295,3 +296,15 @@ def test_an_open_alarm_casts_doubt_on_the_bounds() -> None:
     assert found["standing"] == "alarmed"
     assert found["guarantee"]["status"] != "holds"
     assert "promotion" in found["guarantee"]["reason"]
+
+
+def test_more_crossings_than_chance_allows_void_the_guarantee() -> None:
+    rng = np.random.default_rng(63)
+    shop = rng.choice([199, 299, 499, 999, 1499, 2499, 4999, 9999], 6000)
+    changed = np.where(np.arange(6000) < 3000, shop, rng.choice([150, 250, 350, 950], 6000))
+    policy = Policy(reference="own", transactions_per_false_alarm=1000)
+    found = of(changed, policy, 60)["guarantee"]
+    assert found["status"] == "void"
+    assert "more often than the promise allows" in found["reason"]
+    by_chance = of(law_amounts(rng, 6000), replace(LAW, transactions_per_false_alarm=1000), 60)
+    assert "more often" not in by_chance["guarantee"]["reason"]
