@@ -53,8 +53,8 @@ class Judge:
         self.feed = feed
         self.catalogue = catalogue
 
-    def judge(self, tenant: str, blobs: Sequence[Blobs], *, publish: bool = True) -> Judged:
-        """Fold streams of one tenant; with ``publish`` compact and publish what is due.
+    def judge(self, tenant: str, blobs: Sequence[Blobs]) -> Judged:
+        """Fold streams of one tenant; compact and publish what is due.
 
         A stream that cannot be folded is put in quarantine and left out, and does not keep the
         others from being judged.
@@ -68,8 +68,7 @@ class Judge:
             index = self._healthy(tenant, blobs, index)
             blobs = [blobs[i] for i in index]
             loaded, crossings = self._fold(tenant, blobs)
-        if publish:
-            self._settle(tenant, blobs, loaded, crossings)
+        self._settle(tenant, blobs, loaded, crossings)
         streams = [stream_of(b.path)[1] for b in blobs]
         return Judged(index, streams, loaded.folded, crossings)
 

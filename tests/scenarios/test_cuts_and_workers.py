@@ -152,7 +152,7 @@ def located(tallies: Tallies, paths: list[str]) -> list[tuple[Partition, str]]:
 
 def read_state(tallies: Tallies, paths: list[str]) -> Folded:
     """Return the state that the service answers from: snapshot and the log's tail."""
-    judged = tallies.judge.judge(TENANT, tallies.logs.read(located(tallies, paths)), publish=False)
+    judged = tallies.judge.judge(TENANT, tallies.logs.read(located(tallies, paths)))
     assert judged.index == list(range(len(paths)))
     assert judged.crossings == []  # all of them are in snapshots, and so were published
     return judged.folded
