@@ -78,14 +78,18 @@ class Crossing:
     findings: list[Finding]
 
 
-def paused(state: States, rules: Rules, slot: IntArray, number: IntArray) -> npt.NDArray[np.bool_]:
-    """Return which rows, by stream and the stream's row number, may not cross.
+def paused(state: States, rules: Rules, part: Rows, number: IntArray) -> npt.NDArray[np.bool_]:
+    """Return which rows may not cross; ``number`` are the rows' numbers within their streams.
 
-    A stream rests after a crossing if its open alarm has crossed often, or if it raises none.
+    A stream rests after a crossing if it raises no alarms, or if its open alarm has crossed often.
+    An alarm of history does not rest from the first live row that would bring it to the feed.
     """
-    often = (state["alarm_crossings"][slot] >= FEW_CROSSINGS) | ~rules.watching[slot]
+    slot = part.slot
+    told = part.historic | (state["alarm_live"][slot] > 0)
+    often = (state["alarm_crossings"][slot] >= FEW_CROSSINGS) & told
     crossed = state["crossed_row"][slot]
-    return np.asarray(often & (crossed > 0) & (number - crossed < PAUSE_ROWS))
+    rests = (crossed > 0) & (number - crossed < PAUSE_ROWS)
+    return np.asarray(rests & (often | ~rules.watching[slot]))
 
 
 def cross(

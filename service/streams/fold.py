@@ -119,7 +119,7 @@ def _until_crossed(
     first = np.searchsorted(part.slot, part.slot)
     over = path.total >= rules.threshold[part.slot]
     if over.any():
-        over &= ~paused(state, rules, part.slot, _row_numbers(state, part))
+        over &= ~paused(state, rules, part, _row_numbers(state, part))
     if not over.any():
         return np.empty(0, np.int64), np.ones(len(part.slot), bool)
     over_before: IntArray = np.cumsum(over) - over

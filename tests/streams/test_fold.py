@@ -270,6 +270,10 @@ def test_the_first_live_crossing_of_an_old_alarm_says_so() -> None:
     first = next(c for c in crossings if c.live)
     assert first.ordinal > 0
     assert 20 < first.rows <= 25
+    _, crossings = run([records(np.full(300, 4900), flags=np.repeat([HISTORIC, 0], 150))], {1: LAW})
+    first = next(c for c in crossings if c.live)
+    assert first.ordinal >= 16  # it rested
+    assert 150 < first.rows <= 155
 
 
 def test_amounts_just_below_a_review_limit_are_a_cell_of_their_own() -> None:
