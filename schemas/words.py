@@ -18,6 +18,7 @@ SPANS = ("window", "lifetime")
 STANDINGS = ("learning", "steady", "alarmed")
 STATES = ("open", "acknowledged", "confirmed", "dismissed")
 LIMIT = "limit"
+REPEAT = "repeat"
 PATTERNS = ("cell", "rare_cells", "shape")
 REFERENCES = ("law", "own", "category")
 
@@ -103,9 +104,12 @@ def alarmed_view(**kwargs: Any) -> fields.String:
     """A view, or the amounts just below a review limit."""
     metadata = said(
         "A view that detectors watch; `limit` for amounts just below a review limit of the "
-        "policy, whose cell is the limit in minor units."
+        "policy, whose cell is the limit in minor units; `repeat` for amounts that repeat one of "
+        "the few before them, whose cells are such amounts in minor units."
     )
-    return fields.String(validate=one_of(*WATCHED_VIEWS, LIMIT), metadata=metadata, **kwargs)
+    return fields.String(
+        validate=one_of(*WATCHED_VIEWS, LIMIT, REPEAT), metadata=metadata, **kwargs
+    )
 
 
 def watched_view(**kwargs: Any) -> fields.String:

@@ -2,7 +2,7 @@
 
 A *cell* detector bets that one cell holds a share ``eps`` too much, a *shape* detector that the
 whole lead pair moved, a *joint* detector that cells which the merchant hardly used come up, or
-amounts just below a review limit.
+amounts just below a review limit, or amounts that were there a moment before.
 Each multiplies its capital by a likelihood ratio L whose expectation is at most 1 while every
 cell's probability is at most its bound u; the mixture Shiryaev-Roberts statistic of the bank
 crosses A at most once in A transactions on average, without calibration.
@@ -73,14 +73,19 @@ SHAPE_WEIGHTS = np.concatenate([np.full(2, 0.025), np.full(12, 0.04 / 12)])
 RARE_VIEWS = (1, 2)
 """Watched views that have a rare cells detector: lead pair and tail pair."""
 
+REACH = 64
+"""Rows before a row among which its exact amount is looked for."""
+
 LIMITS = 4
 """Most review limits that a policy may name for one currency."""
 
-JOINT = len(RARE_VIEWS) + LIMITS
-"""Joint detectors: for the rare cells of each such view, and for the amounts below each limit."""
+REPEATS = len(RARE_VIEWS)
+FIRST_LIMIT = REPEATS + 1
+JOINT = FIRST_LIMIT + LIMITS
+"""Joint detectors, in order: the rare cells of each such view, repeated amounts, each limit."""
 
 JOINT_EPSILONS = np.array([0.12, 0.40])
-JOINT_WEIGHTS = np.array([0.015, 0.015, 0.005, 0.005, 0.005, 0.005])
+JOINT_WEIGHTS = np.array([0.015, 0.015, 0.01, 0.0025, 0.0025, 0.0025, 0.0025])
 """Weight of each joint detector, shared evenly by the contaminations."""
 
 

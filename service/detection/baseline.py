@@ -219,6 +219,42 @@ def rare_cells(
     return rare, bound
 
 
+def repeat_bound(
+    block_count: IntArray, block_rows: IntArray, block_partition: IntArray, alpha: float
+) -> float:
+    """Return the upper bound of how often an amount repeats one of the few before it.
+
+    Parameters
+    ----------
+    block_count, block_rows : int64 arrays (B,)
+        Repeats and rows of each block; every partition covers the whole baseline.
+    block_partition : int64 array (B,)
+        As in `own_bounds`.
+    alpha : float
+        Error probability of the baseline.
+
+    Returns
+    -------
+    float
+        1 without rows.
+
+    Raises
+    ------
+    ValueError
+        If alpha is not between 0 and 1.
+    """
+    _check(alpha=alpha)
+    bound = 0.0
+    for partition in np.unique(block_partition):
+        mine = block_partition == partition
+        count, rows = block_count[mine], block_rows[mine]
+        upper = clopper_pearson_upper(count.sum(), rows.sum(), alpha / BOUNDS)
+        share = np.array([count.sum() / max(rows.sum(), 1)])
+        burst = _burst_bound(count[:, None], rows[:, None], share, alpha / BOUNDS)
+        bound = max(bound, float(upper), float(burst[0]))
+    return bound or 1.0
+
+
 def _rarest(count: IntArray) -> npt.NDArray[np.bool_]:
     """Return the cells, rarest first, on which an even spread of 30 % of the rows shows best."""
     order = np.argsort(count, kind="stable")

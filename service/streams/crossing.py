@@ -12,7 +12,7 @@ import numpy.typing as npt
 from service.detection.cells import CELLS
 from service.digits.significand import IntArray
 from service.digits.views import WATCHED_VIEWS
-from service.streams.findings import LIMIT, Finding, findings
+from service.streams.findings import LIMIT, REPEAT, Finding, findings
 from service.streams.rows import Rows
 from service.streams.rules import Rules
 from service.streams.state import NO_VIEW, REFUTED_BY_BANK, UNDECIDED, States, restart
@@ -51,7 +51,7 @@ class Crossing:
         Log-likelihood gathered since onset, over all crossings of the alarm.
     excess, excess_amount : float
         Rows and minor units in the alarm's cells, since its onset, beyond what is expected there;
-        NaN for a shape.
+        NaN for a shape, and for repeated amounts.
     last_hit_at : int
         Event time of the last row in the alarm's cells.
     live : bool
@@ -220,7 +220,8 @@ def _open(state: States, s: int, top: Finding, at: int) -> None:
     """Begin to count what goes on in the cells of a new alarm, from its onset."""
     state["alarm_severity"][s] = 0.0
     state["alarm_live"][s] = 0
-    state["alarm_view"][s] = NO_VIEW if top.view == LIMIT else WATCHED_VIEWS.index(top.view)
+    without = top.view in (LIMIT, REPEAT)
+    state["alarm_view"][s] = NO_VIEW if without else WATCHED_VIEWS.index(top.view)
     state["alarm_low"][s], state["alarm_high"][s] = top.low, top.high
     state["alarm_cells"][s] = 0
     state["alarm_cells"][s, list(top.members)] = 1
@@ -229,7 +230,7 @@ def _open(state: States, s: int, top: Finding, at: int) -> None:
     state["alarm_spent"][s] = top.spent
     state["alarm_seen"][s] = top.seen
     state["alarm_hit_at"][s] = at
-    state["alarm_shape"][s] = top.pattern == "shape"
+    state["alarm_shape"][s] = top.pattern == "shape" or top.view == REPEAT
 
 
 def _excess(state: States) -> tuple[float, float]:

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from service.detection.bank import REACH
 from service.streams.record import Stream
 
 _MONTHS = (
@@ -54,11 +55,13 @@ def explanation(
         if finding["view"] == "tail_pair" and finding["reference"] == "law"
         else _REFERENCE[finding["reference"]]
     )
-    cells = (
-        _below(finding, stream.currency, exponent)
-        if finding["view"] == "limit"
-        else _cells(finding)
-    )
+    match finding["view"]:
+        case "limit":
+            cells = _below(finding, stream.currency, exponent)
+        case "repeat":
+            cells = _again(finding, stream.currency, exponent)
+        case _:
+            cells = _cells(finding)
     return (
         f"{since}{percent(finding['observed'])} of the amounts {cells}, where at most "
         f"{percent(finding['bound'])} is expected {where}"
@@ -88,6 +91,12 @@ def _listed(cells: Sequence[str], word: str) -> str:
 def _below(finding: Mapping[str, Any], currency: str, exponent: int | None) -> str:
     limit = _money(finding["high"], currency, exponent)
     return f"lie just below the review limit of {limit}"
+
+
+def _again(finding: Mapping[str, Any], currency: str, exponent: int | None) -> str:
+    amounts = [_money(float(a), currency, exponent) for a in finding["cells"]]
+    such = f", such as {_listed(amounts, 'and')}" if amounts else ""
+    return f"repeat one of the {REACH} before them exactly{such}"
 
 
 def _cells(finding: Mapping[str, Any]) -> str:

@@ -18,6 +18,10 @@ NOTABLE = 0.05
 """Share of the evidence below which a view or shape is not mentioned."""
 
 LIMIT = "limit"
+REPEAT = "repeat"
+
+MOST_REPEATED = 3
+"""Amounts named of those that repeat."""
 
 MOST_CELLS = 9
 """Cells named of a pattern that has many."""
@@ -33,7 +37,8 @@ class Finding:
     Attributes
     ----------
     view : str
-        A watched view, or ``limit`` for amounts just below a review limit.
+        A watched view, ``limit`` for amounts just below a review limit, or ``repeat`` for amounts
+        that repeat one of the few before them.
     pattern : str
         ``cell``, ``rare_cells`` or ``shape``.
     cells : tuple of str
@@ -114,7 +119,7 @@ def findings(
         Of the watched views.
     shapes : float64 array (14,)
         Weights of the shape detectors in force.
-    joint : float64 array (6,)
+    joint : float64 array (7,)
         Weights of the joint detectors in force.
     limits : sequence of (int, int)
         Amounts just below each review limit are from the first to below the second.
@@ -196,7 +201,7 @@ def _joint(
     tolerance: FloatArray,
     limits: Sequence[tuple[int, int]],
 ) -> Finding:
-    """Describe cells that are bounded together: rare ones, or the amounts below a limit."""
+    """Describe what is bounded together: rare cells, repeated amounts, those below a limit."""
     if place < len(bank.RARE_VIEWS):
         view = bank.RARE_VIEWS[place]
         part = WATCHED[WATCHED_VIEWS[view]]
@@ -207,8 +212,15 @@ def _joint(
         cells = tuple(cell_label(int(k)) for k in often[:MOST_CELLS])
         expected = float(base[members].sum() / max(base[part].sum(), 1.0))
         low = high = 0
+    elif place == bank.REPEATS:
+        view, name, pattern, members = 1, REPEAT, "cell", np.empty(0, int)
+        amounts, times = np.unique(state["recent"], return_counts=True)
+        often = amounts[np.argsort(-times * (amounts > 0), kind="stable")][:MOST_REPEATED]
+        cells = tuple(str(a) for a in often.tolist() if a)
+        expected = float(state["repeat_share"])
+        low = high = 0
     else:
-        k = place - len(bank.RARE_VIEWS)
+        k = place - bank.FIRST_LIMIT
         low, high = limits[k]
         view, name, pattern, cells, members = 1, LIMIT, "cell", (str(high),), np.empty(0, int)
         expected = float(state["limit_base"][k]) / max(int(state["limit_rows"]), 1)

@@ -18,9 +18,10 @@ from service.digits.significand import IntArray
 from service.streams.crossing import PAUSE_ROWS, Crossing, cross, follow, paused
 from service.streams.learning import decide, learn, learn_limits, until_complete
 from service.streams.record import Records
+from service.streams.repeats import remember
 from service.streams.rows import Rows, columns
 from service.streams.rules import Kind, Rules, adopt, refresh
-from service.streams.running import Cells, Joint, Running, Shapes, evaluate
+from service.streams.running import Cells, Joint, Running, Shapes, evaluate, uses_repeats
 from service.streams.state import UNDECIDED, Folded, States
 from service.streams.window import tally
 
@@ -153,7 +154,9 @@ def _apply(
         [np.bincount(slot[part.cell[v, rows] >= 0], minlength=n) for v in range(3)], axis=1
     )
     state["circle"][streams] += np.add.reduceat(part.wave[:, rows], starts, axis=1).T
-    learn(folded, part, rows, streams, starts)
+    if path.repeated is not None:
+        remember(state, part, rows, uses_repeats(state, rules))
+    learn(folded, part, rows, streams, starts, path.repeated)
     learn_limits(state, rules, part, rows)
     _compare_neighbours(state, part, rows)
     follow(state, part, rows, path.cells.row[used], path.cells.key[used], clock)

@@ -28,7 +28,7 @@ class Weights(NamedTuple):
         1 for a watched view whose cells count, else 0.
     shapes : float64 array (n, 14)
         Of the shape detectors, 0 for those that are dropped.
-    joint : float64 array (n, 6)
+    joint : float64 array (n, 7)
         Of the joint detectors, 0 where a bound is not learned or says nothing; rare cells count
         against an own baseline only.
     """
@@ -69,6 +69,7 @@ def weights(state: States, slots: IntArray, policy: Policy) -> Weights:
     joint = (bound > 0) & (bound < JOINT_AT_MOST) & ~learning[:, None]
     views, rare = list(bank.RARE_VIEWS), slice(0, len(bank.RARE_VIEWS))
     joint[:, rare] &= active[:, views] & (state["reference"][slots][:, views] == BY_OWN)
+    joint[:, bank.REPEATS] &= active[:, _LEAD_PAIR]
     return Weights(
         active.astype(np.float64),
         np.where(counts, bank.SHAPE_WEIGHTS, 0.0),

@@ -5,7 +5,15 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.baseline import BOUNDS, law_verdict, own_bounds, rare_cells, spent_alpha
+from service.detection.bank import FIRST_LIMIT
+from service.detection.baseline import (
+    BOUNDS,
+    law_verdict,
+    own_bounds,
+    rare_cells,
+    repeat_bound,
+    spent_alpha,
+)
 from service.detection.cells import CELLS, all_hits
 from service.detection.policy import Policy
 from service.digits.intervals import clopper_pearson_upper
@@ -24,6 +32,7 @@ from service.streams.state import (
     HOUR_BLOCK,
     REFUTED_BY_CELL,
     REFUTED_BY_CIRCLE,
+    REPEAT_CELL,
     RUN_BLOCK,
     TOO_FEW,
     UNDECIDED,
@@ -107,8 +116,25 @@ def _completes(
     return np.asarray(learns & enough & (newest - oldest >= rules.span[slot]))
 
 
-def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts: IntArray) -> None:
-    """Add consumed rows to the baselines of the streams that are still learning."""
+def learn(
+    folded: Folded,
+    part: Rows,
+    rows: IntArray,
+    streams: IntArray,
+    starts: IntArray,
+    repeated: npt.NDArray[np.bool_] | None,
+) -> None:
+    """Add consumed rows to the baselines of the streams that are still learning.
+
+    Parameters
+    ----------
+    rows : int64 array
+        Rows of ``part`` that were consumed.
+    streams, starts : int64 arrays
+        Their streams, and where each begins among them.
+    repeated : bool array or None
+        Rows of ``part`` whose amount was there a moment before; None only if no stream learns.
+    """
     state = folded.state
     learning = learns_baseline(state)
     if not learning[streams].any():
@@ -132,8 +158,10 @@ def learn(folded: Folded, part: Rows, rows: IntArray, streams: IntArray, starts:
     run = RUN_BLOCK + (position[mine] >> state["block_level"][slot[mine]].astype(np.int64))
     hour = HOUR_BLOCK + part.at[chosen] % DAY_MS // HOUR_BLOCK_MS
     weekday = WEEKDAY_BLOCK + part.at[chosen] // DAY_MS % 7
+    again = np.zeros(len(chosen), bool) if repeated is None else repeated[chosen]
+    every = np.concatenate([cell, np.where(again, REPEAT_CELL, -1)[None]])
     for block in (run, hour, weekday):
-        folded.buckets = counted(folded.buckets, slot[mine], block, cell)
+        folded.buckets = counted(folded.buckets, slot[mine], block, every)
     view, row = np.nonzero(cell >= 0)
     np.add.at(state["base"], (slot[mine][row], cell[view, row]), 1)
     state["base_rows"] = grown
@@ -219,8 +247,9 @@ def _decide_references(folded: Folded, s: int, policy: Policy, alpha: float) -> 
     mine = folded.buckets.slot == s
     blocks = mine & (folded.buckets.bucket >= RUN_BLOCK)
     table, number = np.unique(folded.buckets.bucket[blocks], return_inverse=True)
-    per_block = np.zeros((len(table), CELLS), np.int64)
+    per_block = np.zeros((len(table), REPEAT_CELL + 1), np.int64)
     per_block[number, folded.buckets.cell[blocks]] = folded.buckets.count[blocks]
+    repeats, per_block = per_block[:, REPEAT_CELL], per_block[:, :CELLS]
     seen = np.stack([per_block[:, cells].sum(axis=1) for cells in WATCHED.values()], axis=1)
     partition = np.searchsorted([HOUR_BLOCK, WEEKDAY_BLOCK], table, side="right")
     bounds = own_bounds(count, rows, per_block, seen, partition, alpha)
@@ -228,7 +257,9 @@ def _decide_references(folded: Folded, s: int, policy: Policy, alpha: float) -> 
     rare, joint = rare_cells(per_block[runs], seen[runs], alpha)
     state["bound"][s] = rounded_up(bounds)
     state["rare"][s] = rare
-    state["joint_bound"][s, : len(joint)] = rounded_up(joint)
+    again = repeat_bound(repeats, seen[:, 0], partition, alpha)
+    state["joint_bound"][s, :FIRST_LIMIT] = rounded_up(np.append(joint, again))
+    state["repeat_share"][s] = repeats[runs].sum() / max(int(seen[runs, 0].sum()), 1)
     verdict = law_verdict(
         count,
         rows,

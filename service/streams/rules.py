@@ -23,11 +23,11 @@ from service.streams.rows import Rows
 from service.streams.state import BY_LAW, BY_OWN, UNDECIDED, States
 
 DAY_MS = 86_400_000
-LIMIT_DETECTORS = slice(len(bank.RARE_VIEWS), bank.JOINT)
+LIMIT_DETECTORS = slice(bank.FIRST_LIMIT, bank.JOINT)
 """Places of the review limits among the joint detectors."""
 
-JOINT_VIEWS = (*bank.RARE_VIEWS, *([1] * bank.LIMITS))
-"""The view whose tolerance serves each joint detector; a limit is one of leading digits."""
+JOINT_VIEWS = (*bank.RARE_VIEWS, 1, *([1] * bank.LIMITS))
+"""The view whose tolerance serves each joint detector; without a view, the lead pair's."""
 
 
 class Kind(NamedTuple):
@@ -46,7 +46,7 @@ class Rules:
     watching: npt.NDArray[np.bool_]  # (n,) flows that may raise alarms
     active: FloatArray  # (n, 3), 1 for a view that counts
     shapes: FloatArray  # (n, 14), weights of the shape detectors
-    joint: FloatArray  # (n, 6), weights of the joint detectors
+    joint: FloatArray  # (n, 7), weights of the joint detectors
     low: IntArray  # (n, 4) amounts just below each review limit are low <= amount < high
     high: IntArray
     size: IntArray  # (n,) rows and span of a complete baseline

@@ -12,9 +12,10 @@ from service.detection.cells import CELLS, VIEW_OF_CELL, all_hits
 from service.detection.paths import affine_path, cusum_path
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_PAIR
+from service.streams.repeats import repeated
 from service.streams.rows import Rows
 from service.streams.rules import JOINT_VIEWS, Rules, below_limits, bounds
-from service.streams.state import BY_OWN, States
+from service.streams.state import BY_OWN, UNDECIDED, States
 
 _EPS = bank.EPSILONS[:, None]
 _KEEP = bank.RETAINED[:, None]
@@ -111,6 +112,8 @@ class Running:
     shapes : Shapes
     joint : Joint or None
         None where no stream of the pass has such detectors in force.
+    repeated : bool array (n,) or None
+        Rows whose amount was there a moment before; None where no stream learns or watches them.
     """
 
     total: FloatArray
@@ -118,6 +121,7 @@ class Running:
     cells: Cells
     shapes: Shapes
     joint: Joint | None
+    repeated: npt.NDArray[np.bool_] | None
 
 
 def evaluate(state: States, rules: Rules, part: Rows) -> Running:
@@ -145,13 +149,15 @@ def evaluate(state: States, rules: Rules, part: Rows) -> Running:
     stored = state["shape_cusum"].T[:, part.slot[first]]
     cusum = _cusum(stored, first, longest, np.log(ratio))
     shapes = Shapes(shape, cusum, _last_rest(cusum, begin))
-    joint = None
+    joint, repeats = None, None
+    if uses_repeats(state, rules)[part.slot[first]].any():
+        repeats = repeated(state, part)
     places = np.flatnonzero(rules.joint[part.slot[first]].any(axis=0)).tolist()
     if places:
-        joint = _joint(state, rules, part, first, begin, longest, places)
+        joint = _joint(state, rules, part, first, begin, longest, places, repeats)
         weight = rules.joint[part.slot][:, places].T
         total += (joint.value.mean(axis=1) * weight).sum(axis=0)
-    return Running(total, sums, cells, shapes, joint)
+    return Running(total, sums, cells, shapes, joint, repeats)
 
 
 def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
@@ -262,11 +268,12 @@ def _joint(
     begin: IntArray,
     longest: int,
     places: list[int],
+    repeats: npt.NDArray[np.bool_] | None,
 ) -> Joint:
     """Run the joint detectors: ``L = (1 - eps) + eps 1{member} / u`` with a joint bound u."""
     slot = part.slot
     in_force = rules.joint[slot][:, places].T > 0
-    seen, member = _membership(state, rules, part)
+    seen, member = _membership(state, rules, part, repeats)
     seen = seen[places] & in_force
     member = member[places] & seen
     tolerance = rules.tolerance[slot][:, [JOINT_VIEWS[p] for p in places]].T
@@ -286,15 +293,22 @@ def _joint(
     return Joint(places, value, cusum, rest, seen, member)
 
 
+def uses_repeats(state: States, rules: Rules) -> npt.NDArray[np.bool_]:
+    """Return which streams learn how often amounts repeat, or watch it."""
+    learning = np.any(state["reference"] == UNDECIDED, axis=1)
+    return np.asarray(learning | (rules.joint[:, bank.REPEATS] > 0))
+
+
 def _membership(
-    state: States, rules: Rules, part: Rows
+    state: States, rules: Rules, part: Rows, repeats: npt.NDArray[np.bool_] | None
 ) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.bool_]]:
-    """Return which rows each joint detector sees, and which are in its cells, (6, n) each."""
+    """Return which rows each joint detector sees, and which are in its cells, (7, n) each."""
     cell = part.cell[list(bank.RARE_VIEWS)]
     rare = (cell >= 0) & (state["rare"][part.slot, np.maximum(cell, 0)] > 0)
     below = below_limits(rules, part)
-    seen = np.concatenate([cell >= 0, np.ones_like(below)])
-    return seen, np.concatenate([rare, below])
+    again = np.zeros((1, len(part.slot)), bool) if repeats is None else repeats[None]
+    seen = np.concatenate([cell >= 0, np.ones_like(again), np.ones_like(below)])
+    return seen, np.concatenate([rare, again, below])
 
 
 def _cusum(

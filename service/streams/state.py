@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.bank import JOINT, LIMITS, SHAPES
+from service.detection.bank import JOINT, LIMITS, REACH, SHAPES
 from service.detection.cells import CELLS, VIEW_OF_CELL
 from service.digits.significand import IntArray
 
@@ -23,6 +23,9 @@ UNDECIDED, BY_LAW, BY_OWN = 0, 1, 2
 
 REFUTED_BY_CIRCLE, REFUTED_BY_CELL, REFUTED_BY_BANK, TOO_FEW = 1, 2, 4, 8
 """Why the law was not accepted for a view."""
+
+REPEAT_CELL = CELLS
+"""Pseudo-cell of baseline blocks: amounts that repeat one of the few before them."""
 
 NO_VIEW = 3
 """Stands for a view that sees every amount above zero: the limits'."""
@@ -47,6 +50,8 @@ STATE = np.dtype(
         ("shape_cusum", "<f8", SHAPES),
         ("shape_onset", "<i8", SHAPES),
         ("shape_onset_at", "<i8", SHAPES),  # event time of the row before it
+        ("recent", "<i8", REACH),  # ring of the last amounts
+        ("recent_rows", "<i8"),  # rows that went into it
         ("joint_value", "<f8", (JOINT, 2)),  # of the joint detectors, by contamination
         ("joint_cusum", "<f8", JOINT),
         ("joint_onset", "<i8", JOINT),
@@ -77,6 +82,7 @@ STATE = np.dtype(
         ("excepted", "<f4", CELLS),  # bounds of single cells though the law was accepted, else 0
         ("rare", "u1", CELLS),  # cells hardly used in the baseline
         ("joint_bound", "<f4", JOINT),  # of joint shares; 0 before there is a baseline
+        ("repeat_share", "<f8"),  # of the baseline's amounts
         ("limits", "<u8"),  # fingerprint of the review limits in force, 0 for none
         ("limit_rows", "<i8"),  # rows from which the bounds of the limits are learned
         ("limit_first_at", "<i8"),

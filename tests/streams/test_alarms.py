@@ -209,6 +209,13 @@ def shape(**changes) -> Finding:
     return finding(**{**values, **changes})
 
 
+def test_repeated_amounts_in_words() -> None:
+    found = finding(view="repeat", cells=("3720", "5860"), reference="own", bound=0.02)
+    text = said(found, excess=None, excess_amount=None)
+    assert "31 % of the amounts repeat one of the 64 before them exactly" in text
+    assert "such as 37.20 EUR and 58.60 EUR, where at most 2 % is expected" in text
+
+
 def test_shapes_in_words() -> None:
     assert said(shape()) == (
         "Since 09:14 UTC on 30 November 2026, the first two digits of the amounts are spread more "

@@ -290,7 +290,7 @@ def test_amounts_just_below_a_review_limit_are_a_cell_of_their_own() -> None:
     learned = int(state["limit_rows"])
     inside = (amounts[:learned] >= 900_000) & (amounts[:learned] < 1_000_000)
     assert state["limit_base"].tolist() == [inside.sum(), 0, 0, 0]
-    assert state["joint_bound"][2] > inside.mean()
+    assert state["joint_bound"][3] > inside.mean()
     first = crossings[0]
     assert change < first.rows < change + 120
     found = {f.view: f for f in first.findings}["limit"]
@@ -302,6 +302,34 @@ def test_amounts_just_below_a_review_limit_are_a_cell_of_their_own() -> None:
     without = run([records(amounts, at=at)], {1: Policy(reference="own")})[1]
     assert all(f.view != "limit" for c in without for f in c.findings)
     assert not without or without[0].rows > first.rows
+
+
+def test_fixed_amounts_that_come_again_and_again_are_found_sooner() -> None:
+    rng = np.random.default_rng(14)
+    n, change = 3000, 2000
+    at = START + np.arange(n) * 15 * 60_000
+    amounts = law_amounts(rng, n, 3, 7)
+    bad = (np.arange(n) >= change) & (rng.random(n) < 0.3)
+    amounts[bad] = rng.choice([3720, 5860], bad.sum())
+    folded, crossings = run([records(amounts, at=at)], {1: Policy()})
+    state = folded.state[0]
+    learned = int(state["base_rows"])
+    before = [a in amounts[max(i - 64, 0) : i] for i, a in enumerate(amounts[:learned])]
+    assert state["repeat_share"] == pytest.approx(np.mean(before))
+    assert np.mean(before) < state["joint_bound"][2] < 0.2
+    np.testing.assert_array_equal(state["recent"], [amounts[i : i + 64][0] for i in ring_order(n)])
+    first = crossings[0]
+    assert change < first.rows < change + 60
+    found = {f.view: f for f in first.findings}["repeat"]
+    assert set(found.cells[:2]) == {"3720", "5860"}
+    since = range(found.onset_row - 1, first.rows)
+    again = [amounts[i] in amounts[i - 64 : i] for i in since]
+    assert found.observed == pytest.approx(np.mean(again), abs=1e-12)
+
+
+def ring_order(rows: int) -> list[int]:
+    """Row (from 0) of each place of a ring that the last 64 of so many rows went into."""
+    return [rows - 1 - (rows - 1 - place) % 64 for place in range(64)]
 
 
 def test_new_limits_are_learned_anew() -> None:
@@ -316,12 +344,12 @@ def test_new_limits_are_learned_anew() -> None:
     folded, _ = run([records(law_amounts(rng, n, 4, 8), at=at, policy=versions)], policies)
     state = folded.state[0]
     assert state["limit_rows"] == 1000
-    assert 0 < state["joint_bound"][2] < 1
-    np.testing.assert_array_equal(state["joint_bound"][3:], 1)  # no limits there
+    assert 0 < state["joint_bound"][3] < 1
+    np.testing.assert_array_equal(state["joint_bound"][4:], 1)  # no limits there
     halfway, _ = run(
         [records(law_amounts(rng, 2000, 4, 8), at=at[:2000], policy=versions[:2000])], policies
     )
-    assert halfway.state["joint_bound"][0, 2] == 0
+    assert halfway.state["joint_bound"][0, 3] == 0
     assert halfway.state["limit_rows"][0] == 800
 
 
