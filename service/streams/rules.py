@@ -153,6 +153,7 @@ def refresh(
     rules.threshold[slots] = policy.transactions_per_false_alarm
     rules.watching[slots] = [policy.watches(kinds[s].flow) for s in slots.tolist()]
     rules.active[slots], rules.shapes[slots], rules.joint[slots] = weights(state, slots, policy)
+    rules.low[slots] = rules.high[slots] = 0
     if policy.limits:
         for s in slots.tolist():
             for place, limit in enumerate(policy.limits_in(kinds[s].currency)):

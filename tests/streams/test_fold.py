@@ -353,6 +353,23 @@ def test_new_limits_are_learned_anew() -> None:
     assert halfway.state["limit_rows"][0] == 800
 
 
+def test_limits_that_a_policy_dropped_leave_nothing_behind_wherever_the_log_is_cut() -> None:
+    rng = np.random.default_rng(15)
+    n, change = 1500, 200
+    policies = {
+        1: Policy(baseline_days=0, limits=(Limit("EUR", 1_000_000), Limit("EUR", 2_000_000))),
+        2: Policy(version=2, baseline_days=0, limits=(Limit("EUR", 1_000_000),)),
+    }
+    versions = np.repeat([1, 2], (change, n - change))
+    log = records(law_amounts(rng, n, 4, 8), policy=versions)
+    whole, _ = run([log], policies)
+    pieces, _ = run([log], policies, cuts=[[change, change + 50]])
+    np.testing.assert_array_equal(whole.state["limit_base"], pieces.state["limit_base"])
+    np.testing.assert_array_equal(whole.state["joint_bound"], pieces.state["joint_bound"])
+    assert whole.state["limit_base"][0, 1] == 0
+    assert whole.state["joint_bound"][0, 4] == 1
+
+
 def test_quiet_flows_are_tallied_but_raise_nothing() -> None:
     folded = Folded.new(1)
     log = records(np.full(500, 4900))
