@@ -14,8 +14,7 @@ import socket
 import stat
 import subprocess
 import sys
-import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
@@ -23,6 +22,7 @@ import redis
 
 from service.settings import Settings
 from service.store.embedded import EmbeddedStore, find_server
+from tests.processes import alive, children, eventually, free_port
 
 APPLICATION = """
 import json, os, time
@@ -61,31 +61,6 @@ except (ServingError, StoreError) as error:
 """
 REPOSITORY = Path(__file__).parents[1]
 KEY = "a-key-of-the-tests-0123456789-0123456789"
-
-
-def free_port() -> int:
-    with socket.socket() as trial:
-        trial.bind(("127.0.0.1", 0))
-        return trial.getsockname()[1]
-
-
-def eventually(holds: Callable[[], object], what: str) -> None:
-    limit = time.monotonic() + 60
-    while not holds():
-        assert time.monotonic() < limit, f"never: {what}"
-        time.sleep(0.01)
-
-
-def alive(pid: int) -> bool:
-    with contextlib.suppress(OSError):
-        return Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()[0] != "Z"
-    return False
-
-
-def children(pid: int) -> list[int]:
-    """Return the children of all its threads."""
-    lists = [file.read_text() for file in Path(f"/proc/{pid}/task").glob("*/children")]
-    return [int(child) for child in " ".join(lists).split()]
 
 
 class Service:

@@ -10,27 +10,16 @@ import signal
 import subprocess
 import sys
 import threading
-import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from service.store.connection import connect
-from tests.test_serve import children, free_port
+from tests.processes import PATIENCE, children, eventually, free_port
 
 REPOSITORY = Path(__file__).parents[2]
 KEY = "the-key-of-these-scenarios-0123456789"
-PATIENCE = 120.0
-"""Seconds after which a service that says nothing is taken for dead; no test measures time."""
-
-
-def eventually(holds: Callable[[], object], what: str) -> None:
-    """Wait until something holds; fail when it never does."""
-    limit = time.monotonic() + PATIENCE
-    while not holds():
-        assert time.monotonic() < limit, f"never: {what}"
-        time.sleep(0.02)
 
 
 @dataclass(frozen=True)

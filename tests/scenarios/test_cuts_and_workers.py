@@ -22,10 +22,11 @@ from service.streams.record import HEADER, Records, Stream
 from service.streams.rules import Kind
 from service.streams.state import Folded
 from service.tallies import Tallies
+from tests.processes import eventually
 from tests.scenarios import oracle
 from tests.scenarios.aof import whole_logs
 from tests.scenarios.conftest import Business
-from tests.scenarios.running import Service, eventually
+from tests.scenarios.running import Service
 from tests.scenarios.together import run_together
 
 TENANT = "main"

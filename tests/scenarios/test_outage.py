@@ -16,7 +16,8 @@ import pytest
 
 from service.store.catalogue import FRESH_SECONDS
 from service.store.script import APPEND
-from tests.scenarios.running import Answer, Service, StoreServer, eventually, serving
+from tests.processes import eventually
+from tests.scenarios.running import Answer, Service, StoreServer, serving
 from tests.store.line import BadLine
 
 Row = dict[str, Any]

@@ -18,8 +18,8 @@ from typing import Any
 
 import pytest
 
+from tests.processes import free_port
 from tests.scenarios.running import REPOSITORY
-from tests.test_serve import free_port
 
 README = (REPOSITORY / "README.md").read_text(encoding="utf-8")
 MARK = "---- end of a command ----"

@@ -10,7 +10,7 @@ import subprocess
 import sys
 import threading
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
@@ -18,6 +18,7 @@ import redis
 
 from service.store.embedded import LONGEST_SOCKET_PATH, EmbeddedStore, find_server
 from service.store.errors import StoreError
+from tests.processes import alive, eventually
 
 PARENT = """
 import sys, time
@@ -48,20 +49,6 @@ def other_service(data: Path, binary: Path) -> Iterator[tuple[subprocess.Popen[s
         process.kill()
         process.wait()
         process.stdout.close()
-
-
-def eventually(holds: Callable[[], object], what: str) -> None:
-    """Wait for something another process does; the limit only ends a hopeless wait."""
-    limit = time.monotonic() + 60
-    while not holds():
-        assert time.monotonic() < limit, f"never: {what}"
-        time.sleep(0.01)
-
-
-def alive(pid: int) -> bool:
-    with contextlib.suppress(OSError):
-        return Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()[0] != "Z"
-    return False
 
 
 def mode(path: Path) -> int:
