@@ -53,7 +53,22 @@ class Band(Answer):
     source = fields.String(required=True, metadata=said("Where the cut-offs were published."))
 
 
-class Measures(Answer):
+class MisfitInterval(Answer):
+    """The 95 % interval of a misfit."""
+
+    misfit_low = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Lower end of its 95 % interval.", minimum=0, maximum=1),
+    )
+    misfit_high = Number(
+        required=True,
+        allow_none=True,
+        metadata=said("Upper end of its 95 % interval.", minimum=0, maximum=1),
+    )
+
+
+class Measures(MisfitInterval):
     """Every measure of one view against its law."""
 
     count = Whole(required=True, metadata=said("Amounts that the view sees.", minimum=0))
@@ -65,16 +80,6 @@ class Measures(Answer):
             minimum=0,
             maximum=1,
         ),
-    )
-    misfit_low = Number(
-        required=True,
-        allow_none=True,
-        metadata=said("Lower end of its 95 % interval.", minimum=0, maximum=1),
-    )
-    misfit_high = Number(
-        required=True,
-        allow_none=True,
-        metadata=said("Upper end of its 95 % interval.", minimum=0, maximum=1),
     )
     band = fields.Nested(
         Band,

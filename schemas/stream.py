@@ -6,11 +6,11 @@ from marshmallow import fields
 
 from schemas import words
 from schemas.base import Answer, Flag, Number, Whole, said
-from schemas.measures import ONE_LOOK, Band, Circle, LargestZ, SingleLook
+from schemas.measures import ONE_LOOK, Band, Circle, LargestZ, MisfitInterval, SingleLook
 from schemas.merchant import Entry, Listed
 
 
-class ViewDetail(Answer):
+class ViewDetail(MisfitInterval):
     """One view of a stream: what it is compared with, and how far it is from it."""
 
     span = words.span(required=True)
@@ -20,16 +20,6 @@ class ViewDetail(Answer):
         required=True,
         allow_none=True,
         metadata=said("Share that would have to differ, noise removed.", minimum=0, maximum=1),
-    )
-    misfit_low = Number(
-        required=True,
-        allow_none=True,
-        metadata=said("Lower end of its 95 % interval.", minimum=0, maximum=1),
-    )
-    misfit_high = Number(
-        required=True,
-        allow_none=True,
-        metadata=said("Upper end of its 95 % interval.", minimum=0, maximum=1),
     )
     band = fields.Nested(
         Band,
