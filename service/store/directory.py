@@ -82,10 +82,7 @@ class Directory:
             for p in self.logs.partitions
         ]
         out: list[Document] = []
-        for values, flat in checked(run(self.client, groups)):
-            categories = (
-                dict(zip(flat[::2], flat[1::2], strict=True)) if isinstance(flat, list) else flat
-            )
+        for values, categories in checked(run(self.client, groups)):
             for value in values:
                 entry = msgspec.json.decode(value)
                 category = categories.get(entry["merchant"].encode())

@@ -98,9 +98,8 @@ class Stored:
     crossings: list[Document]
 
     @classmethod
-    def read(cls, alarm: str, flat: Any) -> Stored:
+    def read(cls, alarm: str, pairs: dict[bytes, bytes]) -> Stored:
         """Read an alarm's hash."""
-        pairs = flat if isinstance(flat, dict) else dict(zip(flat[::2], flat[1::2], strict=True))
         crossings = {int(k): v for k, v in pairs.items() if k.isdigit()}
         crossings[int(pairs[b"latest_ordinal"])] = pairs[b"latest"]
         cursor = pairs.get(b"cursor")

@@ -15,7 +15,7 @@ from service.digits.views import WATCHED_VIEWS
 from service.streams.findings import LIMIT, REPEAT, Finding, findings
 from service.streams.rows import Rows
 from service.streams.rules import Rules
-from service.streams.state import NO_VIEW, REFUTED_BY_BANK, UNDECIDED, States, restart
+from service.streams.state import NO_VIEW, REFUTED_BY_BANK, States, is_learning, restart
 
 FEW_CROSSINGS = 16
 """Crossings of one alarm that are all told; after them it is looked at every ``PAUSE_ROWS``."""
@@ -119,7 +119,7 @@ def cross(
     s = int(part.slot[i])
     crossing = None
     state["crossed_row"][s] = state["rows"][s]
-    if np.any(state["reference"][s] == UNDECIDED):
+    if is_learning(state[s]):
         _refute(state, rules, s)
     elif rules.watching[s]:
         crossing = _alarm(state, rules, part, i, evidence, names[s])

@@ -16,7 +16,7 @@ from service.streams.fit import fit, window_counts
 from service.streams.in_force import evidence, policy_of
 from service.streams.notation import decimals, moments
 from service.streams.record import Stream
-from service.streams.state import UNDECIDED, Folded, States
+from service.streams.state import Folded, States, is_learning
 
 _LEAD_DIGIT_VIEW = 0
 _CELLS = LEAD_DIGIT.stop - LEAD_DIGIT.start
@@ -63,7 +63,7 @@ def spans(folded: Folded, policies: Mapping[int, Policy], now: int) -> Spans:
 
 def standings(state: States) -> list[str]:
     """Return ``alarmed`` for an open alarm, else ``learning`` or ``steady``."""
-    learning = np.any(state["reference"] == UNDECIDED, axis=1)
+    learning = is_learning(state)
     names = np.where(learning, "learning", "steady")
     standing: list[str] = np.where(state["alarm"] != b"", "alarmed", names).tolist()
     return standing

@@ -8,6 +8,7 @@ every detector after every row, applies what was taken, handles the events, and 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -22,7 +23,8 @@ from service.streams.repeats import remember
 from service.streams.rows import Rows, columns
 from service.streams.rules import Kind, Rules, adopt, refresh
 from service.streams.running import Cells, Joint, Running, Shapes, evaluate, uses_repeats
-from service.streams.state import UNDECIDED, Folded, States
+from service.streams.runs import opens_run, place_in_run
+from service.streams.state import Folded, States, is_learning
 from service.streams.window import tally
 
 PASS_ROWS = 2 * PAUSE_ROWS
@@ -140,7 +142,7 @@ def _apply(
     n = len(state)
     rows = np.flatnonzero(consumed)
     slot = part.slot[rows]
-    starts = np.flatnonzero(np.concatenate([[True], slot[1:] != slot[:-1]]))
+    starts = np.flatnonzero(opens_run(slot))
     last = rows[np.concatenate([starts[1:] - 1, [len(rows) - 1]])]
     streams = part.slot[last]
     number = _row_numbers(state, part)
@@ -166,18 +168,17 @@ def _apply(
 
 def _row_numbers(state: States, part: Rows) -> IntArray:
     """Return each row's number among its stream's rows with an amount, from 1."""
-    rank = np.arange(len(part.slot)) - np.searchsorted(part.slot, part.slot)
-    return np.asarray(state["rows"][part.slot] + rank + 1)
+    return np.asarray(state["rows"][part.slot] + place_in_run(part.slot) + 1)
 
 
 def _compare_neighbours(state: States, part: Rows, rows: IntArray) -> None:
     """Count how often a row has the lead pair of the one before, in streams that have learned."""
-    learned = np.all(state["reference"] != UNDECIDED, axis=1)
+    learned = ~is_learning(state)
     seen = rows[(part.cell[1, rows] >= 0) & learned[part.slot[rows]]]
     if not seen.size:
         return
     slot, pair = part.slot[seen], part.cell[1, seen]
-    first = np.concatenate([[True], slot[1:] != slot[:-1]])
+    first = opens_run(slot)
     before = np.where(first, state["neighbour"][slot], np.roll(pair, 1))
     n = len(state)
     state["neighbours"] += np.bincount(slot[before > 0], minlength=n)
@@ -197,13 +198,7 @@ def _apply_shapes(
     state["shape"][streams] = shapes.value[:, last].T
     state["shape_cusum"][streams] = shapes.cusum[:, last].T
     rest = shapes.rest[:, last].T
-    rested = rest >= 0
-    state["shape_onset"][streams] = np.where(
-        rested, number[rest] + 1, state["shape_onset"][streams]
-    )
-    state["shape_onset_at"][streams] = np.where(
-        rested, part.at[rest], state["shape_onset_at"][streams]
-    )
+    _write_onset(state, "shape", streams, part, number, rest)
 
 
 def _apply_joint(
@@ -229,12 +224,17 @@ def _apply_joint(
             state[name][streams, place] = before + so_far[last + 1] - so_far[since + 1]
         state["joint_value"][streams, place] = joint.value[j][:, last].T
         state["joint_cusum"][streams, place] = joint.cusum[j, last]
-        state["joint_onset"][streams, place] = np.where(
-            rested, number[rest] + 1, state["joint_onset"][streams, place]
-        )
-        state["joint_onset_at"][streams, place] = np.where(
-            rested, part.at[rest], state["joint_onset_at"][streams, place]
-        )
+        _write_onset(state, "joint", (streams, place), part, number, rest)
+
+
+def _write_onset(
+    state: States, what: str, where: Any, part: Rows, number: IntArray, rest: IntArray
+) -> None:
+    """Set the onset to the row after the last rest, where there was one in this pass."""
+    rested = rest >= 0
+    onset, onset_at = state[f"{what}_onset"], state[f"{what}_onset_at"]
+    onset[where] = np.where(rested, number[rest] + 1, onset[where])
+    onset_at[where] = np.where(rested, part.at[rest], onset_at[where])
 
 
 def _apply_cells(

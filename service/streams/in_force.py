@@ -11,7 +11,7 @@ from service.detection import bank
 from service.detection.policy import Policy
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED_VIEWS
-from service.streams.state import BY_OWN, REFUTED_BY_BANK, UNDECIDED, States
+from service.streams.state import BY_OWN, REFUTED_BY_BANK, States, is_learning
 
 JOINT_AT_MOST = 0.5
 """A joint bound above this leaves nothing to be found."""
@@ -61,7 +61,7 @@ def weights(state: States, slots: IntArray, policy: Policy) -> Weights:
     slots : int64 array (n,)
     policy : Policy
     """
-    learning = np.any(state["reference"][slots] == UNDECIDED, axis=1)
+    learning = is_learning(state)[slots]
     silenced = learning[:, None] & ((state["refuted"][slots] & REFUTED_BY_BANK) > 0)
     active = np.array([view in policy.views for view in WATCHED_VIEWS]) & ~silenced
     counts = np.isfinite(state["shape_scale"][slots]) & active[:, _LEAD_PAIR, None]

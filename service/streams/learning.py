@@ -28,6 +28,7 @@ from service.streams.rules import (
     below_limits,
     choose_references,
 )
+from service.streams.runs import opens_run, place_in_run
 from service.streams.state import (
     HOUR_BLOCK,
     REFUTED_BY_CELL,
@@ -35,11 +36,11 @@ from service.streams.state import (
     REPEAT_CELL,
     RUN_BLOCK,
     TOO_FEW,
-    UNDECIDED,
     WEEKDAY_BLOCK,
     Buckets,
     Folded,
     States,
+    is_learning,
     restart,
 )
 from service.streams.window import counted
@@ -59,7 +60,7 @@ def until_complete(state: States, rules: Rules, part: Rows) -> tuple[Rows, IntAr
     complete = _completes(
         part,
         rules,
-        learns_baseline(state),
+        is_learning(state),
         state["base_rows"],
         state["base_first_at"],
         state["base_last_at"],
@@ -77,11 +78,6 @@ def until_complete(state: States, rules: Rules, part: Rows) -> tuple[Rows, IntAr
     done_before: IntArray = np.cumsum(complete) - complete
     kept = np.flatnonzero(done_before == done_before[first])
     return part.take(kept), np.flatnonzero(complete[kept])
-
-
-def learns_baseline(state: States) -> npt.NDArray[np.bool_]:
-    """Return which streams still learn their baseline."""
-    return np.asarray(np.any(state["reference"] == UNDECIDED, axis=-1))
 
 
 def learns_limits(state: States) -> npt.NDArray[np.bool_]:
@@ -103,16 +99,15 @@ def _completes(
     learns = learning[slot]
     if not learns.any():
         return np.zeros(len(slot), bool)
-    index = np.arange(len(slot))
-    first = np.searchsorted(slot, slot)
+    place = place_in_run(slot)
     known = rows[slot] > 0
     low = np.where(known, np.minimum(part.at, first_at[slot]), part.at)
     high = np.where(known, np.maximum(part.at, last_at[slot]), part.at)
     # one scan for all streams: each is lifted above the one before
-    lift = np.cumsum(index == first) * (int(high.max()) - int(low.min()) + 1)
+    lift = np.cumsum(place == 0) * (int(high.max()) - int(low.min()) + 1)
     oldest = np.minimum.accumulate(low - lift) + lift
     newest = np.maximum.accumulate(high + lift) - lift
-    enough = rows[slot] + index - first + 1 >= rules.size[slot]
+    enough = rows[slot] + place + 1 >= rules.size[slot]
     return np.asarray(learns & enough & (newest - oldest >= rules.span[slot]))
 
 
@@ -136,7 +131,7 @@ def learn(
         Rows of ``part`` whose amount was there a moment before; None only if no stream learns.
     """
     state = folded.state
-    learning = learns_baseline(state)
+    learning = is_learning(state)
     if not learning[streams].any():
         return
     slot = part.slot[rows]
@@ -148,8 +143,7 @@ def learn(
     _widen(state, "base", pupils, low, high)
     sums = np.add.reduceat(part.wave[:4][:, rows], starts, axis=1).T
     state["base_circle"][pupils] += sums[which]
-    rank = np.arange(len(slot)) - np.searchsorted(slot, slot)
-    position = state["base_rows"][slot] + rank
+    position = state["base_rows"][slot] + place_in_run(slot)
     grown = state["base_rows"] + np.bincount(slot, minlength=len(state)) * learning
     _pair_up(folded, pupils, grown)
     mine = learning[slot]
@@ -173,7 +167,7 @@ def learn_limits(state: States, rules: Rules, part: Rows, rows: IntArray) -> Non
     if not mine.size:
         return
     part = part.take(mine)
-    starts = np.flatnonzero(np.concatenate([[True], part.slot[1:] != part.slot[:-1]]))
+    starts = np.flatnonzero(opens_run(part.slot))
     pupils = part.slot[starts]
     low, high = np.minimum.reduceat(part.at, starts), np.maximum.reduceat(part.at, starts)
     _widen(state, "limit", pupils, low, high)
@@ -225,7 +219,7 @@ def decide(folded: Folded, s: int, policy: Policy, rules: Rules, at: int) -> Non
         )
         named = rules.high[s] > 0  # places without a limit get the bound that finds nothing
         state["joint_bound"][s, LIMIT_DETECTORS] = rounded_up(np.where(named, upper, 1.0))
-    if learns_baseline(state[s]) and _is_long(state[s], "base", policy):
+    if is_learning(state[s]) and _is_long(state[s], "base", policy):
         _decide_references(folded, s, policy, alpha)
         state["crossings"][s] = 0
         state["decided_row"][s] = state["rows"][s]

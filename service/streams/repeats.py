@@ -8,6 +8,7 @@ import numpy.typing as npt
 from service.detection.bank import REACH
 from service.digits.significand import IntArray
 from service.streams.rows import Rows
+from service.streams.runs import opens_run, place_in_run
 from service.streams.state import States
 
 
@@ -17,7 +18,7 @@ def repeated(state: States, part: Rows) -> npt.NDArray[np.bool_]:
     The stream's last amounts lie in a ring, as of the row before its first one here.
     """
     n = len(part.slot)
-    first = np.concatenate([[True], part.slot[1:] != part.slot[:-1]])
+    first = opens_run(part.slot)
     segment = np.cumsum(first) - 1
     streams = part.slot[first]
     opening = np.flatnonzero(first) + REACH * np.arange(len(streams))
@@ -37,7 +38,7 @@ def remember(state: States, part: Rows, rows: IntArray, uses: npt.NDArray[np.boo
         return
     slot = part.slot[rows]
     count = np.bincount(slot, minlength=len(state))
-    rank = np.arange(len(slot)) - np.searchsorted(slot, slot)
+    rank = place_in_run(slot)
     last = rank >= count[slot] - REACH
     place = (state["recent_rows"][slot] + rank) % REACH
     state["recent"][slot[last], place[last]] = part.amount[rows[last]]

@@ -11,6 +11,7 @@ from service.digits.significand import FloatArray, IntArray, circle
 from service.digits.views import cells_hit
 from service.streams import record
 from service.streams.record import Records
+from service.streams.runs import place_in_run
 from service.streams.state import States
 
 
@@ -46,13 +47,12 @@ class Rows:
 
 def columns(state: States, records: Records, slot: IntArray) -> Rows:
     """Read the records into columns; row numbers go on from what was folded before."""
-    first = np.searchsorted(slot, slot)
     amount = records["amount"].astype(np.int64)
     turn = 2 * np.pi * circle(np.maximum(amount, 1))
     log = np.log10(np.maximum(amount, 1).astype(np.float64))
     return Rows(
         slot=slot,
-        number=state["records"][slot] + np.arange(len(slot)) - first,
+        number=state["records"][slot] + place_in_run(slot),
         policy=records["policy"].astype(np.int64),
         amount=amount,
         at=record.at(records),

@@ -15,7 +15,8 @@ from service.digits.views import LEAD_PAIR
 from service.streams.repeats import repeated
 from service.streams.rows import Rows
 from service.streams.rules import JOINT_VIEWS, Rules, below_limits, bounds
-from service.streams.state import BY_OWN, UNDECIDED, States
+from service.streams.runs import opens_run
+from service.streams.state import BY_OWN, States, is_learning
 
 _EPS = bank.EPSILONS[:, None]
 _KEEP = bank.RETAINED[:, None]
@@ -90,7 +91,6 @@ class Joint:
     """
 
     place: list[int]
-
     value: FloatArray
     cusum: FloatArray
     rest: IntArray
@@ -136,7 +136,7 @@ def evaluate(state: States, rules: Rules, part: Rows) -> Running:
         n > 0 rows, sorted by stream.
     """
     n = len(part.slot)
-    first = np.concatenate([[True], part.slot[1:] != part.slot[:-1]])
+    first = opens_run(part.slot)
     begin = np.maximum.accumulate(np.where(first, np.arange(n), 0))
     longest = int((np.arange(n) - begin).max()) + 1
     cells = _cells(state, rules, part, begin)
@@ -173,7 +173,7 @@ def _cells(state: States, rules: Rules, part: Rows, begin: IntArray) -> Cells:
     row, cell, key = row[order], cell[order], key[order]
     at_hit = clock[VIEW_OF_CELL[cell], row]
     hits = np.arange(len(key))
-    first = np.concatenate([[True], key[1:] != key[:-1]])
+    first = opens_run(key)
     longest = int((hits - np.maximum.accumulate(np.where(first, hits, 0))).max()) + 1
     opening = np.flatnonzero(first)
     at_opening = part.slot[row[opening]], cell[opening]
@@ -295,8 +295,7 @@ def _joint(
 
 def uses_repeats(state: States, rules: Rules) -> npt.NDArray[np.bool_]:
     """Return which streams learn how often amounts repeat, or watch it."""
-    learning = np.any(state["reference"] == UNDECIDED, axis=1)
-    return np.asarray(learning | (rules.joint[:, bank.REPEATS] > 0))
+    return np.asarray(is_learning(state) | (rules.joint[:, bank.REPEATS] > 0))
 
 
 def _membership(

@@ -15,6 +15,7 @@ import numpy.typing as npt
 from service.detection.bank import JOINT, LIMITS, REACH, SHAPES
 from service.detection.cells import CELLS, VIEW_OF_CELL
 from service.digits.significand import IntArray
+from service.streams.runs import opens_run
 
 FORMAT = 1
 
@@ -190,7 +191,7 @@ def _merged(key: IntArray, count: IntArray) -> Buckets:
         return Buckets(key, count)
     order = np.argsort(key, kind="stable")
     key, count = key[order], count[order]
-    first = np.flatnonzero(np.concatenate([[True], key[1:] != key[:-1]]))
+    first = np.flatnonzero(opens_run(key))
     return Buckets(key[first], np.add.reduceat(count, first))
 
 
@@ -304,6 +305,11 @@ def read_snapshots(snapshots: Sequence[bytes | None]) -> tuple[Folded, IntArray]
     )
     generation[slots] = header["generation"]
     return folded, generation
+
+
+def is_learning(state: States) -> npt.NDArray[np.bool_]:
+    """Return which streams still learn their baseline; for one record, whether it does."""
+    return np.asarray(np.any(state["reference"] == UNDECIDED, axis=-1))
 
 
 def restart(state: States, s: int, at: int) -> None:

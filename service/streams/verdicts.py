@@ -23,8 +23,8 @@ from service.streams.state import (
     REFUTED_BY_CELL,
     REFUTED_BY_CIRCLE,
     TOO_FEW,
-    UNDECIDED,
     States,
+    is_learning,
 )
 
 WEEK_DAYS = 7
@@ -90,7 +90,7 @@ def law_applies(state: States, policy: Policy) -> dict[str, str]:
     if learned(state):
         tails = int(state["base"][TAIL_PAIR].sum())
         return _judged(state["refuted"], int(state["base_rows"]), tails, "baseline's")
-    if not np.any(state["reference"] == UNDECIDED):  # the policy takes the law for granted
+    if not is_learning(state):  # the policy takes the law for granted
         tails = int(state["clock"][_TAIL])
         return _judged(_refuted_now(state, policy), int(state["rows"]), tails, "stream's")
     if np.any(state["refuted"][:_TAIL] & REFUTED_BY_BANK):
@@ -129,7 +129,7 @@ def guarantee(state: States, policy: Policy, stream: Stream) -> dict[str, str]:
     views = [v for v, name in enumerate(WATCHED_VIEWS) if name in policy.views]
     if not views:
         return {"status": "void", "reason": "The policy watches no view, so nothing raises alarms."}
-    if np.any(state["reference"] == UNDECIDED):
+    if is_learning(state):
         reason = (
             "Nothing raises alarms yet: what is ordinary for this merchant is being learned, "
             f"{progress(state, policy)} so far."
