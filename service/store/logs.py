@@ -6,6 +6,7 @@ import os
 import threading
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import msgspec
@@ -19,7 +20,7 @@ from service.digits.significand import IntArray
 from service.store.errors import Unavailable, surely_not_applied
 from service.store.keys import Partition, partition_of, path
 from service.store.script import APPEND, COMPACT, Command, first_error, run
-from service.streams.record import HISTORIC, RECORD, ROW, Records
+from service.streams.record import FORMAT, HEADER, HISTORIC, RECORD, ROW, Records
 
 EVIDENCE_ROWS = 128
 """Folded rows that a log keeps as evidence."""
@@ -31,32 +32,88 @@ _PLACE = np.dtype([("source", "<u2"), ("offset", "<f8")])
 _TEMPORARY_MS = 60_000
 
 
+_STREAM = np.dtype(
+    [
+        ("rows", "<u4"),
+        ("ids", "<u4"),  # bytes
+        ("incarnation", "<u8"),
+        ("kept_incarnation", "<u8"),
+        ("kept_records", "<i8"),
+    ]
+)
+_HEAD = np.dtype(
+    [
+        ("first", "<i8"),
+        ("rows", "<i8"),
+        ("folded", "<i8"),
+        ("incarnation", "<u8"),
+        ("generation", "<u4"),
+        ("status", "<u4"),
+    ]
+)
+_COLD, _NEW, _KEPT = 0, 1, 2
+
+
+@dataclass(frozen=True)
+class Known:
+    """What a worker keeps of the streams of a batch, all arrays by stream.
+
+    Attributes
+    ----------
+    incarnation : uint64 array
+        0 where nothing is kept.
+    records : int64 array
+        Log records folded.
+    era : int64 array
+        `Appended.era` when it was kept.
+    """
+
+    incarnation: npt.NDArray[np.uint64]
+    records: IntArray
+    era: IntArray
+
+
 @dataclass(frozen=True)
 class Call:
-    """The part of a batch that goes to one partition.
+    """A part of a batch that goes to one partition.
 
     Attributes
     ----------
     partition : Partition
     token : bytes
         Random name of the call; the partition answers a second try of it as the first.
-    streams : list of int
+    streams : int64 array
         Indices into the batch's streams.
     paths : list of str
     rows : int64 array (m,)
         Indices into the batch's rows, grouped by stream in the order of ``streams``.
-    per_stream : int64 array
-        Rows of each stream.
-    commands : list of Command
+    records : array of RECORD (m,)
+        As they go to the logs.
+    known : int64 array
+        By stream: records that the worker has folded.
+    command : Command
     """
 
     partition: Partition
     token: bytes
-    streams: list[int]
+    streams: IntArray
     paths: list[str]
     rows: IntArray
-    per_stream: IntArray
-    commands: list[Command]
+    records: Records
+    known: IntArray
+    command: Command
+
+
+@dataclass(frozen=True)
+class Place:
+    """A stream in the store, as it was folded.
+
+    ``version`` is its log's generation and incarnation, 12 bytes as in the header.
+    """
+
+    path: str
+    partition: Partition
+    version: bytes
 
 
 @dataclass(frozen=True)
@@ -68,27 +125,78 @@ class Blobs:
     snapshot: bytes | None
     log: bytes | None
 
+    @property
+    def version(self) -> bytes:
+        """Generation and incarnation of the log."""
+        return (self.log or b"")[4:16]
+
 
 @dataclass
 class Appended:
     """Outcome of appending a batch.
 
+    A stream is *kept* where the worker's own state can go on, *new* where there was no log, and
+    *cold* otherwise. Arrays are by stream of the batch where nothing else is said.
+
     Attributes
     ----------
     taken : bool array (n,)
         Rows that are new, in the order of the batch.
-    first : int64 array (streams,)
+    first : int64 array
         Row number of each stream's first new row in its log, -1 for none.
-    blobs : list of Blobs, by stream of the batch
-        Read right after the append.
-    count : int64 array (streams,)
-        New rows of each stream.
+    count : int64 array
+        New rows.
+    incarnation : uint64 array
+    generation : int64 array
+        Compactions of the log so far.
+    folded : int64 array
+        Row number up to which the stored snapshot holds the stream.
+    start : int64 array
+        Row number of the first of ``records``: as known for a kept stream, 0 for a new one, -1
+        for a cold one.
+    records : array of RECORD (m,)
+        Of kept and new streams: what the worker has not folded, others' rows first and then the
+        taken ones of this batch.
+    slot : int64 array (m,)
+        Stream of each record, ascending.
+    cold : dict of int to Blobs
+        Snapshot and log of each cold stream, right after the append.
+    era : int64 array
+        Era of the stream's partition; belongs to what is kept from now on. States of an earlier
+        era are void, whatever their row numbers.
+    may_keep : bool array
+        Whether the state folded from this may be kept.
     """
 
     taken: npt.NDArray[np.bool_]
     first: IntArray
     count: IntArray
-    blobs: list[Blobs]
+    incarnation: npt.NDArray[np.uint64]
+    generation: IntArray
+    folded: IntArray
+    start: IntArray
+    records: Records
+    slot: IntArray
+    cold: dict[int, Blobs]
+    era: IntArray
+    may_keep: npt.NDArray[np.bool_]
+    calls: Sequence[Call]
+
+    @property
+    def blobs(self) -> list[Blobs]:
+        """Return what the store holds of all streams; none of them may be a kept one."""
+        out = dict(self.cold)
+        edges = np.searchsorted(self.slot, np.arange(len(self.first) + 1)).tolist()
+        for call in self.calls:
+            for i, name in zip(call.streams.tolist(), call.paths, strict=True):
+                if i in out:
+                    continue
+                assert self.start[i] == 0
+                header = np.zeros(1, HEADER)
+                header["format"], header["incarnation"] = FORMAT, self.incarnation[i]
+                log = header.tobytes() + self.records[edges[i] : edges[i + 1]].tobytes()
+                out[i] = Blobs(name, call.partition, None, log if self.count[i] else None)
+        return [out[i] for i in range(len(self.first))]
 
 
 def decimals(idents: npt.NDArray[np.uint64]) -> bytes:
@@ -108,12 +216,21 @@ class Logs:
         Number of partitions, fixed in the store.
     horizon_s : int
         Seconds for which ids are remembered at least.
+    call_rows : int
+        Rows after which a partition's part of a batch is cut, between streams, so that no script
+        runs long.
     """
 
-    def __init__(self, client: redis.Redis, partitions: int, horizon_s: int) -> None:
+    def __init__(
+        self, client: redis.Redis, partitions: int, horizon_s: int, call_rows: int = 2000
+    ) -> None:
         self.client = client
         self.partitions = [Partition(i) for i in range(partitions)]
         self.horizon_s = horizon_s
+        self.call_rows = call_rows
+        self._worker = os.urandom(8).hex()
+        self._last = [b""] * partitions  # name under which our previous call is remembered
+        self._era = np.zeros(partitions, np.int64)
         self._judged: dict[int, list[bytes]] = {i: [] for i in range(partitions)}
         self._lock = threading.Lock()
 
@@ -122,9 +239,18 @@ class Logs:
         return self.partitions[partition_of(tenant, merchant, len(self.partitions))]
 
     def calls(
-        self, tenant: str, batch: Batch, versions: Sequence[int], *, now: int, historic: bool
+        self,
+        tenant: str,
+        batch: Batch,
+        versions: Sequence[int],
+        *,
+        now: int,
+        historic: bool,
+        known: Known | None = None,
     ) -> list[Call]:
-        """Pack a batch into one call a partition.
+        """Pack a batch into calls, several for a partition that gets many rows.
+
+        What is known counts only if nothing else is packed before these calls are appended.
 
         Parameters
         ----------
@@ -132,67 +258,82 @@ class Logs:
             Policy version in force, by stream of the batch.
         now : int
             Arrival, ms since 1970 UTC.
+        known : Known, optional
+            States that the worker keeps.
         """
-        home = np.array(
-            [partition_of(tenant, s.merchant, len(self.partitions)) for s in batch.streams],
-            dtype=np.int64,
+        n = len(batch.streams)
+        home = np.fromiter(
+            (partition_of(tenant, s.merchant, len(self.partitions)) for s in batch.streams),
+            np.int64,
+            n,
         )
         by_home = np.argsort(home, kind="stable")
-        rank = np.empty(len(home), np.int64)
-        rank[by_home] = np.arange(len(home))
+        rank = np.empty(n, np.int64)
+        rank[by_home] = np.arange(n)
         order = np.argsort(rank[batch.stream], kind="stable")
         records = _records(batch, np.asarray(versions), order, now, historic)
-        per_stream = np.bincount(rank[batch.stream], minlength=len(home))
         texts = [_counted(batch.ids[i]) for i in order.tolist()]
-        sizes = np.add.reduceat(
-            np.fromiter(map(len, texts), np.int64, len(texts)),
-            np.concatenate([[0], np.cumsum(per_stream)[:-1]]),
-        )
-        out = []
-        edges = np.searchsorted(home[by_home], np.arange(len(self.partitions) + 1))
-        row_edges = np.concatenate([[0], np.cumsum(per_stream)])
-        for p in np.unique(home).tolist():
-            a, b = int(edges[p]), int(edges[p + 1])
-            ra, rb = int(row_edges[a]), int(row_edges[b])
-            rows = order[ra:rb]
-            streams = by_home[a:b].tolist()
-            paths = [path(tenant, batch.streams[i]) for i in streams]
+        streams = np.zeros(n, _STREAM)
+        streams["rows"] = np.bincount(rank[batch.stream], minlength=n)
+        edges = np.concatenate([[0], np.cumsum(streams["rows"].astype(np.int64))])
+        sizes = np.fromiter(map(len, texts), np.int64, len(texts))
+        streams["ids"] = np.add.reduceat(sizes, edges[:-1])
+        streams["incarnation"] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
+        if known is not None:
+            current = known.era == self._era[home]
+            streams["kept_incarnation"] = np.where(current, known.incarnation, 0)[by_home]
+            streams["kept_records"] = known.records[by_home]
+        sources = msgspec.msgpack.encode(batch.sources)
+        out: list[Call] = []
+        for a, b in pairwise(self._cuts(home[by_home], edges)):
+            p = int(home[by_home[a]])
             partition = self.partitions[p]
+            follows = bool(out) and out[-1].partition == partition
+            rows = slice(int(edges[a]), int(edges[b]))
+            paths = [path(tenant, batch.streams[i]) for i in by_home[a:b].tolist()]
             token = os.urandom(16)
-            counts = np.zeros(b - a, [("rows", "<u4"), ("ids", "<u4"), ("incarnation", "S8")])
-            counts["rows"], counts["ids"] = per_stream[a:b], sizes[a:b]
-            entropy = np.frombuffer(os.urandom(8 * (b - a)), np.uint8).reshape(-1, 8) | 1
-            counts["incarnation"] = entropy.view("S8").reshape(-1)
-            append = APPEND.call(
+            command = APPEND.call(
                 [partition.log(name) for name in paths],
                 [
                     partition.tag,
                     token,
                     self._take_judged(p),
-                    counts.tobytes(),
-                    records[ra:rb].tobytes(),
-                    decimals(batch.ident[rows]),
-                    "".join(texts[ra:rb]).encode("latin-1"),
-                    _places(batch, rows),
-                    msgspec.msgpack.encode(batch.sources),
+                    streams[a:b].tobytes(),
+                    records[rows].tobytes(),
+                    decimals(batch.ident[order[rows]]),
+                    "".join(texts[rows]).encode("latin-1"),
+                    _places(batch, order[rows]),
+                    sources,
                     self.horizon_s,
+                    self._worker,
+                    out[-1].token if follows else self._last[p],
                 ],
             )
             out.append(
                 Call(
                     partition,
                     token,
-                    streams,
+                    by_home[a:b],
                     paths,
-                    rows,
-                    per_stream[a:b],
-                    [append, _read(partition, paths)],
+                    order[rows],
+                    records[rows],
+                    streams["kept_records"][a:b],
+                    command,
                 )
             )
         return out
 
+    def _cuts(self, home: IntArray, edges: IntArray) -> list[int]:
+        """Return where calls begin among streams in order of ``home``, and where the last ends."""
+        cuts = [0]
+        while cuts[-1] < len(home):
+            a = cuts[-1]
+            full = int(np.searchsorted(edges, edges[a] + self.call_rows, "right")) - 1
+            cuts.append(min(max(full, a + 1), int(np.searchsorted(home, home[a], "right"))))
+        return cuts
+
     def append(self, calls: Sequence[Call], batch: Batch) -> Appended:
-        """Append a batch, each partition atomically, and read the streams it touched.
+        """Append a batch, each call atomically, and read what its worker has not folded.
 
         A call whose outcome is unknown is sent once more under the same token.
 
@@ -201,12 +342,14 @@ class Logs:
         Unavailable
             If a partition did not take its rows, or may not have; says how many were taken.
         """
-        replies: dict[int, list[Any]] = {}
+        for call in calls:
+            self._last[call.partition.number] = b""
+        replies: dict[int, Any] = {}
         error: BaseException | None = None
         for _ in range(2):
             missing = [i for i in range(len(calls)) if i not in replies]
             try:
-                answers = run(self.client, [calls[i].commands for i in missing])
+                answers = run(self.client, [[calls[i].command] for i in missing])
             except RedisError as failure:
                 error = failure
                 if surely_not_applied(failure):
@@ -215,7 +358,7 @@ class Logs:
             for i, answer in zip(missing, answers, strict=True):
                 failed = first_error(answer)
                 if failed is None:
-                    replies[i] = answer
+                    replies[i] = answer[0]
                 else:
                     error = failed
             if len(replies) == len(calls):
@@ -226,7 +369,64 @@ class Logs:
                 f"the store took {done} of {len(batch.stream)} rows for certain; send the same "
                 "batch again, rows with an identity are not counted twice"
             ) from error
-        return _appended(calls, replies, batch)
+        return self._appended(calls, [replies[i] for i in range(len(calls))], batch)
+
+    def _appended(self, calls: Sequence[Call], replies: Sequence[Any], batch: Batch) -> Appended:
+        n = len(batch.streams)
+        taken = np.zeros(len(batch.stream), bool)
+        head = np.zeros(n, _HEAD)
+        known = np.zeros(n, np.int64)
+        era = np.zeros(n, np.int64)
+        registered = np.zeros(n, bool)
+        cold: dict[int, Blobs] = {}
+        for call, (mask, heads, _, blobs, trust) in zip(calls, replies, strict=True):
+            taken[call.rows] = np.frombuffer(mask, np.uint8) == ord("1")
+            head[call.streams] = np.frombuffer(heads, _HEAD)
+            known[call.streams] = call.known
+            era[call.streams] = self._remember(call, trust)
+            registered[call.streams] = trust < 0
+            colds = np.flatnonzero(np.equal(head["status"][call.streams], _COLD)).tolist()
+            pairs = iter(blobs)
+            for i, snapshot, log in zip(colds, pairs, pairs, strict=True):
+                blob = Blobs(call.paths[i], call.partition, snapshot, log)
+                cold[int(call.streams[i])] = blob
+        kept = np.equal(head["status"], _KEPT)
+        warm = kept | np.equal(head["status"], _NEW)
+        order = np.concatenate([c.streams for c in calls])
+        others = np.where(kept, head["rows"] - known, 0)[order]
+        rows = np.concatenate([c.rows for c in calls])
+        mine = taken[rows] & warm[batch.stream[rows]]
+        slot = np.concatenate([np.repeat(order, others), batch.stream[rows[mine]]])
+        records = np.frombuffer(
+            b"".join([r[2] for r in replies])
+            + np.concatenate([c.records for c in calls])[mine].tobytes(),
+            RECORD,
+        )
+        by_stream = np.argsort(slot, kind="stable")
+        count = np.bincount(batch.stream[taken], minlength=n)
+        return Appended(
+            taken=taken,
+            first=head["first"],
+            count=count,
+            incarnation=head["incarnation"],
+            generation=head["generation"].astype(np.int64),
+            folded=head["folded"],
+            start=np.where(kept, known, np.where(warm, 0, -1)),
+            records=records[by_stream],
+            slot=slot[by_stream],
+            cold=cold,
+            era=era,
+            may_keep=~registered & (head["rows"] + count > 0),
+            calls=calls,
+        )
+
+    def _remember(self, call: Call, trust: int) -> int:
+        """Note under which name the partition remembers a call; return the era that it is in."""
+        p = call.partition.number
+        if trust < 1:
+            self._era[p] += 1
+        self._last[p] = {1: call.token, 0: b"-" + call.token}.get(trust, b"")
+        return int(self._era[p])
 
     def read(self, where: Sequence[tuple[Partition, str]]) -> list[Blobs]:
         """Read snapshots and logs of streams, each pair in one command so that it is not torn."""
@@ -259,7 +459,7 @@ class Logs:
 
     def compact(
         self,
-        blobs: Sequence[Blobs],
+        places: Sequence[Place | Blobs],
         snapshots: Sequence[bytes],
         records: Sequence[int],
         outbox: Sequence[dict[str, bytes]],
@@ -268,25 +468,27 @@ class Logs:
 
         Parameters
         ----------
-        blobs, snapshots, records, outbox : sequences of one length
+        places, snapshots, records, outbox : sequences of one length
             What was folded, the new snapshot, the records it holds, and the crossings by outbox
             field.
         """
         groups = []
-        for blob, snapshot, count, crossings in zip(blobs, snapshots, records, outbox, strict=True):
-            assert blob.log is not None
-            p = blob.partition
+        for place, snapshot, count, crossings in zip(
+            places, snapshots, records, outbox, strict=True
+        ):
+            p = place.partition
             temporary = f"{p.tag}new/{os.urandom(8).hex()}"
             arguments: list[str | bytes | int] = [
                 p.tag,
-                blob.log[4:16],
+                place.version,
                 count,
                 EVIDENCE_ROWS,
                 self.horizon_s,
             ]
-            for name, document in crossings.items():
-                arguments += [name, document]
-            keys = [p.log(blob.path), p.snapshot(blob.path), temporary, p.ids(blob.path), p.outbox]
+            for field, document in crossings.items():
+                arguments += [field, document]
+            name = place.path
+            keys = [p.log(name), p.snapshot(name), temporary, p.ids(name), p.outbox]
             groups.append(
                 [
                     ("SET", temporary, snapshot, "PX", _TEMPORARY_MS),
@@ -366,20 +568,3 @@ def checked(replies: list[list[Any]]) -> list[list[Any]]:
         if error is not None:
             raise error
     return replies
-
-
-def _appended(calls: Sequence[Call], replies: dict[int, list[Any]], batch: Batch) -> Appended:
-    taken = np.zeros(len(batch.stream), bool)
-    first = np.full(len(batch.streams), -1, np.int64)
-    blobs: dict[int, Blobs] = {}
-    for i, call in enumerate(calls):
-        (mask, rows), pairs = replies[i]
-        taken[call.rows] = np.frombuffer(mask, np.uint8) == ord("1")
-        first[call.streams] = rows
-        blobs.update(zip(call.streams, _pairs(call.partition, call.paths, pairs), strict=True))
-    return Appended(
-        taken,
-        first,
-        np.bincount(batch.stream[taken], minlength=len(first)),
-        [blobs[s] for s in range(len(batch.streams))],
-    )

@@ -42,7 +42,7 @@ HEADER = np.dtype(
         ("generation", "<u4"),  # number of compactions so far
         ("incarnation", "<u8"),  # random; a forgotten merchant that returns gets a new one
         ("base", "<u8"),  # row number of the first record in the log
-        ("spare", "<u8"),
+        ("folded", "<u8"),  # row number up to which the snapshot holds the stream
     ]
 )
 assert RECORD.itemsize == HEADER.itemsize == 32

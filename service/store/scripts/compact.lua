@@ -63,7 +63,7 @@ for k = 6, #ARGV, 2 do redis.call('HSET', KEYS[5], ARGV[k], ARGV[k + 1]) end
 redis.call('RENAME', KEYS[3], KEYS[2])
 redis.call('PERSIST', KEYS[2])
 redis.call('SET', key, string.sub(header, 1, 4) .. struct.pack('<I4', generation + 1)
-  .. string.sub(header, 9, 16) .. struct.pack('<I8', new_base) .. string.rep('\0', 8)
+  .. string.sub(header, 9, 16) .. struct.pack('<I8I8', new_base, tonumber(ARGV[3]))
   .. string.sub(log, 33 + 32 * drop))
 if ids then redis.call('SET', KEYS[4], string.sub(ids, skip)) end
 if #adds > 0 then
