@@ -33,7 +33,7 @@ from service.streams.entries import entries
 from service.streams.notation import moment
 from service.streams.record import Stream
 from service.streams.table import digits
-from service.streams.window import WINDOW_MS
+from service.streams.walk import WINDOW_MS
 
 __all__ = ["Conflict", "Posted", "StoreError", "Tallies", "Unavailable", "Unknown"]
 

@@ -35,9 +35,9 @@ EPSILON_SHARES = np.array([1.0, 1.0, 2.0]) / 4
 LAW = with_coarse(law_cells())
 """Shares of all cells under the law, (224,)."""
 
-_CUSUM_EPSILON = 1
-CUSUM_RETAINED = float(RETAINED[_CUSUM_EPSILON])
-CUSUM_GAIN = float(EPSILONS[_CUSUM_EPSILON])
+CUSUM_EPSILON = 1
+CUSUM_RETAINED = float(RETAINED[CUSUM_EPSILON])
+CUSUM_GAIN = float(EPSILONS[CUSUM_EPSILON])
 """The onset and severity of a cell are read from its CUSUM at this contamination (Page 1954)."""
 
 

@@ -24,12 +24,13 @@ from service.simulation.fraud import Fraud
 from service.simulation.outcome import HonestRows, Result, delay, run_length
 from service.simulation.source import Honest, uniforms, within
 from service.streams.fold import fold
+from service.streams.folded import Folded
 from service.streams.ordinary import bounds_of_cells
 from service.streams.record import RECORD, Stream
 from service.streams.rules import Kind
-from service.streams.state import BY_LAW, BY_OWN, UNDECIDED, Folded
+from service.streams.state import BY_LAW, BY_OWN, UNDECIDED
 from service.streams.verdicts import guarantee
-from service.streams.window import WINDOW_MS
+from service.streams.walk import WINDOW_MS
 
 CURRENCY = "EUR"
 """Of all simulated streams; it decides which of a policy's review limits count."""
@@ -146,7 +147,7 @@ class Flock:
         holds: npt.NDArray[np.bool_] = np.all(kept | ~counted[VIEW_OF_CELL], axis=1)
         for place, v in enumerate(RARE_VIEWS):
             own = counted[v] & (state["reference"][:, v] == BY_OWN)
-            rare = (state["rare"] > 0) & (v == VIEW_OF_CELL)
+            rare = (state["cell"]["rare"] > 0) & (v == VIEW_OF_CELL)
             joint = state["joint_bound"][:, place] * (1 + tolerances[v])
             holds &= ~own | (rare @ p <= joint + 1e-12)
         return holds

@@ -15,11 +15,13 @@ from service.store.feed import Feed, Outgoing
 from service.store.keys import stream_of
 from service.store.loading import Loaded, load
 from service.store.logs import COMPACT_ROWS, Blobs, Logs
-from service.streams.crossing import FEW_CROSSINGS, Crossing
+from service.streams.crossing import Crossing
 from service.streams.fold import fold
+from service.streams.folded import Folded
 from service.streams.record import Stream
 from service.streams.rules import Kind
-from service.streams.state import Folded, write_snapshots
+from service.streams.snapshots import write_snapshots
+from service.streams.walk import FEW_CROSSINGS
 
 log = logging.getLogger(__name__)
 
@@ -122,11 +124,10 @@ class Judge:
             # of an alarm that crossed often only the latest crossing is told
             if c.ordinal < FEW_CROSSINGS or c.live or c.ordinal == last[c.slot]:
                 outgoing[c.slot].append(Outgoing.of(blobs[c.slot].path, c))
-        chosen = loaded.folded.only(due)
         won = self.logs.compact(
             [blobs[i] for i in due],
-            write_snapshots(chosen, loaded.generation[due] + 1),
-            chosen.state["records"].tolist(),
+            write_snapshots(loaded.folded, due),
+            loaded.folded.state["records"][due].tolist(),
             [{o.field: o.boxed() for o in outgoing[i]} for i in due],
         )
         by_partition: dict[int, list[Outgoing]] = {}

@@ -9,8 +9,9 @@ import numpy as np
 
 from service.digits.significand import IntArray
 from service.store.logs import Blobs
+from service.streams.folded import Folded
 from service.streams.record import FORMAT, HEADER, RECORD, Records
-from service.streams.state import CorruptSnapshot, Folded, read_snapshots
+from service.streams.snapshots import CorruptSnapshot, read_snapshots
 
 
 class CorruptStream(ValueError):
@@ -47,7 +48,8 @@ def load(blobs: Sequence[Blobs]) -> Loaded:
         If one of them is torn, of an unknown format, or its snapshot and log do not fit together.
     """
     try:
-        folded, _ = read_snapshots([b.snapshot for b in blobs])
+        folded = Folded.new(len(blobs))
+        read_snapshots(folded, range(len(blobs)), [b.snapshot for b in blobs])
     except CorruptSnapshot as error:
         raise CorruptStream(*error.args) from error
     logs = [b.log or b"" for b in blobs]

@@ -3,26 +3,16 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
-import numpy.typing as npt
 
-from service.detection.cells import CELLS
-from service.digits.significand import IntArray
 from service.digits.views import WATCHED_VIEWS
+from service.streams import record
 from service.streams.findings import LIMIT, REPEAT, Finding, findings
-from service.streams.rows import Rows
-from service.streams.rules import Rules
+from service.streams.rules import AllRules
 from service.streams.state import NO_VIEW, REFUTED_BY_BANK, States, is_learning, restart
-
-FEW_CROSSINGS = 16
-"""Crossings of one alarm that are all told; after them it is looked at every ``PAUSE_ROWS``."""
-
-PAUSE_ROWS = 128
-"""Rows that an alarm which has crossed often rests between crossings: one that crosses every five
-rows says nothing new each time, and would cost as much as a thousand other streams."""
 
 
 @dataclass(frozen=True)
@@ -78,117 +68,64 @@ class Crossing:
     findings: list[Finding]
 
 
-def paused(state: States, rules: Rules, part: Rows, number: IntArray) -> npt.NDArray[np.bool_]:
-    """Return which rows may not cross; ``number`` are the rows' numbers within their streams.
-
-    A stream rests after a crossing if it raises no alarms, or if its open alarm has crossed often.
-    An alarm of history does not rest from the first live row that would bring it to the feed.
-    """
-    slot = part.slot
-    told = part.historic | (state["alarm_live"][slot] > 0)
-    often = (state["alarm_crossings"][slot] >= FEW_CROSSINGS) & told
-    crossed = state["crossed_row"][slot]
-    rests = (crossed > 0) & (number - crossed < PAUSE_ROWS)
-    return np.asarray(rests & (often | ~rules.watching[slot]))
-
-
 def cross(
     state: States,
-    rules: Rules,
-    part: Rows,
-    i: int,
+    rules: AllRules,
+    s: int,
+    row: Any,
     evidence: float,
-    names: Sequence[bytes],
+    name: bytes,
 ) -> Crossing | None:
-    """Handle the crossing at one row of a pass; detectors start again from zero.
+    """Handle a stream's crossing; its detectors start again from zero.
 
     Parameters
     ----------
-    i : int
-        Index of the row in ``part``; the state is as of that row.
+    s : int
+        Slot of the stream; the state is as of the row that crossed.
+    row : one record of ``RECORD``
     evidence : float
         Weighted sum of the detectors at it.
-    names : sequence of bytes
-        Unique names of the streams.
+    name : bytes
+        Unique name of the stream.
 
     Returns
     -------
     Crossing or None
         None where nothing is alarmed: while the stream is learning, and in flows that raise none.
     """
-    s = int(part.slot[i])
     crossing = None
     state["crossed_row"][s] = state["rows"][s]
     if is_learning(state[s]):
         _refute(state, rules, s)
-    elif rules.watching[s]:
-        crossing = _alarm(state, rules, part, i, evidence, names[s])
-    restart(state, s, int(part.at[i]))
+    elif rules["watching"][s]:
+        crossing = _alarm(state, rules[s], s, row, evidence, name)
+    restart(state, s)
     return crossing
 
 
-def follow(
-    state: States,
-    part: Rows,
-    rows: IntArray,
-    hit_row: IntArray,
-    hit_key: IntArray,
-    clock: IntArray,
-) -> None:
-    """Count what goes on in the cells of open alarms.
-
-    Parameters
-    ----------
-    rows : int64 array
-        Rows of ``part`` that were consumed.
-    hit_row, hit_key : int64 arrays (h,)
-        Row in ``part`` and ``slot * 224 + cell`` of the hits of the pass.
-    clock : int64 array (n, 3)
-        Rows of the pass seen by each view.
-    """
-    open_ = np.flatnonzero(state["alarm_crossings"] > 0)
-    if not open_.size:
-        return
-    slot, cell = hit_key // CELLS, hit_key % CELLS
-    mine = state["alarm_cells"][slot, cell] > 0
-    low, high = state["alarm_low"][part.slot], state["alarm_high"][part.slot]
-    below = rows[((part.amount >= low) & (part.amount < high))[rows]]
-    row = np.concatenate([hit_row[mine], below])
-    slot = part.slot[row]
-    n = len(state)
-    seen = np.concatenate([clock, np.bincount(part.slot[rows], minlength=n)[:, None]], axis=1)
-    state["alarm_hits"] += np.bincount(slot, minlength=n)
-    state["alarm_spent"] += np.bincount(slot, part.amount[row], minlength=n)
-    state["alarm_seen"][open_] += seen[open_, state["alarm_view"][open_]]
-    last = np.full(n, -1, np.int64)
-    np.maximum.at(last, slot, row)
-    state["alarm_hit_at"] = np.where(last >= 0, part.at[last], state["alarm_hit_at"])
-
-
-def _refute(state: States, rules: Rules, s: int) -> None:
+def _refute(state: States, rules: AllRules, s: int) -> None:
     """Note which view's baseline rows would have raised an alarm under the law."""
-    sums = state["sums"][s].sum(axis=1) * rules.active[s]
-    sums[1] += float((state["shape"][s] * rules.shapes[s]).sum())
+    sums = state["sums"][s].sum(axis=1) * rules["active"][s]
+    sums[1] += float((state["shape"][s] * rules["shapes"][s]).sum())
     strongest = int(np.argmax(sums))
     state["refuted"][s, strongest] |= REFUTED_BY_BANK
-    rules.active[s, strongest] = 0
+    rules["active"][s, strongest] = 0
     if strongest == 1:
-        rules.shapes[s] = 0
+        rules["shapes"][s] = 0
 
 
 def _alarm(
-    state: States, rules: Rules, part: Rows, i: int, evidence: float, name: bytes
+    state: States, rules: np.void, s: int, row: Any, evidence: float, name: bytes
 ) -> Crossing:
-    s = int(part.slot[i])
-    limits = list(zip(rules.low[s].tolist(), rules.high[s].tolist(), strict=True))
+    limits = list(zip(rules["low"].tolist(), rules["high"].tolist(), strict=True))
     found = findings(
-        state[s], rules.tolerance[s], rules.active[s], rules.shapes[s], rules.joint[s], limits
+        state[s], rules["tolerance"], rules["active"], rules["shapes"], rules["joint"], limits
     )
-    number = int(part.number[i])
-    historic = bool(part.historic[i])
+    number, at = int(state["records"][s]) - 1, int(record.at(row))
+    historic = bool(row["flags"] & record.HISTORIC)
     if not state["alarm_crossings"][s]:
-        state["alarm"][s] = _alarm_id(name, int(state["incarnation"][s]), number, part.raw[i])
-        _open(state, s, found[0], int(part.at[i]))
+        state["alarm"][s] = _alarm_id(name, int(state["incarnation"][s]), number, row)
+        _open(state, s, found[0], at)
     ordinal = int(state["alarm_crossings"][s])
     live = not historic and not state["alarm_live"][s]
     state["alarm_crossings"][s] = ordinal + 1
@@ -202,11 +139,11 @@ def _alarm(
         ordinal=ordinal,
         record=number,
         rows=int(state["rows"][s]),
-        arrived=int(part.arrived[i]),
-        at=int(part.at[i]),
+        arrived=int(record.arrived(row)),
+        at=at,
         historic=historic,
         evidence=float(np.log10(evidence)),
-        threshold=float(rules.threshold[s]),
+        threshold=float(rules["threshold"]),
         severity=float(state["alarm_severity"][s]),
         excess=excess,
         excess_amount=amount,
@@ -223,8 +160,8 @@ def _open(state: States, s: int, top: Finding, at: int) -> None:
     without = top.view in (LIMIT, REPEAT)
     state["alarm_view"][s] = NO_VIEW if without else WATCHED_VIEWS.index(top.view)
     state["alarm_low"][s], state["alarm_high"][s] = top.low, top.high
-    state["alarm_cells"][s] = 0
-    state["alarm_cells"][s, list(top.members)] = 1
+    state["cell"]["alarmed"][s] = 0
+    state["cell"]["alarmed"][s, list(top.members)] = 1
     state["alarm_share"][s] = top.expected
     state["alarm_hits"][s] = top.hits
     state["alarm_spent"][s] = top.spent
@@ -242,8 +179,8 @@ def _excess(state: States) -> tuple[float, float]:
     return excess, excess * float(state["alarm_spent"]) / hits if hits else 0.0
 
 
-def _alarm_id(name: bytes, incarnation: int, number: int, raw: np.void) -> bytes:
+def _alarm_id(name: bytes, incarnation: int, number: int, row: np.void) -> bytes:
     digest = hashlib.blake2b(digest_size=16, person=b"tallyward alarm")
     digest.update(name + b"\0" + incarnation.to_bytes(8, "little") + number.to_bytes(8, "little"))
-    digest.update(raw.tobytes())
+    digest.update(row.tobytes())
     return digest.digest()

@@ -19,10 +19,11 @@ from service.digits.views import WATCHED, WATCHED_VIEWS
 from service.streams.check import band_of, measures_of
 from service.streams.entries import entries, spans
 from service.streams.fit import by_own, fit, window_counts
+from service.streams.folded import Folded
 from service.streams.in_force import policy_of
 from service.streams.notation import decimal, moment, share
 from service.streams.record import Stream
-from service.streams.state import Folded, States
+from service.streams.state import States
 from service.streams.verdicts import baseline_days, guarantee, law_applies, learned
 
 LARGEST_E = 300
@@ -105,7 +106,7 @@ def _views(folded: Folded, lifetime: bool, now: int, measures: bool) -> dict[str
     span = "lifetime" if lifetime else "window"
     views: dict[str, Any] = {}
     for v, (name, cells) in enumerate(WATCHED.items()):
-        counts = state["count"][:, cells] if lifetime else window_counts(folded, cells, now)
+        counts = state["cell"]["count"][:, cells] if lifetime else window_counts(folded, cells, now)
         far = fit(state, v, counts, np.array([lifetime]))
         own = bool(by_own(state, v)[0])
         views[name] = _view(
@@ -170,7 +171,7 @@ def _rounded(value: Any) -> Any:
 def _evidence(state: States) -> dict[str, float | None]:
     """Average the watched views' e-values against the law: the mean of e-processes is one."""
     logs = [
-        log_evidence(state["count"][cells], LAW[cells], CONCENTRATIONS[name])
+        log_evidence(state["cell"]["count"][cells], LAW[cells], CONCENTRATIONS[name])
         for name, cells in WATCHED.items()
     ]
     log10_e = float((logsumexp(logs) - np.log(len(WATCHED_VIEWS))) / np.log(10))

@@ -13,10 +13,11 @@ from service.digits.measures import misfit_of, score_of
 from service.digits.significand import IntArray
 from service.digits.views import LEAD_DIGIT
 from service.streams.fit import fit, window_counts
+from service.streams.folded import Folded
 from service.streams.in_force import evidence, policy_of
 from service.streams.notation import decimals, moments
 from service.streams.record import Stream
-from service.streams.state import Folded, States, is_learning
+from service.streams.state import States, is_learning
 
 _LEAD_DIGIT_VIEW = 0
 _CELLS = LEAD_DIGIT.stop - LEAD_DIGIT.start
@@ -57,7 +58,7 @@ def spans(folded: Folded, policies: Mapping[int, Policy], now: int) -> Spans:
     window = window_counts(folded, LEAD_DIGIT, now)
     window_rows = window.sum(axis=1)  # every row with an amount has a lead digit
     lifetime = window_rows < minimum
-    counts = np.where(lifetime[:, None], state["count"][:, LEAD_DIGIT], window)
+    counts = np.where(lifetime[:, None], state["cell"]["count"][:, LEAD_DIGIT], window)
     return Spans(window_rows, minimum, lifetime, counts)
 
 

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from service.detection import bank
 from service.detection.cells import COARSE, VIEW_OF_CELL, pairs_of
@@ -96,10 +97,23 @@ def evidence_of_cells(state: States) -> FloatArray:
     Between hits a value decays in closed form: n misses act as
     ``R -> r**n R + r (1 - r**n) / (1 - r)``.
     """
-    misses = (state["clock"][..., VIEW_OF_CELL] - state["hit"])[..., None].astype(np.float64)
+    misses = (state["clock"][..., VIEW_OF_CELL] - state["cell"]["hit"])[..., None].astype(
+        np.float64
+    )
     kept = bank.RETAINED**misses
-    value = kept * state["value"] + bank.RETAINED * (1 - kept) / bank.EPSILONS
+    value = kept * state["cell"]["value"] + bank.RETAINED * (1 - kept) / bank.EPSILONS
     return np.asarray(bank.CELL_WEIGHTS * (value * bank.EPSILON_SHARES).sum(axis=-1))
+
+
+def cusums(state: States) -> FloatArray:
+    """Return every cell's CUSUM now, (..., 224); where it is 0, the cell's run is over."""
+    misses = state["clock"][..., VIEW_OF_CELL] - state["cell"]["hit"]
+    return log_of(state["cell"]["ratio"] * bank.CUSUM_RETAINED**misses)
+
+
+def log_of(ratio: npt.ArrayLike) -> FloatArray:
+    """Return the CUSUM of a ratio gathered since onset, 0 where it rests."""
+    return np.asarray(np.log(np.maximum(ratio, 1.0)))
 
 
 def findings(
@@ -147,8 +161,8 @@ def findings(
 def _reference(state: States, view: int) -> tuple[str, FloatArray]:
     """Name of a view's reference, and its shares of all cells, (224,)."""
     if state["reference"][view] == BY_OWN:
-        rows = state["base"][WATCHED[WATCHED_VIEWS[view]]].sum()
-        return "own", state["base"].astype(np.float64) / max(rows, 1.0)
+        rows = state["cell"]["base"][WATCHED[WATCHED_VIEWS[view]]].sum()
+        return "own", state["cell"]["base"].astype(np.float64) / max(rows, 1.0)
     return "law", bank.LAW
 
 
@@ -156,6 +170,8 @@ def _cells(
     state: States, view: int, evidence: FloatArray, whole: float, tolerance: float
 ) -> Finding:
     numbers = np.flatnonzero(view == VIEW_OF_CELL)
+    gathered = cusums(state)
+    runs = np.where(gathered > 0, state["cell"]["run"], 0)
     strongest = int(numbers[np.argmax(evidence[numbers])])
     if strongest >= COARSE.start:
         chosen = np.array([strongest])
@@ -163,17 +179,22 @@ def _cells(
     else:
         fine = numbers[numbers < COARSE.start]
         strong = evidence[fine] >= COMPANION * evidence[strongest]
-        chosen = fine[strong & (state["run"][fine] > 0)]
+        chosen = fine[strong & (runs[fine] > 0)]
         chosen = chosen[np.argsort(-evidence[chosen], kind="stable")]
         if not chosen.size:
             chosen = np.array([strongest])
         named = chosen.tolist()
     label, share = _reference(state, view)
-    first = chosen[np.argmin(state["onset"][chosen])]
-    since = int(state["clock"][view]) - int(state["onset_clock"][first]) + 1
-    hits = int(state["run"][chosen].sum())
-    misses = int(state["clock"][view]) - int(state["hit"][strongest])
-    cusum = float(state["cusum"][strongest]) + misses * float(np.log(bank.CUSUM_RETAINED))
+    going = chosen[runs[chosen] > 0]
+    onset_row, onset_at, since = int(state["rows"]), int(state["last_at"]), 1
+    if going.size:
+        first = going[np.argmin(state["cell"]["onset"][going])]
+        onset_row, onset_at = (
+            int(state["cell"]["onset"][first]),
+            int(state["cell"]["onset_at"][first]),
+        )
+        since = int(state["clock"][view]) - int(state["cell"]["onset_clock"][first]) + 1
+    hits = int(runs[going].sum())
     bound = float(bounds_of_cells(state, chosen).sum()) * (1 + tolerance)
     return Finding(
         view=WATCHED_VIEWS[view],
@@ -181,16 +202,16 @@ def _cells(
         cells=tuple(cell_label(k) for k in named),
         members=tuple(chosen.tolist()),
         weight=float(evidence[numbers].sum()) / whole,
-        onset_row=int(state["onset"][first]) or int(state["rows"]),
-        onset_at=int(state["onset_at"][first]),
+        onset_row=onset_row,
+        onset_at=onset_at,
         observed=hits / since,
         expected=float(share[chosen].sum()),
         bound=min(bound, 1.0),
         reference=label,
-        severity=max(cusum, 0.0),
+        severity=float(gathered[strongest]),
         hits=hits,
         seen=since,
-        spent=float(state["spent"][chosen].sum()),
+        spent=float(state["cell"]["spent"][going].sum()),
     )
 
 
@@ -205,9 +226,10 @@ def _joint(
     if place < len(bank.RARE_VIEWS):
         view = bank.RARE_VIEWS[place]
         part = WATCHED[WATCHED_VIEWS[view]]
-        members = part.start + np.flatnonzero(state["rare"][part])
-        often = members[np.argsort(-state["run"][members].astype(np.int64), kind="stable")]
-        base = state["base"].astype(np.float64)
+        members = part.start + np.flatnonzero(state["cell"]["rare"][part])
+        runs = np.where(cusums(state) > 0, state["cell"]["run"], 0)
+        often = members[np.argsort(-runs[members], kind="stable")]
+        base = state["cell"]["base"].astype(np.float64)
         name, pattern = WATCHED_VIEWS[view], "rare_cells"
         cells = tuple(cell_label(int(k)) for k in often[:MOST_CELLS])
         expected = float(base[members].sum() / max(base[part].sum(), 1.0))
@@ -231,13 +253,13 @@ def _joint(
         cells=cells,
         members=tuple(members.tolist()),
         weight=weight,
-        onset_row=max(int(state["joint_onset"][place]), 1),
-        onset_at=int(state["joint_onset_at"][place]) or int(state["first_at"]),
+        onset_row=int(state["joint_onset"][place]) or int(state["rows"]),
+        onset_at=int(state["joint_onset_at"][place]) or int(state["last_at"]),
         observed=int(state["joint_hits"][place]) / seen,
         expected=expected,
         bound=min(float(state["joint_bound"][place]) * (1 + float(tolerance[view])), 1.0),
         reference="own",
-        severity=float(state["joint_cusum"][place]),
+        severity=float(log_of(state["joint_ratio"][place])),
         hits=int(state["joint_hits"][place]),
         seen=seen,
         spent=float(state["joint_spent"][place]),
@@ -258,12 +280,12 @@ def _shape(state: States, evidence: FloatArray, whole: float, tolerance: float) 
         cells=tuple(cell_label(LEAD_PAIR.start + int(k)) for k in most),
         members=tuple(LEAD_PAIR.start + int(k) for k in most),
         weight=float(evidence.sum()) / whole,
-        onset_row=max(int(state["shape_onset"][j]), 1),
-        onset_at=int(state["shape_onset_at"][j]) or int(state["first_at"]),
+        onset_row=int(state["shape_onset"][j]) or int(state["rows"]),
+        onset_at=int(state["shape_onset_at"][j]) or int(state["last_at"]),
         observed=float("nan"),
         expected=float(share[most].sum()),
         bound=min(float(bound[most].sum()) * (1 + tolerance), 1.0),
         reference=label,
-        severity=float(state["shape_cusum"][j]),
+        severity=float(log_of(state["shape_ratio"][j])),
         shape="invented" if j < len(bank.INVENTED) else "shifted",
     )

@@ -16,9 +16,11 @@ from service.detection.bank import LAW
 from service.digits.measures import Estimate, excess_mad
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED, WATCHED_VIEWS
+from service.streams.folded import Folded
 from service.streams.ordinary import bounds_of_view
-from service.streams.state import BY_OWN, RUN_BLOCK, Folded, States
-from service.streams.window import BUCKET_MS, WINDOW_MS
+from service.streams.pages import WINDOW_PLACES
+from service.streams.state import BY_OWN, States
+from service.streams.walk import BUCKET_MS, WINDOW_MS
 
 SPANS = ("window", "lifetime")
 
@@ -51,15 +53,10 @@ def window_counts(folded: Folded, cells: slice, now: int) -> IntArray:
     -------
     int64 array (n, K)
     """
-    width = cells.stop - cells.start
-    cell = folded.buckets.cell
-    table = folded.buckets.where((cell >= cells.start) & (cell < cells.stop))
-    bucket = table.bucket
-    table = table.where((bucket >= (now - WINDOW_MS) // BUCKET_MS) & (bucket < RUN_BLOCK))
-    n = len(folded.state)
-    at = table.slot * width + table.cell - cells.start
-    counts = np.bincount(at, weights=table.count, minlength=n * width)  # exact below 2**53
-    return counts.reshape(n, width).astype(np.int64)
+    bucket = folded.state["window"]
+    live = bucket >= (now - WINDOW_MS) // BUCKET_MS
+    page = np.where(live, folded.pages.table[:, :WINDOW_PLACES], 0)
+    return np.asarray(folded.pages.count[page, cells].sum(axis=1, dtype=np.int64))
 
 
 def by_own(state: States, view: int) -> npt.NDArray[np.bool_]:
@@ -73,7 +70,7 @@ def expected(state: States, view: int) -> FloatArray:
     NaN where an own baseline holds no row that the view sees.
     """
     cells = WATCHED[WATCHED_VIEWS[view]]
-    base = state["base"][..., cells].astype(np.float64)
+    base = state["cell"]["base"][..., cells].astype(np.float64)
     rows = base.sum(axis=-1, keepdims=True)
     own = by_own(state, view)[..., None]
     return np.where(own, base / np.where(rows > 0, rows, np.nan), LAW[cells])
@@ -105,7 +102,7 @@ def fit(state: States, view: int, counts: IntArray, lifetime: npt.NDArray[np.boo
     own = np.flatnonzero(by_own(state, view))
     if not own.size:
         return Fit(law, law)
-    learned = excess_of_learned(counts[own], state["base"][own][:, cells], lifetime[own])
+    learned = excess_of_learned(counts[own], state["cell"]["base"][own][:, cells], lifetime[own])
     merged = [old.copy() for old in law]
     for new, one in zip(merged, learned, strict=True):
         new[own] = one

@@ -23,8 +23,8 @@ def bound_of(state: States, slot: IntArray, cell: IntArray) -> FloatArray:
     """Return the bounds of (stream, cell) pairs, arrays of one shape, tolerance not included."""
     return _chosen(
         state["reference"][slot, VIEW_OF_CELL[cell]],
-        state["excepted"][slot, cell],
-        state["bound"][slot, cell],
+        state["cell"]["excepted"][slot, cell],
+        state["cell"]["bound"][slot, cell],
         LAW[cell],
     )
 
@@ -39,15 +39,15 @@ def bounds_of_cells(state: States, cells: IntArray) -> FloatArray:
     """Return the bounds of some cells of every stream, float64 (..., k), tolerance not included."""
     return _chosen(
         state["reference"][..., VIEW_OF_CELL[cells]],
-        state["excepted"][..., cells],
-        state["bound"][..., cells],
+        state["cell"]["excepted"][..., cells],
+        state["cell"]["bound"][..., cells],
         LAW[cells],
     )
 
 
 def except_cells(state: States, slots: IntArray) -> None:
     """Set the bounds of the cells that a complete baseline excepts from the law."""
-    state["excepted"][slots] = rounded_up(exceptions(state["base"][slots]))
+    state["cell"]["excepted"][slots] = rounded_up(exceptions(state["cell"]["base"][slots]))
 
 
 def rounded_up(bounds: FloatArray) -> npt.NDArray[np.float32]:

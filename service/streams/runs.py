@@ -11,8 +11,3 @@ from service.digits.significand import IntArray
 def opens_run(key: IntArray) -> npt.NDArray[np.bool_]:
     """Return which elements of a sorted array begin a run of equal ones."""
     return np.concatenate([np.ones(min(len(key), 1), bool), key[1:] != key[:-1]])
-
-
-def place_in_run(key: IntArray) -> IntArray:
-    """Return each element's place, from 0, in the run of equal ones of a sorted array."""
-    return np.arange(len(key)) - np.searchsorted(key, key)

@@ -15,9 +15,9 @@ from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED, WATCHED_VIEWS
 from service.streams.check import label
 from service.streams.fit import SPANS, bounds, by_own, expected, window_counts
+from service.streams.folded import Folded
 from service.streams.in_force import policy_of
 from service.streams.notation import decimal, share
-from service.streams.state import Folded
 
 VIEWS = ("lead_digit", "second_digit", "lead_pair", "tail_pair")
 """Views that have cells."""
@@ -63,7 +63,9 @@ def digits(
     state = folded.state[0]
     watched = "lead_pair" if view == "second_digit" else view
     part = WATCHED[watched]
-    counts = state["count"][part] if span == "lifetime" else window_counts(folded, part, now)[0]
+    counts = (
+        state["cell"]["count"][part] if span == "lifetime" else window_counts(folded, part, now)[0]
+    )
     upper: list[float | None]
     if view == "second_digit":
         own = False
@@ -77,7 +79,9 @@ def digits(
         policy = policy_of(policies, int(state["policy"]))
         upper = [share(u) for u in bounds(state, v, policy.tolerances()[v])]
     if own:
-        z = z_learned(counts, state["base"][part].astype(np.int64), nested=span == "lifetime")
+        z = z_learned(
+            counts, state["cell"]["base"][part].astype(np.int64), nested=span == "lifetime"
+        )
     else:
         z = z_scores(counts, reference)
     low, high = always_valid(counts)

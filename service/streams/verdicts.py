@@ -55,7 +55,7 @@ class _Over(NamedTuple):
 
 def learned(state: States) -> bool:
     """Return whether one stream's baseline is complete."""
-    return bool(np.any(state["bound"]))
+    return bool(np.any(state["cell"]["bound"]))
 
 
 def baseline_days(state: States) -> float:
@@ -88,7 +88,7 @@ def law_applies(state: States, policy: Policy) -> dict[str, str]:
         ``status``, one of ``yes``, ``no``, ``unknown``, and ``reason``.
     """
     if learned(state):
-        tails = int(state["base"][TAIL_PAIR].sum())
+        tails = int(state["cell"]["base"][TAIL_PAIR].sum())
         return _judged(state["refuted"], int(state["base_rows"]), tails, "baseline's")
     if not is_learning(state):  # the policy takes the law for granted
         tails = int(state["clock"][_TAIL])
@@ -195,7 +195,7 @@ def dependence(state: States) -> tuple[float, float]:
     ``sum p_k**2``; the shares are those of the stream's life. 1 and 0 where nothing is known.
     """
     n = int(state["neighbours"])
-    counts = state["count"][LEAD_PAIR].astype(np.float64)
+    counts = state["cell"]["count"][LEAD_PAIR].astype(np.float64)
     if n < NEIGHBOURS_FROM or not counts.sum():
         return 1.0, 0.0
     chance = float(((counts / counts.sum()) ** 2).sum())
@@ -243,7 +243,7 @@ def _surely_over(state: States, policy: Policy, views: list[int]) -> _Over | Non
     for v in views:
         name = WATCHED_VIEWS[v]
         cells = WATCHED[name]
-        low = always_valid(state["count"][cells]).low
+        low = always_valid(state["cell"]["count"][cells]).low
         bound = bounds(state, v, policy.tolerances()[v])
         k = int(np.argmax(low / bound))
         if low[k] > bound[k] and (worst is None or low[k] / bound[k] > worst.low / worst.bound):
@@ -254,7 +254,7 @@ def _surely_over(state: States, policy: Policy, views: list[int]) -> _Over | Non
 def _refuted_now(state: States, policy: Policy) -> IntArray:
     """Judge the law on the stream's whole life, in the flags of ``state["refuted"]``."""
     verdict = law_verdict(
-        state["count"],
+        state["cell"]["count"],
         state["clock"],
         state["circle"][:4],
         int(state["rows"]),

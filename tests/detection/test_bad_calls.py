@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from service.detection import bank, baseline, cells, paths
+from service.detection import bank, baseline, cells
 
 COUNT, ROWS = np.ones(224, int), np.full(3, 500)
 BLOCKS = np.zeros((2, 224), int), np.zeros((2, 3), int)
@@ -46,8 +46,6 @@ TOLERANCES = (0.1, 0.1, 0.05)
         (lambda: baseline.own_shares(COUNT[:90]), "count must have 224 values"),
         (lambda: bank.alternatives(np.ones(89)), "reference must have 90 shares above 0"),
         (lambda: bank.alternatives(np.zeros(90)), "reference must have 90 shares above 0"),
-        (lambda: paths.affine_path(np.ones((2, 3)), np.ones((3, 2)), 2), "a and b must have one"),
-        (lambda: paths.cusum_path(np.ones(3), np.ones(2), 2), "s and m must have one shape"),
         (lambda: cells.all_hits(np.zeros((2, 5), int)), "3 watched views, got 2"),
         (lambda: cells.with_coarse(np.ones(90)), "counts must have 199 values"),
         (lambda: cells.pairs_of(9), "cell must be 199 to 223, got 9"),

@@ -7,7 +7,6 @@ import pytest
 from scipy.optimize import linprog
 
 from service.detection import bank, cells
-from service.detection.paths import affine_path, cusum_path
 from service.digits.laws import leading_law
 
 
@@ -53,40 +52,6 @@ def test_bounds_that_leave_no_room_are_refused() -> None:
     law = leading_law(2)
     with pytest.raises(ValueError, match="sum to at least 1"):
         bank.projection(bank.alternatives(law)[0], 0.9 * law)
-
-
-def test_paths_equal_the_plain_recurrence_across_segments() -> None:
-    rng = np.random.default_rng(0)
-    lengths = [1, 7, 1, 64, 65, 3]
-    a = rng.uniform(0, 3, (4, sum(lengths)))
-    b = rng.uniform(0, 2, a.shape)
-    s = rng.normal(0, 1, a.shape)
-    start = rng.uniform(0, 5, (4, len(lengths)))
-    expected, expected_cusum = np.empty_like(a), np.empty_like(a)
-    position = 0
-    scan_a, scan_b, scan_s, scan_m = a.copy(), b.copy(), s.copy(), np.zeros_like(s)
-    for k, length in enumerate(lengths):
-        x, c = start[:, k], start[:, k]
-        scan_b[:, position] += scan_a[:, position] * x
-        scan_a[:, position] = 0
-        scan_m[:, position] = np.maximum(c + s[:, position], 0)
-        scan_s[:, position] = -np.inf
-        for i in range(position, position + length):
-            x = a[:, i] * x + b[:, i]
-            c = np.maximum(c + s[:, i], 0)
-            expected[:, i], expected_cusum[:, i] = x, c
-        position += length
-    np.testing.assert_allclose(affine_path(scan_a, scan_b, max(lengths)), expected, rtol=1e-12)
-    np.testing.assert_allclose(cusum_path(scan_s, scan_m, max(lengths)), expected_cusum, atol=1e-12)
-
-
-def test_enormous_values_stay_finite_and_above_every_threshold() -> None:
-    a = np.full((1, 400), 40.0)
-    b = np.full((1, 400), 40.0)
-    a[0, 0] = 0
-    path = affine_path(a, b, 400)
-    assert np.all(np.isfinite(path))
-    assert np.all(path[0, 60:] > 1e90)
 
 
 def test_coarse_cells_are_partitions_of_the_pairs() -> None:

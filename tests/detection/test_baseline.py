@@ -149,7 +149,7 @@ def test_lunch_and_dinner_or_weekends_are_one_ordinary_merchant(a_day: int, rhyt
         for _ in range(streams)
     ]
     folded, crossings = run(logs, {1: Policy()})
-    assert np.all(folded.state["bound"].any(axis=1))
+    assert np.all(folded.state["cell"]["bound"].any(axis=1))
     assert crossings == []
 
 
@@ -170,8 +170,8 @@ def test_a_merchant_near_the_law_is_not_judged_by_the_law_where_it_differs() -> 
     assert by_law > 0.5  # accepted all the same
     assert len({c.slot for c in crossings}) <= 2
     ending = TAIL_PAIR.start + 99
-    assert (folded.state["excepted"][:, ending] > 0).mean() > 0.7
-    assert (folded.state["excepted"][:, LEAD_PAIR] > 0).mean() < 0.3
+    assert (folded.state["cell"]["excepted"][:, ending] > 0).mean() > 0.7
+    assert (folded.state["cell"]["excepted"][:, LEAD_PAIR] > 0).mean() < 0.3
 
 
 def test_rare_cells_are_bounded_together_with_the_stated_confidence() -> None:
@@ -238,5 +238,5 @@ def test_rare_cells_obey_their_recurrence() -> None:
             for amount in amounts[learned:].tolist():
                 cell = cells_of(amount)[view]
                 if cell >= 0:
-                    value = (1 + value) * (1 - eps + eps * bool(state["rare"][cell]) / u)
+                    value = (1 + value) * (1 - eps + eps * bool(state["cell"]["rare"][cell]) / u)
             assert state["joint_value"][place, e] == pytest.approx(value, rel=1e-9)

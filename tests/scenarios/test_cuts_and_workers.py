@@ -18,9 +18,10 @@ from service.store.feed import Feed
 from service.store.keys import Partition, path, stream_of
 from service.store.loading import kept_records
 from service.streams.fold import Crossing, fold
+from service.streams.folded import Folded
 from service.streams.record import HEADER, Records, Stream
 from service.streams.rules import Kind
-from service.streams.state import Folded
+from service.streams.snapshots import tidy
 from service.tallies import Tallies
 from tests.processes import eventually
 from tests.scenarios import oracle
@@ -28,6 +29,7 @@ from tests.scenarios.aof import whole_logs
 from tests.scenarios.conftest import Business
 from tests.scenarios.running import Service
 from tests.scenarios.together import run_together
+from tests.streams.test_fold import assert_same
 
 TENANT = "main"
 KINDS = ("law", "auto", "own")
@@ -160,14 +162,12 @@ def read_state(tallies: Tallies, paths: list[str]) -> Folded:
 
 
 def assert_same_state(mine: Folded, whole: Folded) -> None:
-    for name in whole.state.dtype.names or ():
-        one, other = mine.state[name], whole.state[name]
-        if one.dtype.kind == "f":
-            np.testing.assert_allclose(one, other, rtol=1e-9, atol=1e-9, err_msg=name)
-        else:
-            np.testing.assert_array_equal(one, other, err_msg=name)
-    np.testing.assert_array_equal(mine.buckets.key, whole.buckets.key)
-    np.testing.assert_array_equal(mine.buckets.count, whole.buckets.count)
+    slots = range(len(whole.state))
+    for folded in (mine, whole):
+        tidy(folded, slots)
+    assert_same(mine.state, whole.state)
+    for slot in slots:
+        np.testing.assert_array_equal(mine.pages.of(slot), whole.pages.of(slot))
 
 
 def assert_same_alarms(

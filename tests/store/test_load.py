@@ -9,7 +9,8 @@ from service.store.keys import Partition
 from service.store.loading import CorruptStream, kept_records, load
 from service.store.logs import Blobs
 from service.streams.record import FORMAT, HEADER, RECORD
-from service.streams.state import Folded, write_snapshots
+from service.streams.folded import Folded
+from service.streams.snapshots import write_snapshots
 
 
 def log(amounts, *, base: int = 0, incarnation: int = 7, generation: int = 0) -> bytes:
@@ -24,7 +25,7 @@ def log(amounts, *, base: int = 0, incarnation: int = 7, generation: int = 0) ->
 def snapshot(records: int, *, incarnation: int = 7) -> bytes:
     folded = Folded.new(1)
     folded.state["records"], folded.state["incarnation"] = records, incarnation
-    return write_snapshots(folded, np.array([1]))[0]
+    return write_snapshots(folded, [0])[0]
 
 
 def blob(held: bytes | None, of: bytes | None = None) -> Blobs:

@@ -12,7 +12,8 @@ from service.store.keys import Partition, path, stream_of
 from service.store.loading import CorruptStream, kept_records, load
 from service.store.logs import COMPACT_ROWS, EVIDENCE_ROWS, Logs, decimals
 from service.streams.record import HEADER, RECORD, Stream
-from service.streams.state import Folded, write_snapshots
+from service.streams.folded import Folded
+from service.streams.snapshots import write_snapshots
 from tests.store.batches import NOW, batch
 
 HORIZON = 8 * 86_400
@@ -48,7 +49,7 @@ def compact(logs: Logs, merchant: str) -> bool:
     loaded.folded.state["records"] += len(loaded.records)
     return logs.compact(
         blobs,
-        write_snapshots(loaded.folded, loaded.generation + 1),
+        write_snapshots(loaded.folded, range(len(loaded.folded.state))),
         loaded.folded.state["records"].tolist(),
         [{}],
     )[0]
@@ -162,7 +163,7 @@ def test_of_two_compactions_of_one_log_only_the_first_gets_through(logs: Logs, c
     blobs = logs.read([(partition, name)])
     loaded = load(blobs)
     loaded.folded.state["records"] += 200
-    snapshot = write_snapshots(loaded.folded, loaded.generation + 1)
+    snapshot = write_snapshots(loaded.folded, range(len(loaded.folded.state)))
     assert logs.compact(blobs, snapshot, [200], [{"x:0": b"1"}]) == [True]
     assert logs.compact(blobs, snapshot, [200], [{"y:0": b"2"}]) == [False]
     assert client.hgetall(partition.outbox) == {b"x:0": b"1"}
@@ -178,7 +179,7 @@ def test_rows_appended_while_a_worker_folds_survive_its_compaction(logs: Logs) -
     loaded.folded.state["records"] += 200
     post(logs, batch(["a"] * 3, [901, 902, 903], ids=["p", "q", "r"]))
     assert logs.compact(
-        blobs, write_snapshots(loaded.folded, loaded.generation + 1), [200], [{}]
+        blobs, write_snapshots(loaded.folded, range(len(loaded.folded.state))), [200], [{}]
     ) == [True]
     assert load(logs.read(where)).records["amount"].tolist() == [901, 902, 903]
     known = post(logs, batch(["a"], [901], ids=["p"]))  # its ident went into the sets too
@@ -258,4 +259,4 @@ def test_paths_come_back_as_streams() -> None:
     stream = Stream("a.b:c@d+e-f", "sale", "EUR")
     assert stream_of(path("main", stream)) == ("main", stream)
     assert Partition(3).log("x") == "{tw3}log/x"
-    assert len(write_snapshots(Folded.new(1), np.array([1]))) == 1
+    assert len(write_snapshots(Folded.new(1), [0])) == 1

@@ -12,7 +12,7 @@ from service.store.keys import path
 from service.store.loading import load
 from service.store.logs import Blobs, Logs
 from service.streams.record import Stream
-from service.streams.state import write_snapshots
+from service.streams.snapshots import write_snapshots
 from service.tallies import Posted, Tallies
 from tests.store.batches import NOW, batch
 from tests.web.business import WATCHFUL, fixed_price, ordinary
@@ -83,7 +83,7 @@ def compact(logs: Logs, merchant: str) -> bool:
     blobs = blobs_of(logs, merchant)
     loaded = load(blobs)
     loaded.folded.state["records"] += len(loaded.records)
-    snapshots = write_snapshots(loaded.folded, loaded.generation + 1)
+    snapshots = write_snapshots(loaded.folded, range(len(loaded.folded.state)))
     return logs.compact(blobs, snapshots, loaded.folded.state["records"].tolist(), [{}])[0]
 
 

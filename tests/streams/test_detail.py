@@ -16,8 +16,9 @@ from service.detection import bank
 from service.detection.policy import Policy
 from service.streams.detail import detail
 from service.streams.entries import entries
+from service.streams.folded import Folded
 from service.streams.record import Stream
-from service.streams.state import BY_OWN, Folded
+from service.streams.state import BY_OWN
 from tests.streams.test_fold import LAW, START, law_amounts, records, run, with_fraud
 
 DAY = 86_400_000

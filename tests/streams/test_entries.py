@@ -15,9 +15,10 @@ from service.detection.policy import Policy
 from service.streams.entries import entries
 from service.streams.findings import evidence_of_cells
 from service.streams.fit import excess_of_learned, window_counts
+from service.streams.folded import Folded
 from service.streams.in_force import evidence
 from service.streams.record import HISTORIC, Stream
-from service.streams.state import BY_OWN, Folded
+from service.streams.state import BY_OWN
 from tests.streams.test_fold import LAW, START, law_amounts, records, run, with_fraud
 
 DAY = 86_400_000
@@ -148,7 +149,7 @@ def test_the_window_forgets_by_itself_and_keeps_every_row_of_seven_days() -> Non
 def test_baseline_blocks_are_not_the_window() -> None:
     n = 100
     folded, _ = run([records(np.full(n, 1234), at=spread(n, 1))], {1: AUTO})
-    assert folded.buckets.count[folded.buckets.cell == 0].sum() == 4 * n
+    assert folded.pages.of(0)[:, 0].sum() == 4 * n
     for cells in (slice(0, 9), slice(9, 99), slice(99, 199)):
         assert window_counts(folded, cells, START + DAY).sum() == n
 

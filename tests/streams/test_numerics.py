@@ -26,12 +26,13 @@ from service.digits.significand import circle
 from service.digits.views import WATCHED
 from service.streams.detail import detail
 from service.streams.entries import entries
-from service.streams.findings import evidence_of_cells
+from service.streams.findings import cusums, evidence_of_cells, log_of
 from service.streams.fold import Crossing, fold
+from service.streams.folded import Folded
 from service.streams.in_force import evidence
 from service.streams.record import Records, Stream
 from service.streams.rules import Kind
-from service.streams.state import Folded, read_snapshots, write_snapshots
+from service.streams.snapshots import read_snapshots, write_snapshots
 from service.streams.table import VIEWS, digits
 from tests.streams.plain import cells_of, coarse_of
 from tests.streams.test_fold import law_amounts, records, with_fraud
@@ -54,7 +55,9 @@ def onward(folded: Folded, log: Records, sizes: Iterable[int]) -> tuple[Folded, 
         crossings += fold(
             folded, part, np.zeros(len(part), np.int64), POLICIES, [Kind("sale", "EUR")], [b"t/m"]
         )
-        folded, _ = read_snapshots(write_snapshots(folded, np.ones(1, np.int64)))
+        (snapshot,) = write_snapshots(folded, [0])
+        folded = Folded.new(1)
+        read_snapshots(folded, [0], [snapshot])
     assert start >= len(log)
     return folded, crossings
 
@@ -71,21 +74,21 @@ def old() -> Folded:
             for cells in WATCHED.values()
         ]
     )
-    state["count"] += with_coarse(counts).astype(np.int64)
+    state["cell"]["count"] += with_coarse(counts).astype(np.int64)
     for name in ("records", "rows"):
         state[name] += OLD
-    for name in ("clock", "hit", "neighbours"):
-        state[name] += OLD
-    for name in ("onset", "onset_clock", "shape_onset"):
-        state[name] += np.where(state[name] > 0, OLD, 0).astype(state[name].dtype)
+    for counter in (state["clock"], state["cell"]["hit"], state["neighbours"]):
+        counter += OLD
+    for row in (state["cell"]["onset"], state["cell"]["onset_clock"], state["shape_onset"]):
+        row += np.where(row > 0, OLD, 0).astype(row.dtype)
     state["repeats"] += int(OLD * (bank.LAW[WATCHED["lead_pair"]] ** 2).sum())
     waves = rng.normal(0, np.sqrt(OLD / 2), 4)
     state["circle"][0] += [*waves, 4.0 * OLD, (16 + 16 / 12) * OLD]
     # Their values were high at the last hit; 50 million misses leave what no hit ever leaves.
     for cell in (8, 50, 150):
-        state["hit"][0, cell] -= OLD // 2
-        state["value"][0, cell] = [1e3, 1e5, 1e7]
-        state["cusum"][0, cell] = 12.0
+        state["cell"]["hit"][0, cell] -= OLD // 2
+        state["cell"]["value"][0, cell] = [1e3, 1e5, 1e7]
+        state["cell"]["ratio"][0, cell] = math.exp(12)
     held = bank.CELL_WEIGHTS[:, None] * bank.EPSILON_SHARES * _cells_now(state[0])
     state["sums"][0] = [held[view == VIEW_OF_CELL].sum(axis=0) for view in range(3)]
     return folded
@@ -93,9 +96,9 @@ def old() -> Folded:
 
 def _cells_now(state: Any) -> Any:
     """Return the value of every cell's detectors, (224, 3), in closed form."""
-    misses = (state["clock"][VIEW_OF_CELL] - state["hit"])[:, None].astype(float)
+    misses = (state["clock"][VIEW_OF_CELL] - state["cell"]["hit"])[:, None].astype(float)
     kept = bank.RETAINED**misses
-    return kept * state["value"] + bank.RETAINED * (1 - kept) / bank.EPSILONS
+    return kept * state["cell"]["value"] + bank.RETAINED * (1 - kept) / bank.EPSILONS
 
 
 class Precise:
@@ -107,14 +110,14 @@ class Precise:
         self.u = mpf(bank.LAW * (1 + tolerance))
         self.eps = mpf(bank.EPSILONS)
         self.weights = mpf(bank.CELL_WEIGHTS[:, None] * bank.EPSILON_SHARES)
-        misses = (state["clock"][VIEW_OF_CELL] - state["hit"]).tolist()
+        misses = (state["clock"][VIEW_OF_CELL] - state["cell"]["hit"]).tolist()
         kept = np.array([[(1 - e) ** m for e in self.eps] for m in misses])
-        self.value = kept * mpf(state["value"]) + (1 - self.eps) * (1 - kept) / self.eps
+        self.value = kept * mpf(state["cell"]["value"]) + (1 - self.eps) * (1 - kept) / self.eps
         self.keep, self.gain = mpmath.mpf(bank.CUSUM_RETAINED), mpmath.mpf(bank.CUSUM_GAIN)
-        falls = np.array([m * mpmath.log(self.keep) for m in misses])
-        self.cusum = np.maximum(mpf(state["cusum"]) + falls, mpmath.mpf(0))
+        fallen = np.array([self.keep**m for m in misses])
+        self.cusum = _log(mpf(state["cell"]["ratio"]) * fallen)
         self.shape = mpf(state["shape"])
-        self.shape_cusum = mpf(state["shape_cusum"])
+        self.shape_cusum = _log(mpf(state["shape_ratio"]))
         # q / min(u, c q), with q and c as stored
         law = mpf(bank.LAW[WATCHED["lead_pair"]])
         invented = [(1 - e) * law + e / 90 for e in mpf(bank.INVENTED)]
@@ -146,6 +149,11 @@ class Precise:
 
     def total(self) -> Any:
         return (self.weights * self.value).sum() + (self.shape_weights * self.shape).sum()
+
+
+def _log(ratios: Any) -> Any:
+    """Return the CUSUMs of ratios, at least 0."""
+    return np.array([mpmath.log(max(r, mpmath.mpf(1))) for r in ratios])
 
 
 def _floats(values: Any) -> Any:
@@ -182,11 +190,12 @@ def test_further_rows_agree_with_forty_digits(old: Folded, name: str) -> None:
     counts = ~precise.dropped
     np.testing.assert_allclose(state["shape"][counts], _floats(precise.shape)[counts], rtol=1e-9)
     np.testing.assert_allclose(
-        state["shape_cusum"][counts], _floats(precise.shape_cusum)[counts], rtol=1e-9, atol=1e-9
+        log_of(state["shape_ratio"])[counts],
+        _floats(precise.shape_cusum)[counts],
+        rtol=1e-9,
+        atol=1e-9,
     )
-    misses = state["clock"][VIEW_OF_CELL] - state["hit"]
-    cusum = np.maximum(state["cusum"] + misses * math.log(bank.CUSUM_RETAINED), 0)
-    np.testing.assert_allclose(cusum, _floats(precise.cusum), rtol=1e-9, atol=1e-9)
+    np.testing.assert_allclose(cusums(state), _floats(precise.cusum), rtol=1e-9, atol=1e-9)
     got = float(evidence(folded.state, POLICIES)[0])
     assert got == pytest.approx(math.log10(total), rel=1e-9)
     before = old.state[0]
@@ -195,7 +204,7 @@ def test_further_rows_agree_with_forty_digits(old: Folded, name: str) -> None:
     for amount in amounts.tolist():
         for cell in (*cells_of(amount), *coarse_of(amount)):
             added[cell] += cell >= 0
-    np.testing.assert_array_equal(state["count"], before["count"] + added)
+    np.testing.assert_array_equal(state["cell"]["count"], before["cell"]["count"] + added)
 
 
 def test_the_row_that_alarms_is_the_same_in_forty_digits(old: Folded) -> None:
@@ -226,7 +235,7 @@ def test_an_error_is_forgotten_and_never_grows(old: Folded) -> None:
     right, _ = onward(old, log, [1500])
     wrong = copy.deepcopy(old)
     wrong.state["sums"] *= 1.001
-    wrong.state["value"] *= 1 + 1e-6
+    wrong.state["cell"]["value"] *= 1 + 1e-6
     wrong.state["shape"] *= 1 + 1e-6
     wrong, _ = onward(wrong, log, [1500])
     np.testing.assert_allclose(_cells_now(wrong.state[0]), _cells_now(right.state[0]), rtol=1e-6)

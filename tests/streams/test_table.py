@@ -13,7 +13,8 @@ from statsmodels.stats.proportion import proportions_ztest
 
 from schemas.digits import Digits
 from service.detection.policy import Policy
-from service.streams.state import BY_OWN, Folded
+from service.streams.folded import Folded
+from service.streams.state import BY_OWN
 from service.streams.table import VIEWS, digits, z_learned
 from tests.streams.test_fold import LAW, START, law_amounts, records, run
 
@@ -99,11 +100,11 @@ def test_an_own_baseline_gives_expected_bound_and_z() -> None:
     assert state["reference"][0] == BY_OWN
     table = digits(folded, policies, "lead_digit", "lifetime", now)
     assert table["reference"] == "own"
-    base, m = state["base"][:9].astype(int).tolist(), int(state["base_rows"])
+    base, m = state["cell"]["base"][:9].astype(int).tolist(), int(state["base_rows"])
     counts = [c["count"] for c in table["cells"]]
     for k, cell in enumerate(table["cells"]):
         assert cell["expected"] == pytest.approx(base[k] / m, rel=1e-5)
-        assert cell["bound"] == pytest.approx(1.1 * float(state["bound"][k]), rel=1e-5)
+        assert cell["bound"] == pytest.approx(1.1 * float(state["cell"]["bound"][k]), rel=1e-5)
         assert cell["bound"] > cell["expected"]
         if base[k]:
             rest = [counts[k] - base[k], base[k]]
