@@ -64,11 +64,12 @@ def _marked(script: Script) -> object:
     found = pytest.mark.xfail(
         reason="a snapshot folded before a roll-back may be put in place after it (test_rules)"
     )
-    return pytest.param(script, marks=[found] if script.loss else [])
+    name = f"seed {script.seed}, {script.loss or 'strict'}"
+    return pytest.param(script, id=name, marks=[found] if script.loss else [])
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="needs Linux: processes under /proc")
-@pytest.mark.parametrize("script", map(_marked, SCRIPTS), ids=lambda s: f"seed {s.seed}, {s.loss or 'strict'}")
+@pytest.mark.parametrize("script", map(_marked, SCRIPTS))
 def test_every_row_counts_once_whatever_goes_wrong(house: House, script: Script) -> None:
     print(f"seed {script.seed}: {script}")
     outcome = play(house, script)
