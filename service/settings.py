@@ -122,6 +122,13 @@ class Settings:
     max_full: int = _number(
         500, 1, 10_000, "Most streams of one request with reply=full; more are refused with 413."
     )
+    kept_streams: int = _number(
+        4096,
+        1,
+        1_000_000,
+        "Streams whose folded state each worker keeps in memory, at most 50 KiB each; a batch that "
+        "touches more of them is folded the slow way.",
+    )
     horizon_days: int = _number(
         8, 1, 90, "How long a row's id or a request's Idempotency-Key is remembered.", "days"
     )

@@ -7,7 +7,7 @@ import logging
 import time
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -15,6 +15,7 @@ import redis
 from redis.exceptions import RedisError
 
 from service.batches.batch import Batch
+from service.digits.significand import IntArray
 from service.settings import Settings
 from service.store.catalogue import Catalogue, Policies
 from service.store.charter import Charter, charter
@@ -27,6 +28,7 @@ from service.store.keys import Tenant, path, stream_of
 from service.store.loading import kept_records
 from service.store.logs import Appended, Logs
 from service.store.sweep import LATE_MS, Sweep
+from service.store.warm import Warm
 from service.streams import record
 from service.streams.detail import detail
 from service.streams.entries import entries
@@ -46,6 +48,9 @@ CATEGORIES_KNOWN = 100_000
 """Merchants whose category a worker remembers, so as not to write it again with every batch."""
 CATEGORIES_SECONDS = 60.0
 """... and for how long: another worker may have written another one since."""
+
+STREAMS_AT_ONCE = 500
+"""Streams read and folded at a time, of a batch with more than a worker keeps."""
 
 QUARANTINED = "this stream is in quarantine; the operators are told by readiness"
 
@@ -99,6 +104,8 @@ class Tallies:
         self.catalogue = Catalogue(self.client)
         self.feed = Feed(self.client)
         self.logs = Logs(self.client, settings.partitions, self.horizon_s)
+        self.warm = Warm(settings.kept_streams)
+        self._patience = 2 * settings.store_timeout
         self.judge = Judge(self.client, self.logs, self.feed, self.catalogue)
         self.directory = Directory(self.client, self.logs, self.judge, self.catalogue)
         self.sweep = Sweep(
@@ -195,13 +202,36 @@ class Tallies:
             policies = self.catalogue.of(tenant)
             self._remember_categories(tenant, batch.categories)
             versions = policies.versions_for([s.merchant for s in batch.streams])
-            calls = self.logs.calls(tenant, batch, versions, now=now, historic=historic)
+        with self.warm.turn(self._patience):
+            return self._post(tenant, batch, versions, historic=historic, reply=reply, now=now)
+
+    def _post(
+        self,
+        tenant: str,
+        batch: Batch,
+        versions: Sequence[int],
+        *,
+        historic: bool,
+        reply: str,
+        now: int,
+    ) -> Posted:
+        fits = len(batch.streams) <= self.warm.room
+        with self._answering():
+            slots, known = np.empty(0, np.int64), None
+            if fits:
+                slots = self.warm.slots([path(tenant, s) for s in batch.streams])
+                known = self.warm.known(slots)
+            calls = self.logs.calls(
+                tenant, batch, versions, now=now, historic=historic, known=known
+            )
             appended = self.logs.append(calls, batch)
+        alarms: list[Document] = []
+        found: list[Document] = []
         try:
-            judged = self.judge.judge(tenant, appended.blobs)
+            for part in self._judged(tenant, batch, appended, slots if fits else None):
+                alarms += self._raised(tenant, part, appended)
+                found += self._entries(tenant, part, reply, now)
             self.logs.judged(calls)
-            alarms = self._raised(tenant, judged, appended)
-            found = self._entries(tenant, judged, reply, now)
         except Exception:
             # The rows are counted, and whatever fails now must not say that they are not: the
             # sweep judges them, and the feed tells their alarms.
@@ -209,32 +239,45 @@ class Tallies:
             alarms, found = [], []
         return _posted(batch, appended, alarms, found, now)
 
+    def _judged(
+        self, tenant: str, batch: Batch, appended: Appended, slots: IntArray | None
+    ) -> Iterator[Judged]:
+        """Judge a batch's streams: all at once where they are kept, else some at a time."""
+        if slots is not None:
+            yield self.judge.go_on(tenant, self.warm, slots, batch.streams, appended)
+            return
+        blobs = appended.blobs
+        for first in range(0, len(blobs), STREAMS_AT_ONCE):
+            part = self.judge.judge(tenant, blobs[first : first + STREAMS_AT_ONCE])
+            yield replace(part, index=[first + i for i in part.index])
+
     def _raised(self, tenant: str, judged: Judged, appended: Appended) -> list[Document]:
         """Return the alarms that rows of one call raised, or brought from history to the feed."""
         first = appended.first[judged.index]
         end = first + appended.count[judged.index]
+        if not judged.crossings:
+            return []
+        position = {slot: i for i, slot in enumerate(judged.slots.tolist())}
         mine = [
             c.alarm.hex()
             for c in judged.crossings
-            if (c.ordinal == 0 or c.live) and 0 <= first[c.slot] <= c.record < end[c.slot]
+            if (c.ordinal == 0 or c.live)
+            and 0 <= first[position[c.slot]] <= c.record < end[position[c.slot]]
         ]
-        rows = {
-            path(tenant, stream): int(count)
-            for stream, count in zip(judged.streams, judged.folded.state["rows"], strict=True)
-        }
+        counts = judged.folded.state["rows"][judged.slots].tolist()
+        rows = {path(tenant, s): count for s, count in zip(judged.streams, counts, strict=True)}
         return [
             a.document(rows.get(a.path))
             for a in self.feed.stored(tenant, list(dict.fromkeys(mine)))
         ]
 
     def _entries(self, tenant: str, judged: Judged, reply: str, now: int) -> list[Document]:
-        versions = self.catalogue.of(tenant).by_version
         if reply == "merchants":
-            return entries(judged.folded, judged.streams, versions, now)
+            return entries(judged.folded, judged.slots, judged.streams, now)
         if reply == "full":
             return [
                 self._detail(tenant, stream, judged.folded.only([slot]), False, now)
-                for slot, stream in enumerate(judged.streams)
+                for slot, stream in zip(judged.slots.tolist(), judged.streams, strict=True)
             ]
         return []
 
@@ -277,10 +320,7 @@ class Tallies:
             return judged.streams[int(np.argmax(rows))]
 
     def _read(self, tenant: str, streams: Sequence[Stream]) -> Judged:
-        blobs = self.logs.read(
-            [(self.logs.partition(tenant, s.merchant), path(tenant, s)) for s in streams]
-        )
-        return self.judge.judge(tenant, blobs)
+        return self.judge.judge(tenant, self.logs.read(self.logs.located(tenant, streams)))
 
     def _one(self, tenant: str, stream: Stream) -> Judged:
         judged = self._read(tenant, [stream])
@@ -342,8 +382,7 @@ class Tallies:
         streams = [Stream(e["merchant"], e["flow"], e["currency"]) for e in listed]
         with self._answering():
             judged = self._read(tenant, streams)
-            versions = self.catalogue.of(tenant).by_version
-            found = entries(judged.folded, judged.streams, versions, now)
+            found = entries(judged.folded, judged.slots, judged.streams, now)
         fresh = dict(zip(judged.index, found, strict=True))
         return [
             {**fresh.get(i, entry), "category": entry["category"]} for i, entry in enumerate(listed)

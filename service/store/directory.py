@@ -60,7 +60,7 @@ class Directory:
     ) -> None:
         blobs = self.logs.read([(partition, p) for p in paths])
         judged = self.judge.judge(tenant, blobs)
-        found = entries(judged.folded, judged.streams, self.catalogue.of(tenant).by_version, now)
+        found = entries(judged.folded, judged.slots, judged.streams, now)
         documents = dict(zip(judged.index, found, strict=True))
         arguments: list[str | bytes | int] = []
         for i, path in enumerate(paths):

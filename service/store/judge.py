@@ -3,23 +3,25 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 import redis
 from redis.exceptions import RedisError
 
+from service.digits.significand import IntArray
 from service.store.catalogue import Catalogue
 from service.store.feed import Feed, Outgoing
-from service.store.keys import stream_of
-from service.store.loading import Loaded, load
-from service.store.logs import COMPACT_ROWS, Blobs, Logs
+from service.store.keys import Partition, stream_of
+from service.store.loading import load
+from service.store.logs import COMPACT_ROWS, Appended, Blobs, Logs, Place
+from service.store.warm import Warm
 from service.streams.crossing import Crossing
 from service.streams.fold import fold
 from service.streams.folded import Folded
-from service.streams.record import Stream
-from service.streams.rules import Kind
+from service.streams.record import Records, Stream
+from service.streams.rules import Kind, put_right
 from service.streams.snapshots import write_snapshots
 from service.streams.walk import FEW_CROSSINGS
 
@@ -36,6 +38,8 @@ class Judged:
         Which of the streams asked for these are; quarantined ones are left out.
     streams : list of Stream
     folded : Folded
+    slots : int64 array
+        Of the streams in ``folded``.
     crossings : list of Crossing
         By slot of ``folded``, those of other calls' rows included.
     """
@@ -43,6 +47,7 @@ class Judged:
     index: list[int]
     streams: list[Stream]
     folded: Folded
+    slots: IntArray
     crossings: list[Crossing]
 
 
@@ -56,45 +61,92 @@ class Judge:
         self.catalogue = catalogue
 
     def judge(self, tenant: str, blobs: Sequence[Blobs]) -> Judged:
-        """Fold streams of one tenant; compact and publish what is due.
+        """Fold streams of one tenant as read; compact and publish what is due.
 
         A stream that cannot be folded is put in quarantine and left out, and does not keep the
         others from being judged.
         """
         index = list(range(len(blobs)))
         try:
-            loaded, crossings = self._fold(tenant, blobs)
+            judged, tail = self._judged(tenant, blobs, index)
         except RedisError:
             raise
         except Exception:  # whatever is wrong with one stream is no matter of the others
             index = self._healthy(tenant, blobs, index)
-            blobs = [blobs[i] for i in index]
-            loaded, crossings = self._fold(tenant, blobs)
-        self._settle(tenant, blobs, loaded, crossings)
-        streams = [stream_of(b.path)[1] for b in blobs]
-        return Judged(index, streams, loaded.folded, crossings)
+            judged, tail = self._judged(tenant, blobs, index)
+        self._settle(tenant, judged, lambda i: blobs[index[i]], tail)
+        return judged
 
-    def _fold(self, tenant: str, blobs: Sequence[Blobs]) -> tuple[Loaded, list[Crossing]]:
-        loaded = load(blobs)
-        policies = self.catalogue.of(tenant).by_version
-        named = set(np.unique(loaded.records["policy"]).tolist())
-        named |= set(np.unique(loaded.folded.state["policy"]).tolist()) - {0}
-        if not named <= policies.keys():
-            policies = self.catalogue.of(tenant, fresh=True).by_version
-        crossings = fold(
+    def go_on(
+        self, tenant: str, warm: Warm, slots: IntArray, streams: list[Stream], appended: Appended
+    ) -> Judged:
+        """Fold what an append left unfolded in kept states; compact and publish what is due.
+
+        Parameters
+        ----------
+        slots : int64 array
+            Of the batch's streams in ``warm``.
+        """
+        folded = warm.folded
+        warm.drop(slots)
+        try:
+            records, slot = _unfolded(folded, slots, appended)
+            crossings = self._fold(tenant, folded, slots, records, slot, warm.kinds, warm.names)
+        except RedisError:
+            raise
+        except Exception:  # one of them cannot be folded; which one, the slow way finds out
+            return self.judge(tenant, self.logs.read(self.logs.located(tenant, streams)))
+        warm.keep(slots, appended)
+        judged = Judged(list(range(len(streams))), streams, folded, slots, crossings)
+
+        def place(i: int) -> Place:
+            home = self.logs.partition(tenant, streams[i].merchant)
+            return _place(home, warm.names[slots[i]].decode(), appended, i)
+
+        self._settle(tenant, judged, place, folded.state["records"][slots] - appended.folded)
+        return judged
+
+    def _judged(
+        self, tenant: str, blobs: Sequence[Blobs], index: list[int]
+    ) -> tuple[Judged, IntArray]:
+        """Return streams as read and folded, and how many records their snapshots lack."""
+        chosen = [blobs[i] for i in index]
+        streams = [stream_of(b.path)[1] for b in chosen]
+        loaded = load(chosen)
+        crossings = self._fold(
+            tenant,
             loaded.folded,
+            loaded.slots,
             loaded.records,
             loaded.slot,
-            policies,
-            [Kind(s.flow, s.currency) for _, s in map(stream_of, (b.path for b in blobs))],
-            [b.path.encode() for b in blobs],
+            [Kind(s.flow, s.currency) for s in streams],
+            [b.path.encode() for b in chosen],
         )
-        return loaded, crossings
+        tail = loaded.folded.state["records"] - loaded.tail_from
+        return Judged(index, streams, loaded.folded, loaded.slots, crossings), tail
+
+    def _fold(
+        self,
+        tenant: str,
+        folded: Folded,
+        slots: IntArray,
+        records: Records,
+        slot: IntArray,
+        kinds: Sequence[Kind],
+        names: Sequence[bytes],
+    ) -> list[Crossing]:
+        policies = self.catalogue.of(tenant).by_version
+        named = set(np.unique(records["policy"]).tolist())
+        named |= set(np.unique(folded.state["policy"][slots]).tolist()) - {0}
+        if not named <= policies.keys():
+            policies = self.catalogue.of(tenant, fresh=True).by_version
+        put_right(folded.state, slots, folded.rules, policies, kinds)
+        return fold(folded, records, slot, policies, kinds, names)
 
     def _healthy(self, tenant: str, blobs: Sequence[Blobs], index: list[int]) -> list[int]:
         """Find streams that cannot be folded by halving; quarantine them, return the others."""
         try:
-            self._fold(tenant, [blobs[i] for i in index])
+            self._judged(tenant, blobs, index)
         except RedisError:
             raise
         except Exception as error:
@@ -110,37 +162,55 @@ class Judge:
         return index
 
     def _settle(
-        self, tenant: str, blobs: Sequence[Blobs], loaded: Loaded, crossings: Sequence[Crossing]
+        self,
+        tenant: str,
+        judged: Judged,
+        place: Callable[[int], Place | Blobs],
+        tail: IntArray,
     ) -> None:
-        """Compact streams with a crossing or a long tail, then publish the crossings."""
-        tail = np.bincount(loaded.slot, minlength=len(blobs))
-        crossed = {c.slot for c in crossings}
-        due = sorted(crossed | set(np.flatnonzero(tail >= COMPACT_ROWS).tolist()))
+        """Compact streams with a crossing or a long tail, then publish the crossings.
+
+        Parameters
+        ----------
+        place : function
+            Tells where a stream, by its position in ``judged``, is in the store.
+        tail : int64 array
+            Records that the stored snapshots lack.
+        """
+        due = np.flatnonzero(tail >= COMPACT_ROWS).tolist()
+        outgoing: dict[int, list[Outgoing]] = {}
+        if judged.crossings:
+            position = {slot: i for i, slot in enumerate(judged.slots.tolist())}
+            last = {c.slot: c.ordinal for c in judged.crossings}
+            for c in judged.crossings:
+                mine = outgoing.setdefault(position[c.slot], [])
+                # of an alarm that crossed often only the latest crossing is told
+                if c.ordinal < FEW_CROSSINGS or c.live or c.ordinal == last[c.slot]:
+                    mine.append(Outgoing.of(place(position[c.slot]).path, c))
+            due = sorted(outgoing.keys() | due)
         if not due:
             return
-        outgoing: dict[int, list[Outgoing]] = {slot: [] for slot in due}
-        last = {c.slot: c.ordinal for c in crossings}
-        for c in crossings:
-            # of an alarm that crossed often only the latest crossing is told
-            if c.ordinal < FEW_CROSSINGS or c.live or c.ordinal == last[c.slot]:
-                outgoing[c.slot].append(Outgoing.of(blobs[c.slot].path, c))
+        slots, places = judged.slots[due], [place(i) for i in due]
         won = self.logs.compact(
-            [blobs[i] for i in due],
-            write_snapshots(loaded.folded, due),
-            loaded.folded.state["records"][due].tolist(),
-            [{o.field: o.boxed() for o in outgoing[i]} for i in due],
+            places,
+            write_snapshots(judged.folded, slots),
+            judged.folded.state["records"][slots].tolist(),
+            [{o.field: o.boxed() for o in outgoing.get(i, ())} for i in due],
         )
-        by_partition: dict[int, list[Outgoing]] = {}
-        for slot, ok in zip(due, won, strict=True):
-            if ok and outgoing[slot]:
-                by_partition.setdefault(blobs[slot].partition.number, []).extend(outgoing[slot])
-        for number, mine in by_partition.items():
-            self.feed.publish(self.logs.partitions[number], mine)
-        self._crossed_elsewhere(
-            tenant, [blobs[i] for i, ok in zip(due, won, strict=True) if outgoing[i] and not ok]
-        )
+        told: dict[Partition, list[Outgoing]] = {}
+        lost = []
+        for i, at, ok in zip(due, places, won, strict=True):
+            if i not in outgoing:
+                continue
+            if ok:
+                told.setdefault(at.partition, []).extend(outgoing[i])
+            else:
+                lost.append(at)
+        for partition, crossings in told.items():
+            self.feed.publish(partition, crossings)
+        self._crossed_elsewhere(tenant, lost)
 
-    def _crossed_elsewhere(self, tenant: str, lost: Sequence[Blobs]) -> None:
+    def _crossed_elsewhere(self, tenant: str, lost: Sequence[Place | Blobs]) -> None:
         """See to crossings whose streams another worker compacted first.
 
         It may have read fewer rows than we did, or not have published yet.
@@ -150,3 +220,25 @@ class Judge:
         self.judge(tenant, self.logs.read([(b.partition, b.path) for b in lost]))
         for partition in {b.partition for b in lost}:
             self.feed.publish(partition, self.feed.left(partition))
+
+
+def _unfolded(folded: Folded, slots: IntArray, appended: Appended) -> tuple[Records, IntArray]:
+    """Bring slots to where an append's records go on; return all records to be folded."""
+    state, start = folded.state, appended.start
+    new = np.flatnonzero(start == 0)
+    folded.forget(slots[new])
+    state["incarnation"][slots[new]] = appended.incarnation[new]
+    cold = np.fromiter(appended.cold, np.int64, len(appended.cold))
+    assert np.array_equal(state["records"][slots[start >= 0]], start[start >= 0])
+    records, slot = appended.records, slots[appended.slot]
+    if cold.size:
+        loaded = load(list(appended.cold.values()), folded, slots[cold])
+        records = np.concatenate([records, loaded.records])
+        slot = np.concatenate([slot, loaded.slot])
+    return records, slot
+
+
+def _place(partition: Partition, path: str, appended: Appended, i: int) -> Place:
+    generation, incarnation = int(appended.generation[i]), int(appended.incarnation[i])
+    version = generation.to_bytes(4, "little") + incarnation.to_bytes(8, "little")
+    return Place(path, partition, version)

@@ -26,30 +26,37 @@ class Loaded:
     ----------
     folded : Folded
         As of the snapshots.
-    generation : int64 array (n,)
-        Compactions so far, by the logs.
+    slots : int64 array (n,)
+        Of the streams in ``folded``.
+    tail_from : int64 array (n,)
+        Row number up to which the snapshots hold the streams.
     records : array of RECORD (m,)
-        Not yet folded, by slot and in log order.
+        Not yet folded, by stream and in log order.
     slot : int64 array (m,)
+        Of each record's stream.
     """
 
     folded: Folded
-    generation: IntArray
+    slots: IntArray
+    tail_from: IntArray
     records: Records
     slot: IntArray
 
 
-def load(blobs: Sequence[Blobs]) -> Loaded:
-    """Read snapshots and log tails of streams.
+def load(
+    blobs: Sequence[Blobs], folded: Folded | None = None, slots: IntArray | None = None
+) -> Loaded:
+    """Read snapshots and log tails of streams, into slots of folded states if these are given.
 
     Raises
     ------
     CorruptStream
         If one of them is torn, of an unknown format, or its snapshot and log do not fit together.
     """
+    if folded is None or slots is None:
+        folded, slots = Folded.new(len(blobs)), np.arange(len(blobs))
     try:
-        folded = Folded.new(len(blobs))
-        read_snapshots(folded, range(len(blobs)), [b.snapshot for b in blobs])
+        read_snapshots(folded, slots, [b.snapshot for b in blobs])
     except CorruptSnapshot as error:
         raise CorruptStream(*error.args) from error
     logs = [b.log or b"" for b in blobs]
@@ -64,19 +71,20 @@ def load(blobs: Sequence[Blobs]) -> Loaded:
     state = folded.state
     base = header["base"].astype(np.int64)
     length = np.maximum(size // RECORD.itemsize - 1, 0)
-    old = state["incarnation"] != 0
-    if np.any(old & (state["incarnation"] != header["incarnation"])):
+    incarnation, done = state["incarnation"][slots], state["records"][slots]
+    if np.any((incarnation != 0) & (incarnation != header["incarnation"])):
         raise CorruptStream("a snapshot belongs to another incarnation of its log")
-    if np.any((state["records"] < base) | (state["records"] > base + length)):
+    if np.any((done < base) | (done > base + length)):
         raise CorruptStream("a log lacks records that its snapshot does not hold, or the reverse")
-    state["incarnation"] = header["incarnation"]
-    skip = state["records"] - base
+    state["incarnation"][slots] = header["incarnation"]
+    skip = done - base
     tails = [log[HEADER.itemsize * (1 + s) :] for log, s in zip(logs, skip.tolist(), strict=True)]
     return Loaded(
         folded,
-        header["generation"].astype(np.int64),
+        slots,
+        done,
         np.frombuffer(b"".join(tails), RECORD),
-        np.repeat(np.arange(len(blobs)), length - skip),
+        np.repeat(slots, length - skip),
     )
 
 

@@ -20,7 +20,7 @@ from service.digits.significand import IntArray
 from service.store.errors import Unavailable, surely_not_applied
 from service.store.keys import Partition, partition_of, path
 from service.store.script import APPEND, COMPACT, Command, first_error, run
-from service.streams.record import FORMAT, HEADER, HISTORIC, RECORD, ROW, Records
+from service.streams.record import FORMAT, HEADER, HISTORIC, RECORD, ROW, Records, Stream
 
 EVIDENCE_ROWS = 128
 """Folded rows that a log keeps as evidence."""
@@ -237,6 +237,10 @@ class Logs:
     def partition(self, tenant: str, merchant: str) -> Partition:
         """Return the partition of a merchant's streams."""
         return self.partitions[partition_of(tenant, merchant, len(self.partitions))]
+
+    def located(self, tenant: str, streams: Sequence[Stream]) -> list[tuple[Partition, str]]:
+        """Return partition and path of streams, as `read` takes them."""
+        return [(self.partition(tenant, s.merchant), path(tenant, s)) for s in streams]
 
     def calls(
         self,

@@ -36,6 +36,7 @@ ONE_LOOK = (
     "stay valid however often one looks."
 )
 
+_ONE = np.zeros(1, np.int64)
 _CLASSIC = ("mad", "mad_expected", "chi_square", "g", "kuiper", "watson_u2", "largest_z")
 
 
@@ -81,8 +82,8 @@ def detail(
         raise ValueError(f"detail is of one stream, got {len(folded.state)}")
     state = folded.state[0]
     policy = policy_of(policies, int(state["policy"]))
-    document = entries(folded, [stream], policies, now)[0]
-    lifetime = bool(spans(folded, policies, now).lifetime[0])
+    document = entries(folded, _ONE, [stream], now)[0]
+    lifetime = bool(spans(folded, _ONE, now).lifetime[0])
     document |= {
         "category": category,
         "views": _views(folded, lifetime, now, all_measures),
@@ -102,12 +103,12 @@ def detail(
 
 
 def _views(folded: Folded, lifetime: bool, now: int, measures: bool) -> dict[str, Any]:
-    state = folded.state
+    state, whole = folded.state, folded.state["cell"]["count"]
     span = "lifetime" if lifetime else "window"
     views: dict[str, Any] = {}
     for v, (name, cells) in enumerate(WATCHED.items()):
-        counts = state["cell"]["count"][:, cells] if lifetime else window_counts(folded, cells, now)
-        far = fit(state, v, counts, np.array([lifetime]))
+        counts = whole[:, cells] if lifetime else window_counts(folded, _ONE, cells, now)
+        far = fit(state, _ONE, v, counts, np.array([lifetime]))
         own = bool(by_own(state, v)[0])
         views[name] = _view(
             name, span, counts[0], _first(far.reference), LAW[cells], own=own, measures=measures

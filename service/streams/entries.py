@@ -2,22 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 
-from service.detection.policy import Policy
 from service.digits.measures import misfit_of, score_of
-from service.digits.significand import IntArray
+from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_DIGIT
 from service.streams.fit import fit, window_counts
 from service.streams.folded import Folded
-from service.streams.in_force import evidence, policy_of
 from service.streams.notation import decimals, moments
 from service.streams.record import Stream
-from service.streams.state import States, is_learning
+from service.streams.state import UNDECIDED, States
+from service.streams.walk import evidence_of
 
 _LEAD_DIGIT_VIEW = 0
 _CELLS = LEAD_DIGIT.stop - LEAD_DIGIT.start
@@ -43,40 +42,38 @@ class Spans(NamedTuple):
     counts: IntArray
 
 
-def spans(folded: Folded, policies: Mapping[int, Policy], now: int) -> Spans:
-    """Choose the window where it holds enough rows, else the lifetime.
-
-    Raises
-    ------
-    KeyError
-        If a policy version in force is missing.
-    """
-    state = folded.state
-    versions, which = np.unique(state["policy"], return_inverse=True)
-    least = [policy_of(policies, version).minimum_count for version in versions.tolist()]
-    minimum = np.array(least, dtype=np.int64)[which]
-    window = window_counts(folded, LEAD_DIGIT, now)
+def spans(folded: Folded, slots: IntArray, now: int) -> Spans:
+    """Choose the window where it holds enough rows, else the lifetime."""
+    window = window_counts(folded, slots, LEAD_DIGIT, now)
     window_rows = window.sum(axis=1)  # every row with an amount has a lead digit
+    minimum = np.maximum(folded.rules["minimum"][slots], 1)  # 1 without a policy in force
     lifetime = window_rows < minimum
-    counts = np.where(lifetime[:, None], state["cell"]["count"][:, LEAD_DIGIT], window)
-    return Spans(window_rows, minimum, lifetime, counts)
+    whole = folded.state["cell"]["count"][slots, LEAD_DIGIT]
+    return Spans(window_rows, minimum, lifetime, np.where(lifetime[:, None], whole, window))
 
 
-def standings(state: States) -> list[str]:
+def standings(state: States, slots: IntArray) -> list[str]:
     """Return ``alarmed`` for an open alarm, else ``learning`` or ``steady``."""
-    learning = is_learning(state)
+    learning = np.any(np.equal(state["reference"][slots], UNDECIDED), axis=1)
     names = np.where(learning, "learning", "steady")
-    standing: list[str] = np.where(state["alarm"] != b"", "alarmed", names).tolist()
+    standing: list[str] = np.where(state["alarm"][slots] != b"", "alarmed", names).tolist()
     return standing
 
 
-def open_alarms(state: States) -> list[str | None]:
+def open_alarms(state: States, slots: IntArray) -> list[str | None]:
     """Return the open alarm's id as 32 hexadecimal digits, None where there is none."""
-    return [alarm.ljust(16, b"\0").hex() if alarm else None for alarm in state["alarm"].tolist()]
+    ids = state["alarm"][slots].tolist()
+    return [alarm.ljust(16, b"\0").hex() if alarm else None for alarm in ids]
+
+
+def evidence(folded: Folded, slots: IntArray) -> FloatArray:
+    """Return log10 of the weighted sum of every stream's detectors, 0 where it is below 1."""
+    total = evidence_of(folded.state, folded.rules, slots)
+    return np.asarray(np.log10(np.maximum(total, 1.0)))
 
 
 def entries(
-    folded: Folded, streams: Sequence[Stream], policies: Mapping[int, Policy], now: int
+    folded: Folded, slots: IntArray, streams: Sequence[Stream], now: int
 ) -> list[dict[str, Any]]:
     """Return one entry per stream, in the names of the API.
 
@@ -88,29 +85,23 @@ def entries(
     Parameters
     ----------
     folded : Folded
-        States of n streams.
+        Its rules are those of the policies in force.
+    slots : int64 array (n,)
     streams : sequence of Stream, length n
-    policies : mapping
-        Every policy version in force.
     now : int
         Milliseconds since 1970 UTC.
-
-    Raises
-    ------
-    KeyError
-        If a policy version in force is missing.
     """
     state = folded.state
-    if not len(state):
+    if not len(slots):
         return []
-    span = spans(folded, policies, now)
-    far = fit(state, _LEAD_DIGIT_VIEW, span.counts, span.lifetime)
+    span = spans(folded, slots, now)
+    far = fit(state, slots, _LEAD_DIGIT_VIEW, span.counts, span.lifetime)
     few = span.counts.sum(axis=1) < span.minimum
     score, low, high = (np.where(few, np.nan, value) for value in score_of(far.reference))
     columns = zip(
         streams,
-        state["rows"].tolist(),
-        state["zero"].tolist(),
+        state["rows"][slots].tolist(),
+        state["zero"][slots].tolist(),
         span.window_rows.tolist(),
         decimals(score, 1),
         decimals(low, 1),
@@ -118,10 +109,10 @@ def entries(
         span.lifetime.tolist(),
         decimals(misfit_of(far.reference, _CELLS).value, 6),
         decimals(misfit_of(far.law, _CELLS).value, 6),
-        decimals(evidence(state, policies), 2),
-        standings(state),
-        open_alarms(state),
-        moments(state["last_arrived"]),
+        decimals(evidence(folded, slots), 2),
+        standings(state, slots),
+        open_alarms(state, slots),
+        moments(state["last_arrived"][slots]),
         strict=True,
     )
     return [

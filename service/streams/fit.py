@@ -6,7 +6,7 @@ that of the span, and it widens the interval.
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
@@ -16,9 +16,9 @@ from service.detection.bank import LAW
 from service.digits.measures import Estimate, excess_mad
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED, WATCHED_VIEWS
+from service.streams.compiled import compiled
 from service.streams.folded import Folded
 from service.streams.ordinary import bounds_of_view
-from service.streams.pages import WINDOW_PLACES
 from service.streams.state import BY_OWN, States
 from service.streams.walk import BUCKET_MS, WINDOW_MS
 
@@ -34,7 +34,7 @@ class Fit(NamedTuple):
     law: Estimate
 
 
-def window_counts(folded: Folded, cells: slice, now: int) -> IntArray:
+def window_counts(folded: Folded, slots: IntArray, cells: slice, now: int) -> IntArray:
     """Count the rolling window's rows in a range of cells.
 
     The window holds every bucket that overlaps the 7 days before now, so up to 6 hours more than
@@ -43,7 +43,7 @@ def window_counts(folded: Folded, cells: slice, now: int) -> IntArray:
     Parameters
     ----------
     folded : Folded
-        States of n streams.
+    slots : int64 array (n,)
     cells : slice
         Of the 199 watched cells.
     now : int
@@ -53,10 +53,22 @@ def window_counts(folded: Folded, cells: slice, now: int) -> IntArray:
     -------
     int64 array (n, K)
     """
-    bucket = folded.state["window"]
-    live = bucket >= (now - WINDOW_MS) // BUCKET_MS
-    page = np.where(live, folded.pages.table[:, :WINDOW_PLACES], 0)
-    return np.asarray(folded.pages.count[page, cells].sum(axis=1, dtype=np.int64))
+    counts = np.zeros((len(slots), cells.stop - cells.start), np.int64)
+    oldest, pages = (now - WINDOW_MS) // BUCKET_MS, folded.pages
+    _sum(folded.state["window"], pages.table, pages.count[:, cells], slots, oldest, counts)
+    return counts
+
+
+@compiled
+def _sum(
+    window: Any, table: Any, count: Any, slots: IntArray, oldest: int, counts: IntArray
+) -> None:
+    for i in range(len(slots)):
+        for place in range(window.shape[1]):
+            page = table[slots[i], place]
+            if page != 0 and window[slots[i], place] >= oldest:
+                for cell in range(counts.shape[1]):
+                    counts[i, cell] += count[page, cell]
 
 
 def by_own(state: States, view: int) -> npt.NDArray[np.bool_]:
@@ -84,12 +96,19 @@ def bounds(state: States, view: int, tolerance: float) -> FloatArray:
     return np.minimum(bounds_of_view(state, view) * (1 + tolerance), 1.0)
 
 
-def fit(state: States, view: int, counts: IntArray, lifetime: npt.NDArray[np.bool_]) -> Fit:
+def fit(
+    state: States,
+    slots: IntArray,
+    view: int,
+    counts: IntArray,
+    lifetime: npt.NDArray[np.bool_],
+) -> Fit:
     """Return how far counts of a watched view are from the reference and from the law.
 
     Parameters
     ----------
-    state : array (n,) of ``STATE``
+    state : array of ``STATE``
+    slots : int64 array (n,)
     view : int
         Its place in ``WATCHED_VIEWS``.
     counts : int64 array (n, K)
@@ -99,10 +118,12 @@ def fit(state: States, view: int, counts: IntArray, lifetime: npt.NDArray[np.boo
     """
     cells = WATCHED[WATCHED_VIEWS[view]]
     law = excess_mad(counts, LAW[cells])
-    own = np.flatnonzero(by_own(state, view))
+    own = np.flatnonzero(np.equal(state["reference"][slots, view], BY_OWN))
     if not own.size:
         return Fit(law, law)
-    learned = excess_of_learned(counts[own], state["cell"]["base"][own][:, cells], lifetime[own])
+    learned = excess_of_learned(
+        counts[own], state["cell"]["base"][slots[own], cells], lifetime[own]
+    )
     merged = [old.copy() for old in law]
     for new, one in zip(merged, learned, strict=True):
         new[own] = one

@@ -16,7 +16,7 @@ from service.streams.crossing import Crossing, cross
 from service.streams.folded import Folded
 from service.streams.learning import decide
 from service.streams.record import Records
-from service.streams.rules import Kind, adopt, refresh
+from service.streams.rules import Kind, adopt, put_right, refresh
 from service.streams.runs import opens_run
 from service.streams.walk import (
     COMPLETE,
@@ -65,8 +65,7 @@ def fold(
     begin = np.flatnonzero(opens_run(slot))
     end = np.append(begin[1:], len(slot))
     slots = slot[begin]
-    stale = slots[np.not_equal(rules["version"][slots], state["policy"][slots])]
-    adopt(state, stale, state["policy"][stale], rules, policies, kinds)
+    put_right(state, slots, rules, policies, kinds)
     crossings: list[Crossing] = []
     while True:
         events, totals = np.zeros(len(slots), np.int64), np.zeros(len(slots))

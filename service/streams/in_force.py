@@ -75,33 +75,3 @@ def weights(state: States, slots: IntArray, policy: Policy) -> Weights:
         np.where(counts, bank.SHAPE_WEIGHTS, 0.0),
         np.where(joint, bank.JOINT_WEIGHTS, 0.0),
     )
-
-
-def evidence(state: States, policies: Mapping[int, Policy]) -> FloatArray:
-    """Return log10 of the weighted sum of every stream's detectors, 0 where it is below 1.
-
-    Parameters
-    ----------
-    state : array (n,) of ``STATE``
-    policies : mapping
-        Every policy version in force.
-
-    Returns
-    -------
-    float64 array (n,)
-
-    Raises
-    ------
-    KeyError
-        If a policy version is missing.
-    """
-    total = np.zeros(len(state))
-    versions = state["policy"]
-    for version in np.unique(versions[versions > 0]).tolist():
-        slots = np.flatnonzero(versions == version)
-        weight = weights(state, slots, policies[version])
-        cells = state["sums"][slots].sum(axis=2)
-        total[slots] = (cells * weight.views).sum(axis=1)
-        total[slots] += (state["shape"][slots] * weight.shapes).sum(axis=1)
-        total[slots] += (state["joint_value"][slots].mean(axis=2) * weight.joint).sum(axis=1)
-    return np.asarray(np.log10(np.maximum(total, 1.0)))

@@ -41,6 +41,7 @@ RULES = np.dtype(
         ("joint", "<f8", bank.JOINT),  # weights of the joint detectors
         ("low", "<i8", bank.LIMITS),  # just below a review limit: low <= amount < high
         ("high", "<i8", bank.LIMITS),
+        ("minimum", "<i8"),  # rows below which there is no score
         ("size", "<i8"),  # rows and ms of a complete baseline
         ("span", "<i8"),
         ("pairs", "<f8"),  # rows of the baseline with a lead pair
@@ -51,6 +52,26 @@ RULES = np.dtype(
 """Per stream, what its state and the policy in force mean for the detectors."""
 
 AllRules = npt.NDArray[np.void]
+
+
+def put_right(
+    state: States,
+    slots: IntArray,
+    rules: AllRules,
+    policies: Mapping[int, Policy],
+    kinds: Sequence[Kind],
+) -> None:
+    """Make the rules of streams those of the policies in force for them, where they are not.
+
+    Raises
+    ------
+    KeyError
+        If a policy version is missing.
+    """
+    versions = state["policy"][slots].astype(np.int64)
+    stale = np.not_equal(rules["version"][slots], versions)
+    if stale.any():
+        adopt(state, slots[stale], versions[stale], rules, policies, kinds)
 
 
 def adopt(
@@ -145,6 +166,7 @@ def refresh(
     fresh["tolerance"] = policy.tolerances()
     fresh["threshold"] = policy.transactions_per_false_alarm
     fresh["active"], fresh["shapes"], fresh["joint"] = weights(state, slots, policy)
+    fresh["minimum"] = policy.minimum_count
     fresh["size"] = policy.baseline_size
     fresh["span"] = int(policy.baseline_days * DAY_MS)
     fresh["pairs"] = state["cell"]["base"][slots, LEAD_PAIR].sum(axis=1)

@@ -34,8 +34,8 @@ SNAPSHOT = np.dtype(
 )
 
 _PLACE_WORDS = PLACES // 8
-_PAGE_WORDS = WIDTH // 2
-_LONGEST = SNAPSHOT.itemsize + 9 * (WORDS + _PLACE_WORDS + PLACES * _PAGE_WORDS)
+_PAGE_WORDS = 4 * -(-WIDTH // 8)  # planes of the counts' lowest bytes, of their second ones, ...
+_LONGEST = SNAPSHOT.itemsize + 1 + 9 * (WORDS + _PLACE_WORDS + PLACES * _PAGE_WORDS)
 
 
 class CorruptSnapshot(ValueError):
@@ -136,12 +136,12 @@ def _pack(words: Any, out: Any, at: int) -> int:
             continue
         place, mask = at, 0
         at += 1
-        for b in range(8):
-            byte = (word >> np.uint64(8 * b)) & np.uint64(255)
-            if byte != 0:
-                mask |= 1 << b
-                out[at] = byte
-                at += 1
+        for b in range(8):  # without branches: a zero byte is written, too, and written over
+            byte = np.uint8(word >> np.uint64(8 * b))
+            present = int(byte != 0)
+            out[at] = byte
+            at += present
+            mask |= present << b
         out[place] = mask
         i += 1
     return at
@@ -218,9 +218,14 @@ def _pack_stream(words: Any, table: Any, count: Any, out: Any, at: int) -> int:
     for place in range(len(table)):
         used[place] = table[place] != 0
     at = _pack(used.view(np.uint64), out, at)
+    planes = np.zeros((4, (count.shape[1] + 7) // 8 * 8), np.uint8)
     for place in range(len(table)):
         if table[place] != 0:
-            at = _pack(count[table[place]].view(np.uint64), out, at)
+            page = count[table[place]].view(np.uint8)
+            for c in range(len(page) // 4):
+                for k in range(4):
+                    planes[k, c] = page[4 * c + k]
+            at = _pack(planes.reshape(-1).view(np.uint64), out, at)
     return at
 
 
@@ -237,6 +242,7 @@ def _unpack_streams(
     free: Any,
 ) -> bool:
     used = np.zeros(table.shape[1], np.uint8)
+    planes = np.zeros((4, (count.shape[1] + 7) // 8 * 8), np.uint8)
     for i in range(len(slots)):
         slot = slots[i]
         at = _unpack(packed, starts[i], ends[i], words[slot])
@@ -250,9 +256,13 @@ def _unpack_streams(
                 page = free[free[0]]
                 free[0] -= 1
                 table[slot, place] = page
-                at = _unpack(packed, at, ends[i], count[page].view(np.uint64))
+                at = _unpack(packed, at, ends[i], planes.reshape(-1).view(np.uint64))
                 if at < 0:
                     return False
+                counts = count[page].view(np.uint8)
+                for c in range(len(counts) // 4):
+                    for k in range(4):
+                        counts[4 * c + k] = planes[k, c]
         if at != ends[i]:
             return False
     return True

@@ -19,6 +19,8 @@ from service.streams.folded import Folded
 from service.streams.in_force import policy_of
 from service.streams.notation import decimal, share
 
+_ONE = np.zeros(1, np.int64)
+
 VIEWS = ("lead_digit", "second_digit", "lead_pair", "tail_pair")
 """Views that have cells."""
 
@@ -63,9 +65,9 @@ def digits(
     state = folded.state[0]
     watched = "lead_pair" if view == "second_digit" else view
     part = WATCHED[watched]
-    counts = (
-        state["cell"]["count"][part] if span == "lifetime" else window_counts(folded, part, now)[0]
-    )
+    counts, base = (state["cell"][name][part].astype(np.int64) for name in ("count", "base"))
+    if span == "window":
+        counts = window_counts(folded, _ONE, part, now)[0]
     upper: list[float | None]
     if view == "second_digit":
         own = False
@@ -78,12 +80,8 @@ def digits(
         reference = expected(state, v)
         policy = policy_of(policies, int(state["policy"]))
         upper = [share(u) for u in bounds(state, v, policy.tolerances()[v])]
-    if own:
-        z = z_learned(
-            counts, state["cell"]["base"][part].astype(np.int64), nested=span == "lifetime"
-        )
-    else:
-        z = z_scores(counts, reference)
+    nested = span == "lifetime"
+    z = z_learned(counts, base, nested=nested) if own else z_scores(counts, reference)
     low, high = always_valid(counts)
     n = int(counts.sum())
     return {

@@ -191,6 +191,15 @@ def _evidence(state: Any, rules: Any) -> float:
 
 
 @compiled
+def evidence_of(states: Any, rules: Any, slots: IntArray) -> FloatArray:
+    """Return the weighted sum of all detectors in force, for each of some streams."""
+    totals = np.empty(len(slots))
+    for i in range(len(slots)):
+        totals[i] = _evidence(states[slots[i]], rules[slots[i]])
+    return totals
+
+
+@compiled
 def _tally(state: Any, row_at: int, arrived: int, amount: int, window: int) -> bool:
     """Count what no detector needs; return whether the row belongs to the rolling window."""
     state.records += 1

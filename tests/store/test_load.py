@@ -8,8 +8,8 @@ import pytest
 from service.store.keys import Partition
 from service.store.loading import CorruptStream, kept_records, load
 from service.store.logs import Blobs
-from service.streams.record import FORMAT, HEADER, RECORD
 from service.streams.folded import Folded
+from service.streams.record import FORMAT, HEADER, RECORD
 from service.streams.snapshots import write_snapshots
 
 
@@ -48,7 +48,7 @@ def test_streams_of_every_age_are_read_together() -> None:
     )
     assert loaded.records["amount"].tolist() == [1, 2, 3, 12, 13, 30, 31]
     assert loaded.slot.tolist() == [0, 0, 0, 2, 2, 5, 5]
-    assert loaded.generation.tolist() == [0, 0, 3, 0, 1, 0]
+    assert loaded.tail_from.tolist() == [0, 0, 7, 0, 5, 0]
     assert loaded.folded.state["incarnation"].tolist() == [1, 0, 2, 3, 4, 5]
     assert loaded.folded.state["records"].tolist() == [0, 0, 7, 0, 5, 0]
 

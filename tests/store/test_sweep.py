@@ -49,7 +49,7 @@ def free_leases(tallies: Tallies) -> None:
         tallies.client.delete(partition.lease)
 
 
-@pytest.mark.parametrize("step", ["judge.judge", "logs.compact", "feed.publish", "logs.judged"])
+@pytest.mark.parametrize("step", ["judge.go_on", "logs.compact", "feed.publish", "logs.judged"])
 def test_a_dead_workers_alarm_is_published_once(
     tallies: Tallies, fresh_store: str, step: str
 ) -> None:
@@ -140,7 +140,7 @@ def test_a_stream_that_can_be_folded_again_leaves_quarantine(tallies: Tallies, h
     key = partition.log(path("main", Stream("ill", "sale", "EUR")))
     sound = tallies.client.get(key)
     tallies.client.set(key, b"\xff" + sound[1:])  # a format of a later version
-    assert post(tallies, honest("ill", n=5, first=30)).accepted == 5
+    assert post(hire(), honest("ill", n=5, first=30)).accepted == 5
     assert quarantine(tallies)
     tallies.sweep.round()
     assert quarantine(tallies)

@@ -15,10 +15,10 @@ from schemas.stream import Detail
 from service.detection import bank
 from service.detection.policy import Policy
 from service.streams.detail import detail
-from service.streams.entries import entries
 from service.streams.folded import Folded
 from service.streams.record import Stream
 from service.streams.state import BY_OWN
+from tests.streams.listed import listed
 from tests.streams.test_fold import LAW, START, law_amounts, records, run, with_fraud
 
 DAY = 86_400_000
@@ -35,7 +35,7 @@ def of(amounts, policy: Policy = LAW, days: float = 1, *, flow: str = "sale", me
     found = detail(folded, stream, {1: policy}, now, category="5942", all_measures=measures)
     json.dumps(found, allow_nan=False)
     assert Detail().validate(found | {"alarm": None}) == {}
-    entry = entries(folded, [stream], {1: policy}, now)[0]
+    entry = listed(folded, [stream], {1: policy}, now)[0]
     assert {key: found[key] for key in entry} == entry
     return found
 

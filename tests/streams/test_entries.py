@@ -12,16 +12,16 @@ import pytest
 from service.detection import bank
 from service.detection.cells import VIEW_OF_CELL
 from service.detection.policy import Policy
-from service.streams.entries import entries
 from service.streams.findings import evidence_of_cells
 from service.streams.fit import excess_of_learned, window_counts
 from service.streams.folded import Folded
-from service.streams.in_force import evidence
 from service.streams.record import HISTORIC, Stream
 from service.streams.state import BY_OWN
+from tests.streams.listed import evidence_of, listed
 from tests.streams.test_fold import LAW, START, law_amounts, records, run, with_fraud
 
 DAY = 86_400_000
+FIRST = np.zeros(1, np.int64)
 SHOP = [199, 299, 499, 999, 1499, 2499, 4999, 9999]
 AUTO = Policy()
 
@@ -36,7 +36,7 @@ def streams(n: int) -> list[Stream]:
 
 def one(log, policy: Policy = LAW, now: int = START) -> dict:
     folded, _ = run([log], {1: policy})
-    return entries(folded, streams(1), {1: policy}, now)[0]
+    return listed(folded, streams(1), {1: policy}, now)[0]
 
 
 @pytest.fixture(scope="module")
@@ -66,8 +66,8 @@ def town() -> tuple[Folded, dict[int, Policy], int]:
 def test_many_at_once_are_the_same_as_one_at_a_time(town) -> None:
     folded, policies, now = town
     names = streams(len(folded.state))
-    together = entries(folded, names, policies, now)
-    apart = [entries(folded.only([i]), [names[i]], policies, now)[0] for i in range(len(names))]
+    together = listed(folded, names, policies, now)
+    apart = [listed(folded.only([i]), [names[i]], policies, now)[0] for i in range(len(names))]
     assert together == apart
     json.dumps(together, allow_nan=False)
     assert {e["standing"] for e in together} == {"learning", "steady", "alarmed"}
@@ -134,16 +134,16 @@ def test_nothing_and_only_zeros() -> None:
         assert entry["evidence"] == 0
         assert entry["open_alarm"] is None
         assert (entry["updated"] is None) == (zero == 0)
-    assert entries(Folded.new(0), [], {}, START) == []
+    assert listed(Folded.new(0), [], {}, START) == []
 
 
 def test_the_window_forgets_by_itself_and_keeps_every_row_of_seven_days() -> None:
     at = START - np.array([0, 3, 6, 6.99]) * DAY
     folded, _ = run([records(np.full(4, 77), at=np.sort(at.astype(np.int64)))], {1: LAW})
     cells = slice(0, 9)
-    assert window_counts(folded, cells, START).tolist() == [[0, 0, 0, 0, 0, 0, 4, 0, 0]]
-    assert window_counts(folded, cells, START + 2 * DAY).sum() == 2
-    assert window_counts(folded, cells, START + 8 * DAY).sum() == 0
+    assert window_counts(folded, FIRST, cells, START).tolist() == [[0, 0, 0, 0, 0, 0, 4, 0, 0]]
+    assert window_counts(folded, FIRST, cells, START + 2 * DAY).sum() == 2
+    assert window_counts(folded, FIRST, cells, START + 8 * DAY).sum() == 0
 
 
 def test_baseline_blocks_are_not_the_window() -> None:
@@ -151,13 +151,13 @@ def test_baseline_blocks_are_not_the_window() -> None:
     folded, _ = run([records(np.full(n, 1234), at=spread(n, 1))], {1: AUTO})
     assert folded.pages.of(0)[:, 0].sum() == 4 * n
     for cells in (slice(0, 9), slice(9, 99), slice(99, 199)):
-        assert window_counts(folded, cells, START + DAY).sum() == n
+        assert window_counts(folded, FIRST, cells, START + DAY).sum() == n
 
 
 def test_evidence_is_the_weighted_sum_of_what_is_in_force(town) -> None:
     folded, policies, now = town
     state = folded.state
-    got = [e["evidence"] for e in entries(folded, streams(len(state)), policies, now)]
+    got = [e["evidence"] for e in listed(folded, streams(len(state)), policies, now)]
     for s in range(len(state)):
         policy = policies.get(int(state["policy"][s]), AUTO)
         counts = np.array([v in policy.views for v in ("lead_digit", "lead_pair", "tail_pair")])
@@ -182,10 +182,10 @@ def test_evidence_is_that_of_the_crossing_just_before_it() -> None:
     _, crossings = run([log], {1: LAW})
     folded, none = run([log[: crossings[0].record]], {1: LAW})
     assert not none
-    before = float(evidence(folded.state, {1: LAW})[0])
+    before = float(evidence_of(folded, {1: LAW})[0])
     assert 4 < before < 6 <= crossings[0].evidence
     after, _ = run([log[: crossings[0].record + 1]], {1: LAW})
-    entry = entries(after, streams(1), {1: LAW}, START)[0]
+    entry = listed(after, streams(1), {1: LAW}, START)[0]
     assert entry["evidence"] == 0
     assert entry["standing"] == "alarmed"
     assert entry["open_alarm"] == crossings[0].alarm.hex()
@@ -194,7 +194,7 @@ def test_evidence_is_that_of_the_crossing_just_before_it() -> None:
 def test_an_alarm_id_that_ends_in_zero_bytes_stays_whole() -> None:
     folded = Folded.new(1)
     folded.state["alarm"][0] = b"\x01" * 14 + b"\0\0"
-    entry = entries(folded, streams(1), {}, START)[0]
+    entry = listed(folded, streams(1), {}, START)[0]
     assert entry["open_alarm"] == "01" * 14 + "0000"
 
 
@@ -207,14 +207,15 @@ def test_updated_is_the_last_arrival_in_utc() -> None:
 
 def test_a_missing_policy_version_is_an_error() -> None:
     folded, _ = run([records([5, 6])], {1: LAW})
+    folded.rules["version"] = 0  # as of a stream just read
     with pytest.raises(KeyError):
-        entries(folded, streams(1), {2: LAW}, START)
+        listed(folded, streams(1), {2: LAW}, START)
 
 
 def test_a_shop_is_near_its_own_baseline_and_far_from_the_law(town) -> None:
     folded, policies, now = town
     assert folded.state["reference"][5, 0] == BY_OWN
-    entry = entries(folded, streams(8), policies, now)[5]
+    entry = listed(folded, streams(8), policies, now)[5]
     assert entry["misfit"] < 0.05
     assert entry["law_misfit"] > 0.3
     assert entry["score"] > 60
@@ -276,6 +277,6 @@ def test_a_view_that_crossed_while_learning_no_longer_counts() -> None:
     if kept[1]:
         on = np.isfinite(state["shape_scale"])
         counted += (state["shape"] * bank.SHAPE_WEIGHTS)[on].sum()
-    got = float(evidence(folded.state, {1: AUTO})[0])
+    got = float(evidence_of(folded, {1: AUTO})[0])
     assert got == pytest.approx(math.log10(max(1.0, counted)))
     assert got < everything - 0.3

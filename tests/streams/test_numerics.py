@@ -25,15 +25,14 @@ from service.digits.measures import spread
 from service.digits.significand import circle
 from service.digits.views import WATCHED
 from service.streams.detail import detail
-from service.streams.entries import entries
 from service.streams.findings import cusums, evidence_of_cells, log_of
 from service.streams.fold import Crossing, fold
 from service.streams.folded import Folded
-from service.streams.in_force import evidence
 from service.streams.record import Records, Stream
 from service.streams.rules import Kind
 from service.streams.snapshots import read_snapshots, write_snapshots
 from service.streams.table import VIEWS, digits
+from tests.streams.listed import evidence_of, in_force, listed
 from tests.streams.plain import cells_of, coarse_of
 from tests.streams.test_fold import law_amounts, records, with_fraud
 
@@ -196,7 +195,7 @@ def test_further_rows_agree_with_forty_digits(old: Folded, name: str) -> None:
         atol=1e-9,
     )
     np.testing.assert_allclose(cusums(state), _floats(precise.cusum), rtol=1e-9, atol=1e-9)
-    got = float(evidence(folded.state, POLICIES)[0])
+    got = float(evidence_of(folded, POLICIES)[0])
     assert got == pytest.approx(math.log10(total), rel=1e-9)
     before = old.state[0]
     assert int(state["rows"]) == int(before["rows"]) + 240 > OLD
@@ -290,15 +289,16 @@ def _numbers(document: Any) -> list[float]:
 
 def test_what_is_said_of_an_old_stream_is_finite_and_exact(old: Folded) -> None:
     stream, now = Stream("m", "sale", "EUR"), int(old.state["last_at"][0])
+    in_force(old, POLICIES)
     said = detail(old, stream, POLICIES, now, category=None, all_measures=True)
     assert said["count"] == OLD + 3000
     assert said["score"] > 95
     assert said["p_value"] == 1
-    listed = entries(old, [stream], POLICIES, now)[0]
+    entry = listed(old, [stream], POLICIES, now)[0]
     tables = [
         digits(old, POLICIES, view, span, now) for view in VIEWS for span in ("window", "lifetime")
     ]
-    numbers = _numbers([said, listed, tables])
+    numbers = _numbers([said, entry, tables])
     assert len(numbers) > 2000
     assert all(math.isfinite(number) for number in numbers)
     lifetime = digits(old, POLICIES, "lead_digit", "lifetime", now)
@@ -318,9 +318,9 @@ def test_values_are_held_far_above_any_threshold_and_come_down_again() -> None:
         for name in high.state.dtype.names or ():
             if high.state[name].dtype.kind == "f" and name != "shape_scale":
                 assert np.all(np.isfinite(high.state[name])), name
-        assert 90 < float(evidence(high.state, POLICIES)[0]) < 110
+        assert 90 < float(evidence_of(high, POLICIES)[0]) < 110
     low, _ = onward(high, honest, [60_000])
-    assert float(evidence(low.state, POLICIES)[0]) < 6
+    assert float(evidence_of(low, POLICIES)[0]) < 6
 
 
 POSTED = {

@@ -111,7 +111,7 @@ for i = 1, n do
     generation = struct.unpack('<I4', string.sub(header, 5, 8))
     base = struct.unpack('<I8', string.sub(header, 17, 24))
     length = (redis.call('STRLEN', key) - 32) / 32
-    if trusted and kept == string.sub(header, 9, 16)
+    if trusted and length % 1 == 0 and kept == string.sub(header, 9, 16)
       and base <= folded and folded <= base + length then
       status = KEPT
       if folded < base + length then
