@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import os
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 
@@ -13,21 +15,51 @@ from service.streams.record import HEADER, RECORD, Records
 
 def commands(file: Path) -> Iterator[list[bytes]]:
     """Yield the write commands of an append-only file, oldest first."""
-    data, at = file.read_bytes(), 0
-    while at < len(data):
-        end = data.index(b"\r\n", at)
-        if data[at : at + 1] == b"#":  # an annotation
-            at = end + 2
-            continue
-        assert data[at : at + 1] == b"*", data[at : at + 40]
-        parts, count = [], int(data[at + 1 : end])
-        at = end + 2
-        for _ in range(count):
-            end = data.index(b"\r\n", at)
-            size = int(data[at + 1 : end])
-            parts.append(data[end + 2 : end + 2 + size])
-            at = end + 2 + size + 2
-        yield parts
+    for _, command in _placed(file.read_bytes()):
+        yield command
+
+
+def cut_off_torn_end(file: Path) -> None:
+    """Take an unfinished command or transaction off a file, as ``redis-check-aof --fix`` does.
+
+    Redis 7.0 leaves the beginning of a torn transaction in its file, and does it at a later start.
+    """
+    data = file.read_bytes()
+    whole, open_ = 0, False
+    for end, command in _placed(data):
+        name = command[0].upper()
+        open_ = (open_ or name == b"MULTI") and name != b"EXEC"
+        whole = whole if open_ else end
+    if whole < len(data):
+        os.truncate(file, whole)
+
+
+def _placed(data: bytes) -> Iterator[tuple[int, list[bytes]]]:
+    """Yield whole commands and where each ends."""
+    at = 0
+    with contextlib.suppress(_Torn):
+        while at < len(data):
+            count, at = _number(data, at, b"*")
+            parts = []
+            for _ in range(count):
+                size, at = _number(data, at, b"$")
+                parts.append(data[at : at + size])
+                at += size + 2
+            if at > len(data):
+                return
+            yield at, parts
+
+
+class _Torn(Exception):
+    """The file ends within a number."""
+
+
+def _number(data: bytes, at: int, mark: bytes) -> tuple[int, int]:
+    end = data.find(b"\r\n", at)
+    if end < 0 or at >= len(data):
+        raise _Torn
+    assert data[at : at + 1] == mark, data[at : at + 40]
+    return int(data[at + 1 : end]), end + 2
 
 
 def whole_logs(

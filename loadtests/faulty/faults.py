@@ -40,6 +40,12 @@ def kill_store(s: Scene) -> None:
     s.house.kill_store()
 
 
+def kill_store_at_once(s: Scene) -> None:
+    """Whatever it answered and has not written yet is lost, unless it writes before it answers."""
+    s.meanwhile(3, 15)
+    s.house.kill_store_at_once()
+
+
 def fill_memory(s: Scene) -> None:
     client = s.house.server.client
     info: Any = client.info("memory")
@@ -160,5 +166,6 @@ LOSSES: dict[str, Fault] = {
     "replica promoted": promote_replica,
     "power lost": lose_power,
     "only a snapshot": fall_back_on_snapshot,
+    "killed at once": kill_store_at_once,
     "came back empty": come_back_empty,
 }

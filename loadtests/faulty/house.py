@@ -16,6 +16,7 @@ from typing import Any
 
 import redis
 
+from loadtests.faulty.archive import cut_off_torn_end
 from loadtests.faulty.callers import Caller
 from loadtests.faulty.line import Line
 from loadtests.faulty.plan import POLICIES, SHOPS, merchant_of
@@ -45,6 +46,8 @@ class Server:
 
     def start(self, *, append_only: bool = True, fsync: str = "everysec") -> None:
         """Start it on what its folder holds and wait until it answers."""
+        for file in self.append_only_files[-1:]:
+            cut_off_torn_end(file)
         options = {
             "port": str(self.port),
             "bind": "127.0.0.1",
@@ -162,7 +165,17 @@ class House:
     # -- what goes wrong with servers and workers ----------------------------------------------
 
     def kill_store(self) -> None:
-        """End the store in the midst of everything and start it on what it had written."""
+        """End the store in the midst of everything and start it on what it had written.
+
+        With ``everysec`` a server holds writes back while an earlier fsync lasts, and answers
+        nevertheless; so it is made to hold still until all that it answered is written.
+        """
+        if self.fsync == "everysec":
+            self.server.client.client_pause(60_000, all=False)
+            eventually(self.server.rewritten, "an append-only file that is handed over")
+        self.kill_store_at_once()
+
+    def kill_store_at_once(self) -> None:
         self.server.kill()
         self.server.start(fsync=self.fsync)
 

@@ -45,7 +45,9 @@ SCRIPTS = [
             store=["store killed"],
             path=["batches replayed", "replies broken"],
         )
-        for i, loss in enumerate(["power lost", "only a snapshot", "replica promoted"])
+        for i, loss in enumerate(
+            ["power lost", "only a snapshot", "replica promoted", "killed at once"]
+        )
     ),
 ]
 
@@ -69,7 +71,7 @@ def _marked(script: Script) -> object:
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="needs Linux: processes under /proc")
-@pytest.mark.parametrize("script", map(_marked, SCRIPTS))
+@pytest.mark.parametrize("script", [_marked(s) for s in SCRIPTS])
 def test_every_row_counts_once_whatever_goes_wrong(house: House, script: Script) -> None:
     print(f"seed {script.seed}: {script}")
     outcome = play(house, script)

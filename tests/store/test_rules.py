@@ -7,7 +7,9 @@ time that never was has no effect on it.
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -15,14 +17,18 @@ import pytest
 import redis
 
 from service.store.catalogue import FRESH_SECONDS
+from service.store.connection import connect, inspect
+from service.store.embedded import EmbeddedStore
 from service.store.keys import path
+from service.store.loading import kept_records
 from service.store.logs import COMPACT_ROWS, Logs
 from service.store.script import SETTLE, run
 from service.streams.record import Stream
 from service.streams.state import Folded
 from service.tallies import Tallies
-from tests.store.batches import batch
+from tests.store.batches import NOW, batch
 from tests.store.workers import (
+    HORIZON,
     blobs_of,
     compact,
     feed,
@@ -182,7 +188,7 @@ def test_nothing_is_written_where_one_stream_cannot_be_read(logs: Logs) -> None:
     """A script is not rolled back, so it reads everything before it writes anything."""
     rows = batch(["a", "b", "c"], [1, 2, 3], ids=["x", "y", "z"])
     calls = Logs(logs.client, 1, logs.horizon_s).calls(
-        "main", rows, [1] * 3, now=1_790_000_000_000, historic=False
+        "main", rows, [1] * 3, now=NOW, historic=False
     )
     (call,) = calls
     broken = call.partition.log(path("main", Stream("c", "sale", "EUR")))
@@ -204,19 +210,18 @@ def test_only_what_a_lost_script_kept_from_being_done_is_sent_again(client: redi
 def test_a_stream_is_read_in_one_command(logs: Logs, client: redis.Redis) -> None:
     """A compaction between reading the snapshot and reading the log would tear the two apart."""
     rows = batch(["a"] * COMPACT_ROWS, range(1, COMPACT_ROWS + 1), ids=named("a", 0, COMPACT_ROWS))
-    logs.append(logs.calls("main", rows, [1], now=1_790_000_000_000, historic=False), rows)
+    logs.append(logs.calls("main", rows, [1], now=NOW, historic=False), rows)
     assert compact(logs, "a")
     client.config_resetstat()
     (blob,) = blobs_of(logs, "a")
     assert blob.snapshot is not None
     assert blob.log is not None
     stats: dict[str, Any] = client.info("commandstats")
-    reads = {
-        name: count["calls"]
-        for name, count in stats.items()
-        if name.split("_", 1)[1] not in ("config|resetstat", "config")
-    }
-    assert list(reads.values()) == [1], reads
+    calls = {name.removeprefix("cmdstat_"): count["calls"] for name, count in stats.items()}
+    if "evalsha" in calls:  # what a script does is one command
+        calls = {"evalsha": calls["evalsha"]}
+    calls.pop("config|resetstat", None)
+    assert list(calls.values()) == [1], calls
 
 
 def test_a_row_is_known_by_its_marks_after_every_roll_back(tallies: Tallies, hire: Hire) -> None:
@@ -230,3 +235,32 @@ def test_a_row_is_known_by_its_marks_after_every_roll_back(tallies: Tallies, hir
     assert post(hire(), then).accepted == 2
     assert post(tallies, then).accepted == 0
     assert state(tallies).state["rows"].tolist() == [5]
+
+
+def test_a_torn_transaction_is_not_done_at_a_later_start(
+    store_binary: Path, tmp_path: Path, request: pytest.FixtureRequest
+) -> None:
+    """The machine stops while a script's writes are on their way to the disk; all is sent again."""
+
+    def post_(*ids: str) -> int:
+        rows = batch(["a"] * len(ids), [int(i) for i in ids], ids=ids)
+        with EmbeddedStore(tmp_path, store_binary) as store, connect(store.url, 5) as client:
+            logs = Logs(client, 1, HORIZON)
+            calls = logs.calls("main", rows, [1], now=NOW, historic=False)
+            taken = int(logs.append(calls, rows).taken.sum())
+            if ids == ("1", "2"):
+                assert compact(logs, "a")  # from here on records are appended to the log
+            if inspect(client).server == "redis" and inspect(client).version.startswith("7.0."):
+                known = "Redis 7.0 keeps a torn transaction and does it at its next start"
+                request.applymarker(pytest.mark.xfail(strict=True, reason=known))
+            return taken
+
+    assert post_("1", "2") == 2
+    assert post_("3", "4") == 2
+    (file,) = (tmp_path / "appendonlydir").glob("*.incr.aof")
+    os.truncate(file, file.read_bytes().rindex(b"calls"))
+    assert post_("3", "4") == 2
+    assert post_("5") == 1
+    with EmbeddedStore(tmp_path, store_binary) as store, connect(store.url, 5) as client:
+        (blob,) = blobs_of(Logs(client, 1, HORIZON), "a")
+        assert kept_records(blob.log or b"")["amount"].tolist() == [1, 2, 3, 4, 5]
