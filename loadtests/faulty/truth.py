@@ -14,21 +14,18 @@ from loadtests.faulty.archive import whole_logs
 from loadtests.faulty.callers import Failed, Progress
 from loadtests.faulty.house import PARTITIONS, House
 from loadtests.faulty.plan import TENANT, Plan
-from service.detection.policy import Policy
 from service.settings import Settings
 from service.store.feed import Feed
 from service.store.keys import path, stream_of
 from service.streams import record
-from service.streams.crossing import FEW_CROSSINGS, Crossing
+from service.streams.crossing import Crossing
 from service.streams.entries import entries
-from service.streams.fold import fold
 from service.streams.record import Records, Stream
-from service.streams.rules import Kind
-from service.streams.state import Folded
+from service.streams.walk import FEW_CROSSINGS
 from service.tallies import Tallies
 from tests.processes import eventually
 from tests.scenarios import oracle
-from tests.scenarios.test_cuts_and_workers import assert_same_state, read_state
+from tests.scenarios.test_cuts_and_workers import assert_same_state, pure_fold, read_state
 
 Logs = Mapping[str, tuple[int, Records]]
 ROUNDED = {"score": 0.1, "score_low": 0.1, "score_high": 0.1, "evidence": 0.01}
@@ -73,24 +70,6 @@ def missing(plan: Plan, logs: Logs, progress: Progress, kinds: Sequence[str]) ->
     return sum(name not in held for name in asked)
 
 
-def one_fold(
-    logs: Logs, paths: Sequence[str], policies: Mapping[int, Policy]
-) -> tuple[Folded, list[Crossing]]:
-    """Fold whole logs from nothing, all at once."""
-    folded = Folded.new(len(paths))
-    folded.state["incarnation"] = [logs[p][0] for p in paths]
-    records = [logs[p][1] for p in paths]
-    crossings = fold(
-        folded,
-        np.concatenate(records),
-        np.repeat(np.arange(len(paths)), [len(r) for r in records]),
-        policies,
-        [Kind(s.flow, s.currency) for _, s in map(stream_of, paths)],
-        [p.encode() for p in paths],
-    )
-    return folded, crossings
-
-
 def is_one_fold(house: House, logs: Logs, said: Sequence[Any], feed: Sequence[Any]) -> int:
     """States, entries, alarms and the feed are those of one fold; return how many alarms.
 
@@ -105,11 +84,11 @@ def is_one_fold(house: House, logs: Logs, said: Sequence[Any], feed: Sequence[An
     tallies = Tallies(Settings(redis_url=url, partitions=PARTITIONS))
     try:
         paths = sorted(logs)
-        policies = tallies.catalogue.of(TENANT, fresh=True).by_version
-        whole, crossings = one_fold(logs, paths, policies)
+        whole, crossings = pure_fold(dict(logs), paths, tallies)
         assert_same_state(read_state(tallies, paths), whole)
         streams = [stream_of(p)[1] for p in paths]
-        _same_entries(said, entries(whole, streams, policies, time.time_ns() // 1_000_000))
+        now = time.time_ns() // 1_000_000
+        _same_entries(said, entries(whole, np.arange(len(paths)), streams, now))
         return _same_alarms(Feed(tallies.client), feed, paths, crossings)
     finally:
         tallies.client.close()
