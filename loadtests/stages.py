@@ -20,6 +20,7 @@ from service.batches.limits import Defaults, Limits
 from service.batches.read import read_batch
 from service.settings import Settings
 from service.store.embedded import EmbeddedStore
+from service.store.keys import path
 from service.streams.entries import entries
 from service.tallies import Tallies
 
@@ -75,17 +76,24 @@ def measure(rows: int, merchants: int, rounds: int, seed: int) -> dict[str, list
             mark("read the body")
             policies = tallies.catalogue.of("main")
             versions = policies.versions_for([s.merchant for s in batch.streams])
-            calls = tallies.logs.calls("main", batch, versions, now=now, historic=False)
+            slots = tallies.warm.slots([path("main", s) for s in batch.streams])
+            known = tallies.warm.known(slots)
+            mark("find kept states")
+            calls = tallies.logs.calls(
+                "main", batch, versions, now=now, historic=False, known=known
+            )
             mark("pack the calls")
             store_before = store_cpu(tallies)
             appended = tallies.logs.append(calls, batch)
             mark("append and read (client)")
             store_spent = store_cpu(tallies) - store_before
-            judged = tallies.judge.judge("main", appended.blobs)
+            judged = tallies.judge.go_on("main", tallies.warm, slots, batch.streams, appended)
             tallies.logs.judged(calls)
             mark("fold, compact, publish")
-            entries(judged.folded, judged.streams, policies.by_version, now)
+            found = entries(judged.folded, judged.slots, judged.streams, now)
             mark("entries of the reply")
+            msgspec.json.encode(found)
+            mark("write the reply")
             if turn >= rounds:
                 spent["append (store)"].append(store_spent)
                 spent["streams touched"].append(len(batch.streams))

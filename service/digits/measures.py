@@ -6,12 +6,14 @@ nothing without the count: a perfect merchant's is above 0.015 on average below 
 
 from __future__ import annotations
 
-from typing import NamedTuple
+import math
+from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 from scipy.special import gammaln
 
+from service.digits.compiled import compiled
 from service.digits.significand import FloatArray
 from service.digits.tally import checked, checked_law, checked_total, nan_if_empty
 
@@ -152,16 +154,47 @@ def excess_mad(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
         If counts or p is outside its range.
     """
     c, n, law = checked(counts, p)
-    raw = _mad(c, n, law)
-    cells = c.shape[-1]
-    n = nan_if_empty(n)
-    root = np.sqrt(n)
-    value = np.sqrt(np.maximum(0, raw**2 - _noise_constant(law) ** 2 / n))
-    shares = c / n[..., np.newaxis]
-    margin = _Z95 / (cells * root)
-    low = np.maximum(0, raw - _noise_constant(shares) / root - margin)
-    # The reference's noise can exceed that of the counted shares; the value stays inside.
-    return Estimate(value, np.minimum(low, value), np.minimum(raw + margin, 2 / cells))
+    rows = c.reshape(-1, c.shape[-1])
+    found = _excess_mad(rows, np.broadcast_to(law, c.shape).reshape(rows.shape), _Z95)
+    return Estimate(*found.reshape(3, *n.shape))
+
+
+def excess_mad_of_rows(counts: npt.NDArray[np.int64], law: FloatArray) -> Estimate:
+    """Return many tallies' ``excess_mad`` against one law; what is given is taken as it is.
+
+    Parameters
+    ----------
+    counts : int64 array (n, K)
+    law : float64 array (K,)
+    """
+    return Estimate(*_excess_mad(counts, np.broadcast_to(law, counts.shape), _Z95))
+
+
+@compiled
+def _excess_mad(counts: Any, law: Any, z95: float) -> FloatArray:
+    rows, cells = counts.shape
+    found = np.full((3, rows), np.nan)
+    for i in range(rows):
+        n = 0.0
+        for k in range(cells):
+            n += counts[i, k]
+        if n == 0:
+            continue
+        raw, noise, counted = 0.0, 0.0, 0.0
+        for k in range(cells):
+            p, q = law[i, k], counts[i, k] / n
+            raw += abs(q - p)
+            noise += math.sqrt(2 / math.pi * p * (1 - p))
+            counted += math.sqrt(2 / math.pi * q * (1 - q))
+        raw, noise, counted = raw / cells, noise / cells, counted / cells
+        root = math.sqrt(n)
+        margin = z95 / (cells * root)
+        value = min(math.sqrt(max(0.0, raw**2 - noise**2 / n)), 2 / cells)
+        low = max(0.0, raw - counted / root - margin)
+        # The reference's noise can exceed that of the counted shares; the value stays inside.
+        found[0, i], found[1, i] = value, min(low, value)
+        found[2, i] = min(raw + margin, 2 / cells)
+    return found
 
 
 def misfit(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:

@@ -7,6 +7,7 @@ is for the partition to say, with every append (`Known`).
 from __future__ import annotations
 
 import threading
+from collections import OrderedDict
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 
@@ -43,10 +44,8 @@ class Warm:
         self.folded = Folded.new(room)
         self.kinds = [Kind("", "")] * room
         self.names = [b""] * room
-        self._slots: dict[str, int] = {}
+        self._slots: OrderedDict[str, int] = OrderedDict()  # least recently used first
         self._era = np.full(room, NOTHING)
-        self._used = np.zeros(room, np.int64)
-        self._turns = 0
         self._lock = threading.Lock()
 
     @contextmanager
@@ -61,31 +60,25 @@ class Warm:
         if not self._lock.acquire(timeout=patience):
             raise Unavailable("other batches take too long; send the same batch again later")
         try:
-            self._turns += 1
             yield
         finally:
             self._lock.release()
 
     def slots(self, paths: Sequence[str]) -> IntArray:
         """Return the slots of different streams, at most ``room``, making room for new ones."""
-        found = np.fromiter((self._slots.get(p, -1) for p in paths), np.int64, len(paths))
-        self._used[found[found >= 0]] = self._turns
-        missing = np.flatnonzero(found < 0)
-        if missing.size:
-            oldest = np.argpartition(self._used, missing.size - 1)[: missing.size]
-            self._era[oldest] = NOTHING
-            for i, slot in zip(missing.tolist(), oldest.tolist(), strict=True):
-                self._slots.pop(self.names[slot].decode(), None)
-                path = paths[i]
-                _, stream = stream_of(path)
-                self._slots[path] = slot
-                self.names[slot], self.kinds[slot] = (
-                    path.encode(),
-                    Kind(stream.flow, stream.currency),
-                )
-            self._used[oldest] = self._turns
-            found[missing] = oldest
-        return found
+        kept, missing = self._slots, []
+        for path in paths:
+            if path in kept:
+                kept.move_to_end(path)
+            else:
+                missing.append(path)
+        for path in missing:
+            slot = len(kept) if len(kept) < self.room else kept.popitem(last=False)[1]
+            kept[path] = slot
+            _, stream = stream_of(path)
+            self._era[slot] = NOTHING
+            self.names[slot], self.kinds[slot] = path.encode(), Kind(stream.flow, stream.currency)
+        return np.fromiter(map(kept.__getitem__, paths), np.int64, len(paths))
 
     def known(self, slots: IntArray) -> Known:
         """Return what is kept in slots."""

@@ -6,6 +6,7 @@ that of the span, and it widens the interval.
 
 from __future__ import annotations
 
+import math
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -13,10 +14,10 @@ import numpy.typing as npt
 from scipy.special import ndtri
 
 from service.detection.bank import LAW
-from service.digits.measures import Estimate, excess_mad
+from service.digits.compiled import compiled
+from service.digits.measures import Estimate, excess_mad_of_rows
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import WATCHED, WATCHED_VIEWS
-from service.streams.compiled import compiled
 from service.streams.folded import Folded
 from service.streams.ordinary import bounds_of_view
 from service.streams.state import BY_OWN, States
@@ -117,7 +118,7 @@ def fit(
         Whether the span is the stream's life, of which the baseline is a part.
     """
     cells = WATCHED[WATCHED_VIEWS[view]]
-    law = excess_mad(counts, LAW[cells])
+    law = excess_mad_of_rows(counts, LAW[cells])
     own = np.flatnonzero(np.equal(state["reference"][slots, view], BY_OWN))
     if not own.size:
         return Fit(law, law)
@@ -155,20 +156,37 @@ def excess_of_learned(
     Estimate
         Arrays (...), each 0 to 2/K with low <= value <= high; NaN where span or baseline is empty.
     """
-    c = np.asarray(counts, dtype=np.float64)
-    b = np.asarray(base, dtype=np.float64)
-    cells = c.shape[-1]
-    n = c.sum(axis=-1)
-    n = np.where(n > 0, n, np.nan)
-    m = b.sum(axis=-1)
-    m = np.where(m > 0, m, np.nan)
-    q, p = c / n[..., None], b / m[..., None]
-    raw = np.abs(q - p).mean(axis=-1)
-    apart = 1 / n + 1 / m
-    v = np.where(nested, np.maximum(1 / m - 1 / n, 0), apart)
-    noise = np.sqrt(2 / np.pi * p * (1 - p)).mean(axis=-1)
-    value = np.sqrt(np.maximum(raw**2 - noise**2 * v, 0))
-    spread = q * (1 - q) / n[..., None] + p * (1 - p) / m[..., None]
-    margin = _Z95 * np.sqrt(apart) / cells
-    low = np.maximum(raw - np.sqrt(2 / np.pi * spread).mean(axis=-1) - margin, 0)
-    return Estimate(value, np.minimum(low, value), np.minimum(raw + margin, 2 / cells))
+    c, b = np.broadcast_arrays(np.asarray(counts), np.asarray(base))
+    rows = c.reshape(-1, c.shape[-1])
+    within = np.broadcast_to(nested, c.shape[:-1]).reshape(-1)
+    found = _excess_of_learned(rows, b.reshape(rows.shape), within, _Z95)
+    return Estimate(*found.reshape(3, *c.shape[:-1]))
+
+
+@compiled
+def _excess_of_learned(counts: Any, base: Any, nested: Any, z95: float) -> FloatArray:
+    rows, cells = counts.shape
+    found = np.full((3, rows), np.nan)
+    for i in range(rows):
+        n, m = 0.0, 0.0
+        for k in range(cells):
+            n += counts[i, k]
+            m += base[i, k]
+        if n == 0 or m == 0:
+            continue
+        raw, noise, both = 0.0, 0.0, 0.0
+        for k in range(cells):
+            p, q = base[i, k] / m, counts[i, k] / n
+            raw += abs(q - p)
+            noise += math.sqrt(2 / math.pi * p * (1 - p))
+            spread = q * (1 - q) / n + p * (1 - p) / m
+            both += math.sqrt(2 / math.pi * spread)
+        raw, noise, both = raw / cells, noise / cells, both / cells
+        apart = 1 / n + 1 / m
+        v = max(1 / m - 1 / n, 0.0) if nested[i] else apart
+        margin = z95 * math.sqrt(apart) / cells
+        value = min(math.sqrt(max(raw**2 - noise**2 * v, 0.0)), 2 / cells)
+        found[0, i] = value
+        found[1, i] = min(max(raw - both - margin, 0.0), value)
+        found[2, i] = min(raw + margin, 2 / cells)
+    return found

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from datetime import UTC, datetime
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -10,9 +12,13 @@ import numpy.typing as npt
 from service.digits.significand import IntArray
 
 
+@lru_cache(maxsize=4096)  # a batch's rows arrive at one time
 def moment(ms: int) -> str | None:
     """Return a time as RFC 3339 in UTC with milliseconds; None for 0, a time never set."""
-    return moments(np.array([ms], dtype=np.int64))[0]
+    if not ms:
+        return None
+    time = datetime.fromtimestamp(ms // 1000, UTC).replace(tzinfo=None)
+    return f"{time.isoformat()}.{ms % 1000:03d}Z"
 
 
 def moments(ms: IntArray) -> list[str | None]:
@@ -23,8 +29,7 @@ def moments(ms: IntArray) -> list[str | None]:
     ms : int64 array (n,)
         Milliseconds since 1970 UTC.
     """
-    texts: list[str] = np.datetime_as_string(ms.astype("M8[ms]"), timezone="UTC").tolist()
-    return [text if given else None for text, given in zip(texts, ms.tolist(), strict=True)]
+    return [moment(time) for time in ms.tolist()]
 
 
 def share(value: npt.ArrayLike) -> float | None:
@@ -40,6 +45,6 @@ def decimal(value: npt.ArrayLike, places: int) -> float | None:
 
 
 def decimals(values: npt.NDArray[np.float64], places: int) -> list[float | None]:
-    """Return many values as `decimal` does."""
+    """Return many values as `decimal` does; None for those that are NaN."""
     rounded: list[float] = (np.round(values, places) + 0.0).tolist()
-    return [value if math.isfinite(value) else None for value in rounded]
+    return [value if value == value else None for value in rounded]

@@ -14,8 +14,8 @@ import numpy as np
 
 from service.detection import bank
 from service.detection.cells import VIEW_OF_CELL
+from service.digits.compiled import compiled
 from service.digits.significand import IntArray
-from service.streams.compiled import compiled
 from service.streams.folded import Folded
 from service.streams.pages import PLACES, WIDTH
 from service.streams.state import WORDS

@@ -16,10 +16,10 @@ import numpy as np
 
 from service.detection import bank
 from service.detection.cells import CELLS, COARSE_OF_PAIR, VIEW_OF_CELL
+from service.digits.compiled import compiled
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_PAIR, LEAD_PAIR_FROM, TAIL_PAIR, TAIL_PAIR_FROM
 from service.streams import pages, record
-from service.streams.compiled import compiled
 from service.streams.state import BY_LAW, BY_OWN, NO_VIEW, UNDECIDED
 
 BUCKET_MS = 6 * 3600 * 1000

@@ -116,7 +116,7 @@ CALLS: list[Call] = [
     (tally.checked_total, (-1,), TOTALS),
 ]
 
-TAKE_ANYTHING = {"law_cells", "score_of", "nan_if_empty"}
+TAKE_ANYTHING = {"compiled", "law_cells", "score_of", "nan_if_empty", "excess_mad_of_rows"}
 """No argument, or one made by another public function."""
 
 

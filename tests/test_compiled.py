@@ -10,10 +10,11 @@ import numpy as np
 import pytest
 from numba.core.dispatcher import Dispatcher
 
-from service.streams import compiled, fit, snapshots, walk
+from service.digits import compiled, measures
+from service.streams import fit, snapshots, walk
 
 
-@pytest.mark.parametrize("module", [walk, snapshots, fit], ids=lambda m: m.__name__)
+@pytest.mark.parametrize("module", [walk, snapshots, fit, measures], ids=lambda m: m.__name__)
 def test_compiled_functions_read_nothing_from_outside_their_file(module: ModuleType) -> None:
     functions = [f for f in vars(module).values() if isinstance(f, Dispatcher)]
     assert functions
