@@ -32,25 +32,7 @@ _PLACE = np.dtype([("source", "<u2"), ("offset", "<f8")])
 _TEMPORARY_MS = 60_000
 
 
-_STREAM = np.dtype(
-    [
-        ("rows", "<u4"),
-        ("ids", "<u4"),  # bytes
-        ("incarnation", "<u8"),
-        ("kept_incarnation", "<u8"),
-        ("kept_records", "<i8"),
-    ]
-)
-_HEAD = np.dtype(
-    [
-        ("first", "<i8"),
-        ("rows", "<i8"),
-        ("folded", "<i8"),
-        ("incarnation", "<u8"),
-        ("generation", "<u4"),
-        ("status", "<u4"),
-    ]
-)
+_HEAD = np.dtype([("header", HEADER), ("rows", "<i8"), ("status", "<u8")])
 _COLD, _NEW, _KEPT = 0, 1, 2
 
 
@@ -275,18 +257,19 @@ class Logs:
         rank = np.empty(n, np.int64)
         rank[by_home] = np.arange(n)
         order = np.argsort(rank[batch.stream], kind="stable")
+        order = order[_first_of_each(batch, order)]
         records = _records(batch, np.asarray(versions), order, now, historic)
         texts = [_counted(batch.ids[i]) for i in order.tolist()]
-        streams = np.zeros(n, _STREAM)
-        streams["rows"] = np.bincount(rank[batch.stream], minlength=n)
-        edges = np.concatenate([[0], np.cumsum(streams["rows"].astype(np.int64))])
-        sizes = np.fromiter(map(len, texts), np.int64, len(texts))
-        streams["ids"] = np.add.reduceat(sizes, edges[:-1])
-        streams["incarnation"] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
+        rows_of = np.bincount(rank[batch.stream[order]], minlength=n)
+        edges = np.concatenate([[0], np.cumsum(rows_of)])
+        id_bytes = np.add.reduceat(np.fromiter(map(len, texts), np.int64, len(texts)), edges[:-1])
+        incarnations = np.zeros((n, 2), np.uint64)
+        incarnations[:, 0] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
+        folded = np.zeros(n, np.int64)
         if known is not None:
             current = known.era == self._era[home]
-            streams["kept_incarnation"] = np.where(current, known.incarnation, 0)[by_home]
-            streams["kept_records"] = known.records[by_home]
+            incarnations[:, 1] = np.where(current, known.incarnation, 0)[by_home]
+            folded = known.records[by_home]
         sources = msgspec.msgpack.encode(batch.sources)
         out: list[Call] = []
         for a, b in pairwise(self._cuts(home[by_home], edges)):
@@ -302,7 +285,8 @@ class Logs:
                     partition.tag,
                     token,
                     self._take_judged(p),
-                    streams[a:b].tobytes(),
+                    msgspec.msgpack.encode([c[a:b].tolist() for c in (rows_of, id_bytes, folded)]),
+                    incarnations[a:b].tobytes(),
                     records[rows].tobytes(),
                     decimals(batch.ident[order[rows]]),
                     "".join(texts[rows]).encode("latin-1"),
@@ -321,7 +305,7 @@ class Logs:
                     paths,
                     order[rows],
                     records[rows],
-                    streams["kept_records"][a:b],
+                    folded[a:b],
                     command,
                 )
             )
@@ -394,6 +378,7 @@ class Logs:
             for i, snapshot, log in zip(colds, pairs, pairs, strict=True):
                 blob = Blobs(call.paths[i], call.partition, snapshot, log)
                 cold[int(call.streams[i])] = blob
+        header = head["header"]
         kept = np.equal(head["status"], _KEPT)
         warm = kept | np.equal(head["status"], _NEW)
         order = np.concatenate([c.streams for c in calls])
@@ -410,11 +395,11 @@ class Logs:
         count = np.bincount(batch.stream[taken], minlength=n)
         return Appended(
             taken=taken,
-            first=head["first"],
+            first=np.where(count > 0, head["rows"], -1),
             count=count,
-            incarnation=head["incarnation"],
-            generation=head["generation"].astype(np.int64),
-            folded=head["folded"],
+            incarnation=header["incarnation"],
+            generation=header["generation"].astype(np.int64),
+            folded=header["folded"].astype(np.int64),
             start=np.where(kept, known, np.where(warm, 0, -1)),
             records=records[by_stream],
             slot=slot[by_stream],
@@ -487,7 +472,6 @@ class Logs:
                 place.version,
                 count,
                 EVIDENCE_ROWS,
-                self.horizon_s,
             ]
             for field, document in crossings.items():
                 arguments += [field, document]
@@ -537,6 +521,17 @@ def _records(
     records["kind"] = ROW
     records["flags"] = HISTORIC if historic else 0
     return records
+
+
+def _first_of_each(batch: Batch, order: IntArray) -> IntArray:
+    """Return the places in ``order`` whose row does not repeat an ident of its stream."""
+    ident = batch.ident[order]
+    named = np.flatnonzero(ident)
+    if len(np.unique(ident[named])) == len(named):
+        return np.arange(len(order))
+    pairs = np.rec.fromarrays([batch.stream[order[named]], ident[named]])
+    first = named[np.unique(pairs, return_index=True)[1]]
+    return np.sort(np.concatenate([np.flatnonzero(np.equal(ident, 0)), first]))
 
 
 def _counted(text: str | None) -> str:

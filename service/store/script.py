@@ -37,7 +37,7 @@ class Script:
 
 
 APPEND = Script.named("append", "seen")
-COMPACT = Script.named("compact", "seen")
+COMPACT = Script.named("compact")
 PUBLISH = Script.named("publish")
 SETTLE = Script.named("settle")
 

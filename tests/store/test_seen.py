@@ -10,10 +10,15 @@ from service.store.keys import path
 from service.store.logs import Logs
 from service.streams.record import Stream
 from tests.store.batches import NOW, batch
-from tests.store.workers import HORIZON, compact, named
+from tests.store.workers import HORIZON, named
 
 ROOM = 512
 """Members up to which a server with its own settings keeps a set of integers as an array."""
+
+
+LONG = 32
+"""Rows from which on a stream's idents are in sets."""
+DAY = 86_400
 
 
 def post(logs: Logs, ids, *, idents=None, amounts=None) -> list[bool]:
@@ -27,6 +32,13 @@ def seen(logs: Logs) -> str:
     return f"{partition.tag}seen/{path('main', Stream('a', 'sale', 'EUR'))}"
 
 
+def groups(logs: Logs) -> list[tuple[int, int, int]]:
+    """Return when each group of sets goes, its level, and at which row it was begun."""
+    index = logs.client.get(seen(logs)) or b""
+    cells = [index[i : i + 24] for i in range(0, len(index), 24)]
+    return [(int(c[:10]), int(c[10:11]), int(c[11:])) for c in cells]
+
+
 def sets(client) -> list[bytes]:
     return [k for k in client.keys("*seen/*") if client.type(k) == b"set"]
 
@@ -38,52 +50,55 @@ def wait_for_epoch(client, number: int, horizon: int) -> None:
 
 def test_ids_of_earlier_epochs_are_known(client) -> None:
     logs = Logs(client, 3, horizon_s=1)
-    assert post(logs, ["first"]) == [True]
-    assert compact(logs, "a")
-    known = ["first"]
+    known = named("a", 0, LONG)
+    assert all(post(logs, known))
     for i in range(3):
         epoch = client.time()[0] + 1
         wait_for_epoch(client, epoch, 1)
         assert post(logs, [*known, f"x{i}"]) == [False] * len(known) + [True]
         known.append(f"x{i}")
-    assert len(client.hkeys(seen(logs))) > 1
+    assert len(groups(logs)) > 1
     assert len(sets(client)) > 1
 
 
 @pytest.mark.parametrize("horizon", [60, HORIZON])
 def test_ids_go_late_rather_than_early(client, horizon: int) -> None:
     logs = Logs(client, 3, horizon)
-    post(logs, ["a"])
-    assert compact(logs, "a")
+    post(logs, named("a", 0, LONG))
     post(logs, ["b"])
+    post(logs, named("c", 0, 1000), idents=[10**18 + i * 997 for i in range(1000)])
     now = client.time()[0]
     keys = client.keys("*seen/*")
-    assert len(keys) >= 2
+    assert len(keys) == 1 + 1 + 10  # an index, and groups of two levels
     for key in keys:
-        assert now + horizon < client.expiretime(key) <= now + 2 * horizon + 86_400
+        assert now + horizon < client.expiretime(key) <= now + 2 * horizon + DAY
 
 
 def test_an_epoch_that_is_gone_is_forgotten(client) -> None:
-    logs = Logs(client, 3, horizon_s=1)
-    post(logs, ["old"])
-    assert compact(logs, "a")
-    (gone,) = sets(client)
-    wait_for_epoch(client, int(gone.split(b"/")[-3]) + 1, 1)
-    client.delete(gone)  # as its expiry does
-    assert post(logs, ["old", "new"]) == [True, True]
-    assert gone.split(b"/")[-3] not in client.hkeys(seen(logs))
-    assert post(logs, ["old", "new"]) == [False, False]
+    logs = Logs(client, 3, HORIZON)
+    now = client.time()[0]
+    post(logs, named("a", 0, LONG))
+    gone, other = b"%010d2%013d" % (now - 1, 0), b"%010d1%013d" % (now + 100, 0)
+    client.set(seen(logs), gone + other)
+    post(logs, ["new"])
+    assert [level for _, level, _ in groups(logs)] == [1, 1]  # begun as large as the one before
+    assert groups(logs)[0][0] == now + 100
+    assert post(logs, ["new"]) == [False]
 
 
 @pytest.mark.parametrize("days", [1, 7, 9, 90])
 def test_ids_outlive_a_change_of_the_horizon(client, days: int) -> None:
     logs = Logs(client, 3, HORIZON)
-    post(logs, ["a"])
-    assert compact(logs, "a")
+    many = named("a", 0, LONG)
+    post(logs, many)
     post(logs, ["b"])
     changed = Logs(client, 3, days * 86_400)
-    assert post(changed, ["a", "b", "c"]) == [False, False, True]
-    assert post(logs, ["a", "b", "c", "d"]) == [False, False, False, True]
+    assert post(changed, [*many, "b", "c"]) == [False] * LONG + [False, True]
+    assert post(logs, [*many, "b", "c", "d"]) == [False] * LONG + [False, False, True]
+    for i in range(3):
+        assert post(changed, [f"x{i}", f"y{i}", "d"]) == [True, True, False]
+        assert post(logs, [f"x{i}", f"y{i}", f"z{i}"]) == [False, False, True]
+    assert len(groups(logs)) == len({goes for goes, _, _ in groups(logs)}) <= 2
 
 
 @pytest.mark.parametrize(("first", "then"), [(100, 250), (400, 1), (3000, 4000), (399, 8000)])
@@ -93,7 +108,6 @@ def test_ids_are_kept_as_arrays_of_integers(client, first: int, then: int) -> No
     ids = named("a", 0, first + then)
     idents = [10**18 + (i * 0x9E3779B97F4A7C15) % 2**62 for i in range(first + then)]
     post(logs, ids[:first], idents=idents[:first])
-    assert compact(logs, "a")
     for i in range(first, first + then, 1000):
         assert all(post(logs, ids[i : i + 1000], idents=idents[i : i + 1000]))
     assert {client.object("encoding", key) for key in sets(client)} == {b"intset"}
@@ -101,8 +115,8 @@ def test_ids_are_kept_as_arrays_of_integers(client, first: int, then: int) -> No
     assert not any(post(logs, ids, idents=idents))
 
 
-@pytest.mark.parametrize("asked", [1, 16, 17, 60])
-def test_a_log_that_was_never_compacted_knows_its_ids(logs: Logs, client, asked: int) -> None:
+@pytest.mark.parametrize("asked", [1, 15])
+def test_a_short_log_knows_its_ids(logs: Logs, client, asked: int) -> None:
     idents = [2**62 + i * 257 for i in range(asked)]
     ids = named("a", 0, asked)
     assert all(post(logs, ids, idents=idents))
@@ -111,9 +125,10 @@ def test_a_log_that_was_never_compacted_knows_its_ids(logs: Logs, client, asked:
     others = [2**61 + i for i in range(asked)]
     assert all(post(logs, ids, idents=others, amounts=idents))
     assert not any(post(logs, ids, idents=others))
+    assert not sets(client)
 
 
-@pytest.mark.parametrize("asked", [1, 40])
+@pytest.mark.parametrize("asked", [1, 29, 40])
 def test_an_ident_is_no_other_bytes_of_a_log(logs: Logs, asked: int) -> None:
     """An amount, or the end of one field with the beginning of the next, is not an ident."""
     ident = 2**62 + 12345

@@ -13,8 +13,7 @@
 -- ARGV[2]   generation and incarnation that were folded (12 bytes as in the header)
 -- ARGV[3]   records folded: the first row number that the new snapshot does not hold
 -- ARGV[4]   folded records to keep as evidence
--- ARGV[5]   horizon of ids in seconds
--- ARGV[6..] pairs of outbox field and document
+-- ARGV[5..] pairs of outbox field and document
 --
 -- Reply     1, or 0 if the log was compacted or forgotten since
 local tag, key = ARGV[1], KEYS[1]
@@ -27,30 +26,7 @@ local generation = struct.unpack('<I4', string.sub(header, 5, 8))
 local base = struct.unpack('<I8', string.sub(header, 17, 24))
 local new_base = math.max(base, tonumber(ARGV[3]) - tonumber(ARGV[4]))
 local drop = new_base - base
-local log = redis.call('GET', key)
-local path = string.sub(key, #tag + 5)
-
--- Until now duplicates were found in the log itself; from now on in sets of all idents.
-local adds = {}
-if generation == 0 then
-  local function decimal(at)
-    local low, middle, high = 0, 0, 0
-    for b = at + 7, at, -1 do
-      low = low * 256 + string.byte(log, b)
-      middle = middle * 256 + math.floor(low / 1e7)
-      low = low % 1e7
-      high = high * 256 + math.floor(middle / 1e7)
-      middle = middle % 1e7
-    end
-    return string.format('%.0f%07.0f%07.0f', high, middle, low)
-  end
-  for at = 33, #log, 32 do
-    if string.sub(log, at + 8, at + 15) ~= '\0\0\0\0\0\0\0\0' then
-      adds[#adds + 1] = decimal(at + 8)
-    end
-  end
-end
-
+local rest = redis.call('GETRANGE', key, 32 * (drop + 1), -1)
 local ids, skip = nil, 1
 if drop > 0 then
   ids = redis.call('GET', KEYS[4]) or ''
@@ -59,14 +35,10 @@ if drop > 0 then
   end
 end
 
-for k = 6, #ARGV, 2 do redis.call('HSET', KEYS[5], ARGV[k], ARGV[k + 1]) end
+for k = 5, #ARGV, 2 do redis.call('HSET', KEYS[5], ARGV[k], ARGV[k + 1]) end
 redis.call('RENAME', KEYS[3], KEYS[2])
 redis.call('PERSIST', KEYS[2])
 redis.call('SET', key, string.sub(header, 1, 4) .. struct.pack('<I4', generation + 1)
-  .. string.sub(header, 9, 16) .. struct.pack('<I8I8', new_base, tonumber(ARGV[3]))
-  .. string.sub(log, 33 + 32 * drop))
+  .. string.sub(header, 9, 16) .. struct.pack('<I8I8', new_base, tonumber(ARGV[3])) .. rest)
 if ids then redis.call('SET', KEYS[4], string.sub(ids, skip)) end
-if #adds > 0 then
-  remember(tag .. 'seen/' .. path, adds, redis.call('TIME')[1], tonumber(ARGV[5]))
-end
 return 1
