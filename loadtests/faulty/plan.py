@@ -117,7 +117,10 @@ def plan(seed: int, rows: int, prefix: str) -> Plan:
         *_by_id(by_kind["id"], 3, chance),
         *_by_source(by_kind["source"], chance),
         *_by_key(by_kind["key"], 2, chance),
-        [_batch(part, "none", chance) for part in _cut(_mixed(by_kind["none"], chance), chance)],
+        [
+            _batch(part, "none", chance)
+            for part in _cut(_mixed(by_kind["none"], chance), chance, sizes=(1, 2, 3))
+        ],
     ]
     return Plan(everything, posters, identity)
 
@@ -209,10 +212,12 @@ def _mixed(rows: list[Row], chance: random.Random) -> list[Row]:
     return [waiting[stream].pop() for stream in turns]
 
 
-def _cut(rows: list[Row], chance: random.Random) -> list[list[Row]]:
+def _cut(
+    rows: list[Row], chance: random.Random, sizes: tuple[int, ...] = (1, 3, 10, 30, 90)
+) -> list[list[Row]]:
     parts, left = [], rows
     while left:
-        n = chance.choice([1, 3, 10, 30, 90])
+        n = chance.choice(sizes)
         parts.append(left[:n])
         left = left[n:]
     return parts

@@ -136,7 +136,8 @@ def _same_alarms(
         kept = stored[name].crossings
         ordinals = [c.ordinal for c in mine[:FEW_CROSSINGS]]
         ordinals += [last.ordinal] if len(mine) > FEW_CROSSINGS else []
-        require([k["ordinal"] for k in kept] == ordinals, f"alarm {name} lacks crossings")
+        held = [k["ordinal"] for k in kept]
+        require(held == ordinals, f"alarm {name} has crossings {held}, one fold finds {ordinals}")
         for known in kept:
             one = mine[known["ordinal"]]
             require(
