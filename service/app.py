@@ -7,6 +7,7 @@ import os
 from flask import Flask
 
 from service.settings import Settings, SettingsError
+from service.streams.ready import get_ready
 from service.tallies import Tallies
 from service.web import headers, problems
 from service.web.alarms import alarms
@@ -56,6 +57,7 @@ def _opened(settings: Settings) -> Tallies:
     if settings.redis_url is None:
         fault = "TALLYWARD_REDIS_URL is not set; `tallyward serve` starts a store and sets it"
         raise SettingsError([fault])
+    get_ready()
     tallies = Tallies(settings)
     tallies.sweep.start()
     return tallies

@@ -154,8 +154,7 @@ def excess_mad(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
         If counts or p is outside its range.
     """
     c, n, law = checked(counts, p)
-    rows = c.reshape(-1, c.shape[-1])
-    found = _excess_mad(rows, np.broadcast_to(law, c.shape).reshape(rows.shape), _Z95)
+    found = _excess_mad(_rows(c), _rows(np.broadcast_to(law, c.shape)), _Z95)
     return Estimate(*found.reshape(3, *n.shape))
 
 
@@ -167,7 +166,12 @@ def excess_mad_of_rows(counts: npt.NDArray[np.int64], law: FloatArray) -> Estima
     counts : int64 array (n, K)
     law : float64 array (K,)
     """
-    return Estimate(*_excess_mad(counts, np.broadcast_to(law, counts.shape), _Z95))
+    return Estimate(*_excess_mad(_rows(counts), _rows(np.broadcast_to(law, counts.shape)), _Z95))
+
+
+def _rows(values: npt.NDArray[Any]) -> FloatArray:
+    """Return an array as one row a tally, of the one type that the loop is compiled for."""
+    return np.ascontiguousarray(values, np.float64).reshape(-1, values.shape[-1])
 
 
 @compiled

@@ -56,20 +56,27 @@ def window_counts(folded: Folded, slots: IntArray, cells: slice, now: int) -> In
     """
     counts = np.zeros((len(slots), cells.stop - cells.start), np.int64)
     oldest, pages = (now - WINDOW_MS) // BUCKET_MS, folded.pages
-    _sum(folded.state["window"], pages.table, pages.count[:, cells], slots, oldest, counts)
+    _sum(folded.state, pages.table, pages.count, slots, oldest, cells.start, counts)
     return counts
 
 
 @compiled
 def _sum(
-    window: Any, table: Any, count: Any, slots: IntArray, oldest: int, counts: IntArray
+    states: Any,
+    table: Any,
+    count: Any,
+    slots: IntArray,
+    oldest: int,
+    first: int,
+    counts: IntArray,
 ) -> None:
     for i in range(len(slots)):
-        for place in range(window.shape[1]):
+        window = states[slots[i]].window
+        for place in range(len(window)):
             page = table[slots[i], place]
-            if page != 0 and window[slots[i], place] >= oldest:
+            if page != 0 and window[place] >= oldest:
                 for cell in range(counts.shape[1]):
-                    counts[i, cell] += count[page, cell]
+                    counts[i, cell] += count[page, first + cell]
 
 
 def by_own(state: States, view: int) -> npt.NDArray[np.bool_]:
@@ -157,10 +164,13 @@ def excess_of_learned(
         Arrays (...), each 0 to 2/K with low <= value <= high; NaN where span or baseline is empty.
     """
     c, b = np.broadcast_arrays(np.asarray(counts), np.asarray(base))
-    rows = c.reshape(-1, c.shape[-1])
-    within = np.broadcast_to(nested, c.shape[:-1]).reshape(-1)
-    found = _excess_of_learned(rows, b.reshape(rows.shape), within, _Z95)
+    within = np.array(np.broadcast_to(nested, c.shape[:-1]), bool).reshape(-1)
+    found = _excess_of_learned(_rows(c), _rows(b), within, _Z95)
     return Estimate(*found.reshape(3, *c.shape[:-1]))
+
+
+def _rows(counts: npt.NDArray[Any]) -> FloatArray:
+    return np.ascontiguousarray(counts, np.float64).reshape(-1, counts.shape[-1])
 
 
 @compiled
