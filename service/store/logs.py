@@ -32,7 +32,8 @@ _PLACE = np.dtype([("source", "<u2"), ("offset", "<f8")])
 _TEMPORARY_MS = 60_000
 
 
-_HEAD = np.dtype([("header", HEADER), ("rows", "<i8"), ("status", "<u8")])
+_HEAD_WORDS = 6  # format and generation, incarnation, base, folded; rows; status
+_RAW = np.dtype("V32")  # a record that nobody looks into: fields make copying slow
 _COLD, _NEW, _KEPT = 0, 1, 2
 
 
@@ -362,50 +363,50 @@ class Logs:
     def _appended(self, calls: Sequence[Call], replies: Sequence[Any], batch: Batch) -> Appended:
         n = len(batch.streams)
         taken = np.zeros(len(batch.stream), bool)
-        head = np.zeros(n, _HEAD)
+        head = np.zeros((n, _HEAD_WORDS), np.int64)
         known = np.zeros(n, np.int64)
         era = np.zeros(n, np.int64)
         registered = np.zeros(n, bool)
         cold: dict[int, Blobs] = {}
         for call, (mask, heads, _, blobs, trust) in zip(calls, replies, strict=True):
             taken[call.rows] = np.frombuffer(mask, np.uint8) == ord("1")
-            head[call.streams] = np.frombuffer(heads, _HEAD)
+            heads = np.frombuffer(heads, np.int64).reshape(-1, _HEAD_WORDS)
+            head[call.streams] = heads
             known[call.streams] = call.known
             era[call.streams] = self._remember(call, trust)
             registered[call.streams] = trust < 0
-            colds = np.flatnonzero(np.equal(head["status"][call.streams], _COLD)).tolist()
-            pairs = iter(blobs)
-            for i, snapshot, log in zip(colds, pairs, pairs, strict=True):
-                blob = Blobs(call.paths[i], call.partition, snapshot, log)
-                cold[int(call.streams[i])] = blob
-        header = head["header"]
-        kept = np.equal(head["status"], _KEPT)
-        warm = kept | np.equal(head["status"], _NEW)
-        order = np.concatenate([c.streams for c in calls])
-        others = np.where(kept, head["rows"] - known, 0)[order]
+            if blobs:
+                pairs = iter(blobs)
+                for i in np.flatnonzero(np.equal(heads[:, 5], _COLD)).tolist():
+                    blob = Blobs(call.paths[i], call.partition, next(pairs), next(pairs))
+                    cold[int(call.streams[i])] = blob
+        version, incarnation, _, folded, before, status = head.T
+        kept = np.equal(status, _KEPT)
+        warm = np.not_equal(status, _COLD)
+        streams = np.concatenate([c.streams for c in calls])
+        others = np.where(kept, before - known, 0)[streams]
         rows = np.concatenate([c.rows for c in calls])
-        mine = taken[rows] & warm[batch.stream[rows]]
-        slot = np.concatenate([np.repeat(order, others), batch.stream[rows[mine]]])
-        records = np.frombuffer(
-            b"".join([r[2] for r in replies])
-            + np.concatenate([c.records for c in calls])[mine].tobytes(),
-            RECORD,
-        )
+        stream = batch.stream[rows]
+        mine = taken[rows] & warm[stream]
+        slot = np.concatenate([np.repeat(streams, others), stream[mine]])
+        tails = b"".join([reply[2] for reply in replies])
+        own = np.frombuffer(b"".join([c.records.tobytes() for c in calls]), _RAW)[mine]
+        records = np.frombuffer(tails + own.tobytes(), _RAW)
         by_stream = np.argsort(slot, kind="stable")
         count = np.bincount(batch.stream[taken], minlength=n)
         return Appended(
             taken=taken,
-            first=np.where(count > 0, head["rows"], -1),
+            first=np.where(count > 0, before, -1),
             count=count,
-            incarnation=header["incarnation"],
-            generation=header["generation"].astype(np.int64),
-            folded=header["folded"].astype(np.int64),
+            incarnation=incarnation.astype(np.uint64),
+            generation=version >> 32,
+            folded=folded,
             start=np.where(kept, known, np.where(warm, 0, -1)),
-            records=records[by_stream],
+            records=records[by_stream].view(RECORD),
             slot=slot[by_stream],
             cold=cold,
             era=era,
-            may_keep=~registered & (head["rows"] + count > 0),
+            may_keep=~registered & (before + count > 0),
             calls=calls,
         )
 
@@ -527,7 +528,7 @@ def _first_of_each(batch: Batch, order: IntArray) -> IntArray:
     """Return the places in ``order`` whose row does not repeat an ident of its stream."""
     ident = batch.ident[order]
     named = np.flatnonzero(ident)
-    if len(np.unique(ident[named])) == len(named):
+    if len(set(ident[named].tolist())) == len(named):
         return np.arange(len(order))
     pairs = np.rec.fromarrays([batch.stream[order[named]], ident[named]])
     first = named[np.unique(pairs, return_index=True)[1]]

@@ -9,7 +9,7 @@ from importlib.resources import files
 from typing import Any
 
 import redis
-from redis.exceptions import NoScriptError, RedisError
+from redis.exceptions import NoScriptError, RedisError, ResponseError
 
 Argument = str | bytes | int
 Command = tuple[Argument, ...]
@@ -68,12 +68,22 @@ def run(client: redis.Redis, groups: Sequence[Sequence[Command]]) -> list[list[R
 
 
 def _send(client: redis.Redis, groups: Sequence[Sequence[Command]]) -> list[list[Reply]]:
-    pipe: Any = client.pipeline(transaction=False)
-    for group in groups:
-        for command in group:
-            pipe.execute_command(*command)
-    flat = iter(pipe.execute(raise_on_error=False))
-    return [[next(flat) for _ in group] for group in groups]
+    """Do what the client's pipeline does, without its bookkeeping."""
+    pool: Any = client.connection_pool
+    connection = pool.get_connection()
+    try:
+        packed = connection.pack_commands([command for group in groups for command in group])
+        connection.send_packed_command(packed)
+        return [[_reply(client, connection, command) for command in group] for group in groups]
+    finally:
+        pool.release(connection)
+
+
+def _reply(client: Any, connection: Any, command: Command) -> Reply:
+    try:
+        return client.parse_response(connection, command[0])
+    except ResponseError as error:
+        return error
 
 
 def _lost(reply: Reply) -> bool:
