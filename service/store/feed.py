@@ -153,8 +153,14 @@ class Feed:
         if outgoing:
             self.client.hdel(partition.outbox, *(c.field for c in outgoing))
 
+    def empty(self, partition: Partition) -> None:
+        """Publish what a partition's outbox holds."""
+        left = self.left(partition)
+        if left:
+            self.publish(partition, left)
+
     def left(self, partition: Partition) -> list[Outgoing]:
-        """Return what an outbox still holds, after a worker died between its two steps."""
+        """Return what an outbox holds."""
         boxed: Any = self.client.hvals(partition.outbox)
         return [Outgoing.unboxed(b) for b in boxed]
 

@@ -96,7 +96,6 @@ class Judge:
             raise
         except Exception:  # one of them cannot be folded; which one, the slow way finds out
             return self.judge(tenant, self.logs.read(self.logs.located(tenant, streams)))
-        warm.keep(slots, appended)
         judged = Judged(list(range(len(streams))), streams, folded, slots, crossings)
 
         def place(i: int) -> Place:
@@ -104,6 +103,7 @@ class Judge:
             return _place(home, warm.names[slots[i]].decode(), appended, i)
 
         self._settle(tenant, judged, place, folded.state["records"][slots] - appended.folded)
+        warm.keep(slots, appended)  # not before its crossings are put down
         return judged
 
     def _judged(
@@ -197,29 +197,13 @@ class Judge:
             judged.folded.state["records"][slots].tolist(),
             [{o.field: o.boxed() for o in outgoing.get(i, ())} for i in due],
         )
-        told: dict[Partition, list[Outgoing]] = {}
-        lost = []
-        for i, at, ok in zip(due, places, won, strict=True):
-            if i not in outgoing:
-                continue
-            if ok:
-                told.setdefault(at.partition, []).extend(outgoing[i])
-            else:
-                lost.append(at)
-        for partition, crossings in told.items():
-            self.feed.publish(partition, crossings)
-        self._crossed_elsewhere(tenant, lost)
-
-    def _crossed_elsewhere(self, tenant: str, lost: Sequence[Place | Blobs]) -> None:
-        """See to crossings whose streams another worker compacted first.
-
-        It may have read fewer rows than we did, or not have published yet.
-        """
-        if not lost:
-            return
-        self.judge(tenant, self.logs.read([(b.partition, b.path) for b in lost]))
-        for partition in {b.partition for b in lost}:
-            self.feed.publish(partition, self.feed.left(partition))
+        # A crossing whose stream another worker compacted first is told by whoever folds what that
+        # one left: it may have read fewer rows than we did.
+        lost = [at for i, at, ok in zip(due, places, won, strict=True) if i in outgoing and not ok]
+        if lost:
+            self.judge(tenant, self.logs.read([(at.partition, at.path) for at in lost]))
+        for partition in {places[k].partition for k, i in enumerate(due) if i in outgoing}:
+            self.feed.empty(partition)
 
 
 def _unfolded(folded: Folded, slots: IntArray, appended: Appended) -> tuple[Records, IntArray]:

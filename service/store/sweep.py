@@ -105,9 +105,7 @@ class Sweep:
 
     def sweep(self, partition: Partition) -> None:
         """Finish what is left in one partition."""
-        left = self.feed.left(partition)
-        if left:
-            self.feed.publish(partition, left)
+        self.feed.empty(partition)
         self._judge_late(partition)
         self._retry_quarantined(partition)
         self.directory.refresh(partition, now=time.time_ns() // 1_000_000)
