@@ -192,7 +192,6 @@ def test_crossings_whose_compaction_was_lost_are_told(
     assert [c["ordinal"] for c in stored] == list(range(len(stored)))
 
 
-@pytest.mark.xfail(strict=True, reason="a state is kept before its crossings are put down")
 @pytest.mark.parametrize("then", ["crosses again", "grows long"])
 def test_crossings_that_could_not_be_put_down_are_told(
     tallies: Tallies, hire: Hire, monkeypatch: pytest.MonkeyPatch, then: str
