@@ -63,11 +63,11 @@ end
 
 local before = call('HGET', calls, token)
 if before then
-  local mask, ends = unpack(cmsgpack.unpack(before))
+  local mask, row = unpack(cmsgpack.unpack(before))
   local blobs, heads = blobs_of(KEYS), {}
   for i = 1, n do
     local log = blobs[2 * i] or string.rep('\0', 32)
-    heads[i] = sub(log, 1, 32) .. sub(ends, 8 * i - 7, 8 * i) .. COLD
+    heads[i] = sub(log, 1, 32) .. struct.pack('<i8', row[i]) .. COLD
   end
   return {mask, table.concat(heads), '', blobs, -1}
 end
@@ -178,7 +178,7 @@ local function seen_before(path, log, index, from, to)
   return known
 end
 
-local mask, heads, ends, tails, cold = {}, {}, {}, {}, {}
+local mask, heads, tails, cold = {}, {}, {}, {}
 local rows_before, logs, indices, knowns, chunks, id_chunks = {}, {}, {}, {}, {}, {}
 local from, id = 1, 1
 for i = 1, n do
@@ -201,8 +201,8 @@ for i = 1, n do
       cold[#cold + 1] = KEYS[i]
     end
   end
-  rows_before[i], logs[i], indices[i], ends[i] = row, log, index, struct.pack('<i8', row)
-  heads[i] = header .. ends[i] .. status
+  rows_before[i], logs[i], indices[i] = row, log, index
+  heads[i] = header .. struct.pack('<i8', row) .. status
 
   local known = seen_before(paths[i], log, index, from, to)
   if not known then
@@ -261,7 +261,7 @@ for i = 1, n do
   from = from + rows_of[i]
 end
 local joined = table.concat(mask)
-call('HSET', calls, token, cmsgpack.pack({joined, table.concat(ends), paths}))
+call('HSET', calls, token, cmsgpack.pack({joined, rows_before, paths}))
 call('ZADD', pending, now * 1000 + math.floor(time[2] / 1000), token)
 for k = 1, #dirty, 4000 do
   call('HSET', tag .. 'dirty', unpack(dirty, k, math.min(k + 3999, #dirty)))
