@@ -149,9 +149,10 @@ class Traffic:
 def bodies(
     rng: np.random.Generator, count: int, rows: int, merchants: int, now: int
 ) -> Iterator[bytes]:
-    """Yield distinct JSON bodies of a busy poster, of the present."""
+    """Yield distinct JSON bodies of a busy poster; ``now`` is in milliseconds since 1970 UTC."""
     traffic = Traffic(rng, merchants)
-    yield from traffic.batches(traffic.zipf(count * rows), rows)
+    past = (time.time() - now / 1000) / DAY
+    return traffic.batches(traffic.zipf(count * rows), rows, until=past)
 
 
 def main() -> None:

@@ -17,7 +17,7 @@ import numpy as np
 
 from loadtests.bodies import Traffic
 from loadtests.contest import TALLYWARD, running, store
-from loadtests.report import facts, short, table
+from loadtests.report import facts, short, show
 from loadtests.series import Series
 from loadtests.speed import ENTRIES
 
@@ -52,7 +52,12 @@ def main() -> None:
         f"{given.merchants} merchants, {given.share:.0%} of a batch is one merchant's. "
         "CPU: µs a row.\n"
     )
-    said: list[list[str]] = []
+    heads = ["load", "rows a batch", "rows/s", "p50 ms", "p99 ms", "CPU workers", "CPU store"]
+    show([*heads, "rows/s ÷ spread"], lines(given))
+
+
+def lines(given: argparse.Namespace) -> Iterator[list[str]]:
+    """Measure, and yield the lines of the table."""
     traffic = Traffic(np.random.default_rng(given.seed), given.merchants)
     with (
         tempfile.TemporaryDirectory() as base,
@@ -76,17 +81,17 @@ def main() -> None:
                     loads[one].measure(given.seconds)
             pairs = zip(loads[True].runs, loads[False].runs, strict=True)
             ratio = float(np.median([hot.rate / spread.rate for hot, spread in pairs]))
+            told = f"{ratio:.0%} ({'meets' if ratio >= BAR else 'BELOW'} {BAR:.0%})"
             for one, name in ((False, "spread"), (True, "hot")):
                 median = loads[one].median()
-                told = (
-                    ""
-                    if not one
-                    else f"{ratio:.0%} ({'meets' if ratio >= BAR else 'BELOW'} {BAR:.0%})"
-                )
                 figures = (median.p50, median.p99, median.workers, median.store)
-                said.append([name, f"{rows}", f"{median.rate:,.0f}", *map(short, figures), told])
-    heads = ["load", "rows a batch", "rows/s", "p50 ms", "p99 ms", "CPU workers", "CPU store"]
-    print(table([*heads, "rows/s ÷ spread"], said))
+                yield [
+                    name,
+                    f"{rows}",
+                    f"{median.rate:,.0f}",
+                    *map(short, figures),
+                    told if one else "",
+                ]
 
 
 if __name__ == "__main__":

@@ -21,7 +21,7 @@ import redis
 
 from loadtests.bodies import Traffic
 from loadtests.contest import TALLYWARD, running, store
-from loadtests.report import facts, table
+from loadtests.report import facts, show
 from loadtests.wrk import Stock
 
 KINDS = ("log", "snap", "ids", "seen", "marks", "of", "dir")
@@ -158,8 +158,8 @@ def main() -> None:
         "`used_memory` is all that the store takes more, ids and allocator included.\n"
     )
     heads = ["streams of", "how many", "used_memory", "ids apart", *(f"{name}/" for name in KINDS)]
-    said = [line(kind, *measure(kind, given.seed)) for kind in (QUICK if given.quick else FULL)]
-    print(table([*heads, "other keys"], said))
+    kinds = QUICK if given.quick else FULL
+    show([*heads, "other keys"], (line(kind, *measure(kind, given.seed)) for kind in kinds))
 
 
 if __name__ == "__main__":

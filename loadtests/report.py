@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import os
 import platform
 import re
@@ -35,10 +36,10 @@ def facts(name: str) -> str:
     return "\n".join(f"- {key}: {value}" for key, value in about.items())
 
 
-def table(heads: Sequence[str], rows: Iterable[Sequence[str]]) -> str:
-    """Return a Markdown table whose first column is text."""
-    lines = [heads, ["--", *["--:"] * (len(heads) - 1)], *rows]
-    return "\n".join(f"| {' | '.join(line)} |" for line in lines)
+def show(heads: Sequence[str], rows: Iterable[Sequence[str]]) -> None:
+    """Print a Markdown table whose first column is text, each row as soon as it is known."""
+    for line in itertools.chain((heads, ["--", *["--:"] * (len(heads) - 1)]), rows):
+        print(f"| {' | '.join(line)} |", flush=True)
 
 
 def short(value: float) -> str:

@@ -16,12 +16,13 @@ import numpy as np
 
 from loadtests.bodies import Traffic
 from loadtests.contest import Server
-from loadtests.report import facts, short, table
+from loadtests.report import facts, short, show
 from loadtests.series import Series
 from loadtests.speed import ENTRIES, HISTORY, STEADY, batches, warm
 from loadtests.wrk import Stock
 
 LOADED = 5000  # rows a batch while loading
+LOADERS = 4  # connections; a worker takes such batches one at a time
 LOADED_AT_ONCE = 1_000_000  # rows
 HISTORY_DAYS = 30.0
 
@@ -30,7 +31,7 @@ def load(server: Server, batches_of_rows: Iterator[bytes], folder: Path, query: 
     """Post batches over several connections."""
     stock = Stock(folder / "loading")
     stock.fill(batches_of_rows)
-    server.post(stock, query)
+    server.post(stock, query, LOADERS)
 
 
 def add_streams(server: Server, seed: int, have: int, want: int, folder: Path) -> None:
@@ -74,48 +75,50 @@ def main() -> None:
         f"connections, {given.merchants} merchants by Zipf's law, baselines learned, "
         "reply=merchants. CPU: µs a row.\n"
     )
-    said: list[list[str]] = []
+    heads = ["stored", "store MiB", "rows a batch", "rows/s", "p50 ms", "p99 ms"]
+    show([*heads, "CPU workers", "CPU store", "CPU both"], lines(given))
+
+
+def lines(given: argparse.Namespace) -> Iterator[list[str]]:
+    """Fill the store step by step, and yield the lines of the table."""
     with (
         tempfile.TemporaryDirectory() as base,
         warm(STEADY, given.merchants, given.seed, Path(base)) as (server, traffic),
     ):
-        folder = Path(base)
-
-        def measure(stored: str) -> None:
-            series = {
-                rows: Series(
-                    server,
-                    partial(batches, traffic, rows),
-                    folder / f"{rows}",
-                    query="?reply=merchants",
-                    connections=given.connections,
-                    wanted=ENTRIES,
-                )
-                for rows in given.sizes
-            }
-            for _ in range(given.rounds):
-                for runs in series.values():
-                    runs.measure(given.seconds)
-            memory = server.store.info("memory")["used_memory"] / 2**20
-            for rows, runs in series.items():
-                median = runs.median()
-                figures = (median.p50, median.p99, median.workers, median.store, median.both)
-                said.append(
-                    [stored, f"{memory:,.0f}", f"{rows}", f"{median.rate:,.0f}"]
-                    + [short(figure) for figure in figures]
-                )
-
-        have = 0
+        folder, have = Path(base), 0
         for want in given.streams:
             add_streams(server, given.seed, have, want, folder)
-            server.settle()
-            measure(f"{want:,} other streams")
+            yield from measure(server, traffic, given, folder, f"{want:,} other streams")
             have = want
         add_history(server, traffic, given.history, folder)
-        server.settle()
-        measure(f"and {given.history:,} rows of history")
-    heads = ["stored", "store MiB", "rows a batch", "rows/s", "p50 ms", "p99 ms"]
-    print(table([*heads, "CPU workers", "CPU store", "CPU both"], said))
+        stored = f"and {given.history:,} rows of history"
+        yield from measure(server, traffic, given, folder, stored)
+
+
+def measure(
+    server: Server, traffic: Traffic, given: argparse.Namespace, folder: Path, stored: str
+) -> Iterator[list[str]]:
+    """Measure every batch size in turn, once the service has caught up."""
+    server.settle()
+    series = {
+        rows: Series(
+            server,
+            partial(batches, traffic, rows),
+            folder / f"{rows}",
+            query="?reply=merchants",
+            connections=given.connections,
+            wanted=ENTRIES,
+        )
+        for rows in given.sizes
+    }
+    for _ in range(given.rounds):
+        for runs in series.values():
+            runs.measure(given.seconds)
+    memory = server.store.info("memory")["used_memory"] / 2**20
+    for rows, runs in series.items():
+        median = runs.median()
+        figures = (median.p50, median.p99, median.workers, median.store, median.both)
+        yield [stored, f"{memory:,.0f}", f"{rows}", f"{median.rate:,.0f}", *map(short, figures)]
 
 
 if __name__ == "__main__":

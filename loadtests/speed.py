@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import itertools
 import tempfile
 from collections import Counter
 from collections.abc import Callable, Iterator
@@ -20,7 +21,7 @@ import numpy as np
 
 from loadtests.bodies import Traffic
 from loadtests.contest import FLOOR, PLAIN, PLAIN_SCIPY, TALLYWARD, Server, running, store
-from loadtests.report import facts, short, table
+from loadtests.report import facts, short, show
 from loadtests.series import Figures, Series
 from loadtests.wrk import Stock
 
@@ -62,7 +63,7 @@ def warm(
             stock = Stock(folder / "history")
             who = traffic.dealt(contestant.each)
             stock.fill(traffic.batches(who, 5000, days=contestant.days))
-            server.post(stock, HISTORY if contestant.is_tallyward else "")
+            server.post(stock, HISTORY if contestant.is_tallyward else "", connections=4)
             stock.path.unlink()
         yield server, traffic
 
@@ -107,6 +108,31 @@ def lines(rows: int, series: dict[Contestant, Series]) -> Iterator[list[str]]:
         ]
 
 
+def compare(
+    servers: dict[Contestant, tuple[Server, Traffic]],
+    rows: int,
+    given: argparse.Namespace,
+    folder: Path,
+) -> Iterator[list[str]]:
+    """Measure all contestants by turns, and yield their lines of the table."""
+    series = {
+        contestant: Series(
+            server,
+            partial(batches, traffic, rows),
+            folder / f"{number}" / "bodies",
+            query="?reply=merchants",
+            connections=given.connections,
+            wanted="" if contestant == BASE else ENTRIES,
+            keeps_nothing=contestant == BASE,
+        )
+        for number, (contestant, (server, traffic)) in enumerate(servers.items())
+    }
+    for turn in range(given.rounds):
+        for place in range(len(CONTESTANTS)):
+            series[CONTESTANTS[(place + turn) % len(CONTESTANTS)]].measure(given.seconds)
+    yield from lines(rows, series)
+
+
 def main() -> None:
     """Print one table."""
     parser = argparse.ArgumentParser(description=__doc__)
@@ -144,33 +170,17 @@ def main() -> None:
                     f" days were posted before; then {standings(server)}.",
                     flush=True,
                 )
-        said: list[list[str]] = []
-        for rows in given.sizes:
-            series = {
-                contestant: Series(
-                    server,
-                    partial(batches, traffic, rows),
-                    base / f"{number}" / "bodies",
-                    query="?reply=merchants",
-                    connections=given.connections,
-                    wanted="" if contestant == BASE else ENTRIES,
-                    keeps_nothing=contestant == BASE,
-                )
-                for number, (contestant, (server, traffic)) in enumerate(servers.items())
-            }
-            for turn in range(given.rounds):
-                for place in range(len(CONTESTANTS)):
-                    series[CONTESTANTS[(place + turn) % len(CONTESTANTS)]].measure(given.seconds)
-            said += lines(rows, series)
+        heads = ["rows a batch", "", "rows/s", "p50 ms", "p99 ms"]
+        heads += ["CPU workers", "CPU store", "CPU both"]
+        others = ("floor", "SciPy", "own")
+        heads += [f"{what} ÷ {other}" for what in ("rows/s", "CPU") for other in others]
+        print()
+        show(heads, itertools.chain(*(compare(servers, rows, given, base) for rows in given.sizes)))
+        print()
         for contestant, (server, _) in servers.items():
             if contestant.is_tallyward:
                 server.settle()
                 print(f"{contestant.name}, at the end: {standings(server)}.")
-    heads = ["rows a batch", "", "rows/s", "p50 ms", "p99 ms"]
-    heads += ["CPU workers", "CPU store", "CPU both"]
-    others = ("floor", "SciPy", "own")
-    heads += [f"{what} ÷ {other}" for what in ("rows/s", "CPU") for other in others]
-    print(f"\n{table(heads, said)}")
 
 
 if __name__ == "__main__":

@@ -16,6 +16,7 @@ from pathlib import Path
 import msgspec
 import numpy as np
 
+from loadtests.bodies import bodies
 from service.batches.limits import Defaults, Limits
 from service.batches.read import read_batch
 from service.settings import Settings
@@ -23,30 +24,6 @@ from service.store.embedded import EmbeddedStore
 from service.store.keys import path
 from service.streams.entries import entries
 from service.tallies import Tallies
-
-
-def bodies(rng: np.random.Generator, count: int, rows: int, merchants: int, now: int):
-    """Yield distinct JSON bodies of law-like amounts."""
-    weight = 1 / np.arange(1, merchants + 1)
-    weight /= weight.sum()
-    at = time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(now / 1000))
-    for b in range(count):
-        who = rng.choice(merchants, rows, p=weight)
-        amounts = (10 ** rng.uniform(2, 6, rows)).astype(int)
-        yield msgspec.json.encode(
-            {
-                "transactions": [
-                    {
-                        "id": f"pay-{b:06d}-{i:05d}",
-                        "merchant": f"merchant-{who[i]:04d}",
-                        "amount": int(amounts[i]),
-                        "currency": "EUR",
-                        "at": at,
-                    }
-                    for i in range(rows)
-                ]
-            }
-        )
 
 
 def measure(rows: int, merchants: int, rounds: int, seed: int) -> dict[str, list[float]]:

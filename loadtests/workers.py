@@ -18,7 +18,7 @@ import numpy as np
 
 from loadtests.bodies import Traffic
 from loadtests.contest import TALLYWARD, running, store
-from loadtests.report import facts, short, table
+from loadtests.report import facts, short, show
 from loadtests.series import Figures, Series, medians
 from loadtests.speed import ENTRIES, HISTORY, STEADY, batches
 from loadtests.wrk import Stock
@@ -63,7 +63,7 @@ def main() -> None:
         with running(TALLYWARD, url) as server:
             stock = Stock(folder / "history")
             stock.fill(traffic.batches(traffic.dealt(STEADY.each), 5000, days=STEADY.days))
-            server.post(stock, HISTORY)
+            server.post(stock, HISTORY, connections=4)
         order = list(settings(given.classes, given.workers, given.threads))
         for _ in range(given.rounds):
             for setting in order:
@@ -93,7 +93,7 @@ def main() -> None:
     heads = ["class", "workers", "threads"]
     for rows in given.sizes:
         heads += [f"{rows} a batch: rows/s", "p99 ms", "CPU µs a row"]
-    print(table(heads, said))
+    show(heads, said)
 
 
 if __name__ == "__main__":
