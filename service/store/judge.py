@@ -13,7 +13,7 @@ from redis.exceptions import RedisError
 from service.digits.significand import IntArray
 from service.store.catalogue import Catalogue
 from service.store.feed import Feed, Outgoing
-from service.store.keys import Partition, stream_of
+from service.store.keys import stream_of
 from service.store.loading import load
 from service.store.logs import COMPACT_ROWS, Appended, Blobs, Logs, Place
 from service.store.warm import Warm
@@ -99,11 +99,16 @@ class Judge:
         judged = Judged(list(range(len(streams))), streams, folded, slots, crossings)
 
         def place(i: int) -> Place:
-            home = self.logs.partition(tenant, streams[i].merchant)
-            return _place(home, warm.names[slots[i]].decode(), appended, i)
+            home, name = self.logs.partition(tenant, streams[i].merchant), warm.names[slots[i]]
+            generation, incarnation = int(appended.generation[i]), int(appended.incarnation[i])
+            version = generation.to_bytes(4, "little") + incarnation.to_bytes(8, "little")
+            last = records[np.flatnonzero(np.equal(slot, slots[i]))[-1]].tobytes()
+            return Place(name.decode(), home, version, last)
 
-        self._settle(tenant, judged, place, folded.state["records"][slots] - appended.folded)
-        warm.keep(slots, appended)  # not before its crossings are put down
+        moved = np.isin(slots, slot)  # of the others the last record is not at hand
+        tail = np.where(moved, folded.state["records"][slots] - appended.folded, 0)
+        compacted = self._settle(tenant, judged, place, tail)
+        warm.keep(slots, appended, compacted)  # not before its crossings are put down
         return judged
 
     def _judged(
@@ -167,8 +172,10 @@ class Judge:
         judged: Judged,
         place: Callable[[int], Place | Blobs],
         tail: IntArray,
-    ) -> None:
+    ) -> list[int]:
         """Compact streams with a crossing or a long tail, then publish the crossings.
+
+        Returns the positions of those that were compacted.
 
         Parameters
         ----------
@@ -189,7 +196,7 @@ class Judge:
                     mine.append(Outgoing.of(place(position[c.slot]).path, c))
             due = sorted(outgoing.keys() | due)
         if not due:
-            return
+            return []
         slots, places = judged.slots[due], [place(i) for i in due]
         won = self.logs.compact(
             places,
@@ -204,6 +211,7 @@ class Judge:
             self.judge(tenant, self.logs.read([(at.partition, at.path) for at in lost]))
         for partition in {places[k].partition for k, i in enumerate(due) if i in outgoing}:
             self.feed.empty(partition)
+        return [i for i, ok in zip(due, won, strict=True) if ok]
 
 
 def _unfolded(folded: Folded, slots: IntArray, appended: Appended) -> tuple[Records, IntArray]:
@@ -220,9 +228,3 @@ def _unfolded(folded: Folded, slots: IntArray, appended: Appended) -> tuple[Reco
         records = np.concatenate([records, loaded.records])
         slot = np.concatenate([slot, loaded.slot])
     return records, slot
-
-
-def _place(partition: Partition, path: str, appended: Appended, i: int) -> Place:
-    generation, incarnation = int(appended.generation[i]), int(appended.incarnation[i])
-    version = generation.to_bytes(4, "little") + incarnation.to_bytes(8, "little")
-    return Place(path, partition, version)

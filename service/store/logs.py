@@ -47,12 +47,15 @@ class Known:
         0 where nothing is kept.
     records : int64 array
         Log records folded.
+    generation : int64 array
+        Compactions of the log that the worker knows of.
     era : int64 array
         `Appended.era` when it was kept.
     """
 
     incarnation: npt.NDArray[np.uint64]
     records: IntArray
+    generation: IntArray
     era: IntArray
 
 
@@ -91,12 +94,18 @@ class Call:
 class Place:
     """A stream in the store, as it was folded.
 
-    ``version`` is its log's generation and incarnation, 12 bytes as in the header.
+    Attributes
+    ----------
+    version : bytes
+        Generation and incarnation of its log, 12 bytes as in the header.
+    last : bytes
+        The last record folded.
     """
 
     path: str
     partition: Partition
     version: bytes
+    last: bytes
 
 
 @dataclass(frozen=True)
@@ -112,6 +121,11 @@ class Blobs:
     def version(self) -> bytes:
         """Generation and incarnation of the log."""
         return (self.log or b"")[4:16]
+
+    @property
+    def last(self) -> bytes:
+        """The log's last record."""
+        return (self.log or b"")[-RECORD.itemsize :]
 
 
 @dataclass
@@ -266,11 +280,12 @@ class Logs:
         id_bytes = np.add.reduceat(np.fromiter(map(len, texts), np.int64, len(texts)), edges[:-1])
         incarnations = np.zeros((n, 2), np.uint64)
         incarnations[:, 0] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
-        folded = np.zeros(n, np.int64)
+        folded, generation = np.zeros(n, np.int64), np.zeros(n, np.int64)
         if known is not None:
             current = known.era == self._era[home]
             incarnations[:, 1] = np.where(current, known.incarnation, 0)[by_home]
-            folded = known.records[by_home]
+            folded, generation = known.records[by_home], known.generation[by_home]
+        by_stream = (rows_of, id_bytes, folded, generation)
         sources = msgspec.msgpack.encode(batch.sources)
         out: list[Call] = []
         for a, b in pairwise(self._cuts(home[by_home], edges)):
@@ -286,7 +301,7 @@ class Logs:
                     partition.tag,
                     token,
                     self._take_judged(p),
-                    msgspec.msgpack.encode([c[a:b].tolist() for c in (rows_of, id_bytes, folded)]),
+                    msgspec.msgpack.encode([column[a:b].tolist() for column in by_stream]),
                     incarnations[a:b].tobytes(),
                     records[rows].tobytes(),
                     decimals(batch.ident[order[rows]]),
@@ -473,6 +488,7 @@ class Logs:
                 place.version,
                 count,
                 EVIDENCE_ROWS,
+                place.last,
             ]
             for field, document in crossings.items():
                 arguments += [field, document]

@@ -46,6 +46,7 @@ class Warm:
         self.names = [b""] * room
         self._slots: OrderedDict[str, int] = OrderedDict()  # least recently used first
         self._era = np.full(room, NOTHING)
+        self._generation = np.zeros(room, np.int64)
         self._lock = threading.Lock()
 
     @contextmanager
@@ -84,11 +85,19 @@ class Warm:
         """Return what is kept in slots."""
         state, era = self.folded.state, self._era[slots]
         incarnation = np.where(era == NOTHING, np.uint64(0), state["incarnation"][slots])
-        return Known(incarnation, state["records"][slots], era)
+        return Known(incarnation, state["records"][slots], self._generation[slots], era)
 
-    def keep(self, slots: IntArray, appended: Appended) -> None:
-        """Keep what was folded from an append, where it may be kept."""
+    def keep(self, slots: IntArray, appended: Appended, compacted: Sequence[int]) -> None:
+        """Keep what was folded from an append, where it may be kept.
+
+        Parameters
+        ----------
+        compacted : sequence of int
+            Streams, by position, whose logs were compacted with what was folded.
+        """
         self._era[slots] = np.where(appended.may_keep, appended.era, NOTHING)
+        self._generation[slots] = appended.generation
+        self._generation[slots[list(compacted)]] += 1
 
     def drop(self, slots: IntArray) -> None:
         """Keep nothing in slots whose states may be half done."""

@@ -15,27 +15,27 @@ from service.store.errors import Unavailable
 from service.store.keys import path
 from service.store.loading import kept_records, load
 from service.store.logs import Appended, Known, Logs
-from service.streams.record import Stream
+from service.streams.record import HEADER, Stream
 from tests.scenarios.running import StoreServer
 from tests.store.batches import NOW, batch
 from tests.store.workers import HORIZON, blobs_of, compact
 
 
 class Worker:
-    """Appends, and keeps what may be kept: incarnation, records folded and era by merchant."""
+    """Appends, and keeps by merchant what may be kept, in the order of `Known`."""
 
     def __init__(self, client: redis.Redis, partitions: int = 1, **settings: int) -> None:
         self.logs = Logs(client, partitions, HORIZON, **settings)
-        self.kept: dict[str, tuple[int, int, int]] = {}
+        self.kept: dict[str, tuple[int, int, int, int]] = {}
 
     def post(self, merchants, amounts, **columns) -> Appended:
         return self.append(*self.pack(merchants, amounts, **columns))
 
     def pack(self, merchants, amounts, **columns):
         rows = batch(merchants, amounts, **columns)
-        kept = [self.kept.get(s.merchant, (0, 0, 0)) for s in rows.streams]
-        incarnation, records, era = zip(*kept, strict=True)
-        known = Known(np.array(incarnation, np.uint64), np.array(records), np.array(era))
+        kept = [self.kept.get(s.merchant, (0, 0, 0, 0)) for s in rows.streams]
+        incarnation, *others = zip(*kept, strict=True)
+        known = Known(np.array(incarnation, np.uint64), *map(np.array, others))
         versions = [1] * len(rows.streams)
         calls = self.logs.calls("main", rows, versions, now=NOW, historic=False, known=known)
         return calls, rows
@@ -53,6 +53,7 @@ class Worker:
                 self.kept[stream.merchant] = (
                     int(done.incarnation[i]),
                     start + records,
+                    int(done.generation[i]),
                     int(done.era[i]),
                 )
         return done
@@ -137,8 +138,8 @@ def test_a_state_older_than_the_log_is_void(client) -> None:
 def test_a_state_that_is_ahead_of_its_log_is_void(client) -> None:
     worker = Worker(client)
     worker.post(["a"], [1])
-    incarnation, _, era = worker.kept["a"]
-    worker.kept["a"] = incarnation, 2, era
+    incarnation, _, generation, era = worker.kept["a"]
+    worker.kept["a"] = incarnation, 2, generation, era
     assert unfolded(worker.post(["a"], [2])) is None
 
 
@@ -279,3 +280,17 @@ def test_a_log_as_read_names_its_stream(client) -> None:
     done = worker.post(["a"], [2])
     assert done.cold[0].path == path("main", Stream("a", "sale", "EUR"))
     assert done.cold[0].version == done.cold[0].log[4:16]
+
+
+def test_a_compaction_that_was_lost_makes_a_state_cold(client) -> None:
+    """A crossing may have been told with it, and be known to nobody now."""
+    worker, other = Worker(client), Worker(client)
+    worker.post(["a"] * 40, list(range(1, 41)))
+    key = worker.logs.partitions[0].log("main/a/sale/EUR")
+    before = client.get(key)
+    assert compact(other.logs, "a")
+    assert unfolded(worker.post(["a"], [50])) == [50]  # which knows of the compaction now
+    rows = kept_records(client.get(key))
+    header = np.frombuffer(before[: HEADER.itemsize], HEADER)
+    client.set(key, header.tobytes() + rows.tobytes())
+    assert unfolded(worker.post(["a"], [60])) is None

@@ -9,13 +9,15 @@
 -- What a worker keeps of a stream is trusted while the partition remembers that worker's previous
 -- call: a store that lost its last writes forgets it, even where row numbers match again. A call
 -- that is not trusted is remembered under another name, so that the calls sent along with it are
--- not trusted either.
+-- not trusted either. A lost compaction, which may have told of a crossing, shows in the log's
+-- generation.
 --
 -- KEYS[i]   log of stream i, i = 1..n ("{tag}log/<path>"); all other keys lie under the same tag
 -- ARGV[1]   tag
 -- ARGV[2]   this call
 -- ARGV[3]   calls judged since, 16 bytes each, to be forgotten
--- ARGV[4]   by stream (msgpack list of three): rows, bytes of ids, records that the worker folded
+-- ARGV[4]   by stream (msgpack list of four): rows, bytes of ids, records that the worker folded, and
+--           the log's generation that it knows of
 -- ARGV[5]   by stream: its incarnation if it is new, the one that the worker keeps or zeros (u64)
 -- ARGV[6]   records, 32 bytes a row, streams in the order of KEYS; no ident twice in a stream
 -- ARGV[7]   idents in decimal, 19 characters a row
@@ -39,7 +41,7 @@ local COLD, NEW, KEPT = '\0\0\0\0\0\0\0\0', '\1\0\0\0\0\0\0\0', '\2\0\0\0\0\0\0\
 local NONE, NO_IDENT = string.rep('\0', 8), string.rep('0', 19)
 
 local tag, token = ARGV[1], ARGV[2]
-local rows_of, id_bytes, folded_of = unpack(cmsgpack.unpack(ARGV[4]))
+local rows_of, id_bytes, folded_of, generation_of = unpack(cmsgpack.unpack(ARGV[4]))
 local incarnations, records, decimals, ids, places = ARGV[5], ARGV[6], ARGV[7], ARGV[8], ARGV[9]
 local calls, pending, last = tag .. 'calls', tag .. 'pending', tag .. 'last/' .. ARGV[12]
 local find, n, prefix = string.find, #KEYS, #tag + 5
@@ -191,6 +193,7 @@ for i = 1, n do
   else
     local base = struct.unpack('<i8', header, 17)
     if trusted and not torn and base <= folded and folded <= row
+      and struct.unpack('<I4', header, 5) >= generation_of[i]
       and sub(header, 9, 16) == sub(incarnations, 16 * i - 7, 16 * i) then
       status = KEPT
       if folded < row then
