@@ -33,6 +33,15 @@ log = logging.getLogger(__name__)
 
 APP = "service.app:create_app()"
 KEEP_ALIVE = 75  # seconds; longer than the 60 that common proxies keep a connection
+SPARE = 4  # threads
+# glibc gives each thread a heap of its own and keeps what was freed. That made a worker grow
+# several times as large as what it uses; Python's lock lets threads share one heap. Large arrays go
+# back to the system at once. Whoever runs us may say otherwise.
+MEMORY = {
+    "MALLOC_ARENA_MAX": "1",
+    "MALLOC_MMAP_THRESHOLD_": str(1 << 20),
+    "MALLOC_TRIM_THRESHOLD_": str(16 << 20),
+}
 _STOP_SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
 
@@ -149,6 +158,7 @@ def _web_server(
 ) -> Iterator[subprocess.Popen[bytes]]:
     """Run gunicorn; at the end stop it, gracefully first."""
     environment = {
+        **MEMORY,
         **os.environ,
         "TALLYWARD_REDIS_URL": store_url,
         "TALLYWARD_DATA": str(settings.data.absolute()),
@@ -181,9 +191,15 @@ def _web_server(
 def _command(settings: Settings, app: str) -> list[str]:
     options = {
         "bind": settings.bind,
-        "worker-class": "gthread",
+        "worker-class": "service.web.worker.Worker",
         "workers": settings.workers,
-        "threads": settings.threads,
+        "threads": _threads(settings),
+        # A connection holds at most 64 KiB until its request has a thread. With the store's and
+        # the logs' files they stay below the 1024 that many systems allow a process to open.
+        "worker-connections": 512,
+        # Who comes when all workers have as many waits in the kernel, where it costs us nothing,
+        # but unseen and without an end; so not gunicorn's 2048.
+        "backlog": 512,
         "timeout": settings.timeout,
         "graceful-timeout": settings.timeout,
         "keep-alive": KEEP_ALIVE,
@@ -200,6 +216,14 @@ def _command(settings: Settings, app: str) -> list[str]:
     if gunicorn.version_info >= (25, 1):  # it would be shared by all services of this user
         command.append("--no-control-socket")
     return [*command, app]
+
+
+def _threads(settings: Settings) -> int:
+    """Return threads for all who are let in or wait for it; the spare ones refuse and say health.
+
+    So no request waits for a thread in gunicorn, whose queue has no bound in time.
+    """
+    return settings.max_posting + settings.threads + 2 * settings.max_waiting + SPARE
 
 
 def _wait_until_it_answers(server: subprocess.Popen[bytes], settings: Settings) -> None:

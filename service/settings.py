@@ -18,6 +18,7 @@ from iso4217 import Currency
 
 PREFIX = "TALLYWARD_"
 SHORTEST_KEY = 32
+STORE_WAITS = 4  # of a batch: two time-outs for its turn to append, two for an append sent twice
 
 
 class SettingsError(ValueError):
@@ -64,11 +65,24 @@ class Settings:
         "127.0.0.1:8080", "host:port, [IPv6]:port", "Address on which the service listens."
     )
     workers: int = _number(2, 1, 128, "Worker processes; about one for each processor core.")
+    max_posting: int = _number(
+        2, 1, 64, "Batches that one worker reads, counts and answers at a time."
+    )
     threads: int = _number(
-        8, 1, 256, "Requests that one worker serves at a time; waiting feed readers count too."
+        8,
+        2,
+        256,
+        "Other requests that one worker serves at a time; half of them may wait for alarms.",
+    )
+    max_waiting: int = _number(
+        8,
+        0,
+        64,
+        "Batches, and as many other requests, that may wait for their turn in one worker; more "
+        "are refused with 503.",
     )
     timeout: int = _number(
-        30,
+        60,
         2,
         600,
         "A worker that shows no sign of life for so long is replaced; at a stop, running requests "
@@ -139,8 +153,25 @@ class Settings:
         5.0,
         0.05,
         300,
-        "Longest wait for an answer of the store; less than TALLYWARD_TIMEOUT.",
+        "Longest wait for an answer of the store; then 503.",
         "s",
+    )
+    queue_timeout: float = _number(
+        5.0, 0.05, 300, "Longest wait of a request for its turn; then 503.", "s"
+    )
+    caller_timeout: float = _number(
+        10.0,
+        0.05,
+        300,
+        "Longest wait for a request to come in, its body within so long of its turn, and for its "
+        "answer to be taken; then 408, or the caller is hung up on.",
+        "s",
+    )
+    call_rows: int = _number(
+        2000,
+        100,
+        50_000,
+        "Most rows that one script in the store takes at a time, so that others get their turn.",
     )
     sweep_seconds: float = _number(
         5.0, 0.05, 300, "Pause between sweeps, which judge rows whose request broke off.", "s"
@@ -291,10 +322,17 @@ def _faults(values: Mapping[str, Any]) -> list[str]:
     ):
         if fault:
             faults.append(f"{_variable(name)} {fault}")
-    if values["store_timeout"] >= values["timeout"]:
+    held = max(
+        values["max_wait"],
+        values["queue_timeout"]
+        + 2 * values["caller_timeout"]
+        + STORE_WAITS * values["store_timeout"],
+    )
+    if not held < values["timeout"]:
         faults.append(
-            f"TALLYWARD_STORE_TIMEOUT ({_written(values['store_timeout'])} s) must be less than "
-            f"TALLYWARD_TIMEOUT ({_written(values['timeout'])} s)"
+            f"TALLYWARD_TIMEOUT ({_written(values['timeout'])} s) must be more than a request may "
+            f"take ({_written(held)} s): TALLYWARD_MAX_WAIT, and TALLYWARD_QUEUE_TIMEOUT + "
+            f"2 × TALLYWARD_CALLER_TIMEOUT + {STORE_WAITS} × TALLYWARD_STORE_TIMEOUT"
         )
     if values["max_expanded"] < values["max_body"]:
         faults.append(

@@ -20,6 +20,7 @@ from pathlib import Path
 import pytest
 import redis
 
+from service.serving import _command
 from service.settings import Settings
 from service.store.embedded import EmbeddedStore, find_server
 from tests.processes import alive, children, eventually, free_port
@@ -48,6 +49,7 @@ def application(environ, start_response):
 SERVE = """
 import os, sys
 from service.serving import ServingError, serve
+from service.serving import _command
 from service.settings import Settings
 from service.store.errors import StoreError
 
@@ -142,6 +144,24 @@ def test_workers_get_their_settings_by_environment_and_no_secret_is_an_argument(
     assert not (service.folder / "data" / "admin-key").exists()
     for pid in (service.process.pid, *children(service.process.pid), got["pid"]):
         assert KEY.encode() not in Path(f"/proc/{pid}/cmdline").read_bytes()
+
+
+@pytest.mark.parametrize(("given", "found"), [({}, "1"), ({"MALLOC_ARENA_MAX": "8"}, "8")])
+def test_threads_share_one_heap_unless_the_operator_says_otherwise(service, given, found):
+    service.environment |= given
+    service.start()
+    environment = Path(f"/proc/{service.get()['pid']}/environ").read_bytes().split(b"\0")
+    assert f"MALLOC_ARENA_MAX={found}".encode() in environment
+
+
+def test_health_is_never_without_a_thread_nor_a_connection_without_a_file():
+    least = Settings()
+    most = Settings(max_posting=64, threads=256, max_waiting=64)
+    for settings in (least, most):
+        options = dict(part[2:].split("=") for part in _command(settings, "a:b") if "=" in part)
+        threads = int(options["threads"])
+        assert threads > settings.max_posting + settings.threads + 2 * settings.max_waiting
+        assert threads < int(options["worker-connections"]) < 1000
 
 
 def test_relative_data_folder_means_the_same_to_the_workers(service):

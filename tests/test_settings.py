@@ -30,7 +30,9 @@ def test_defaults():
     settings = Settings.from_environment({"HOME": "/root", "REDIS_URL": "other program's"})
     assert settings == Settings()
     assert settings.address == ("127.0.0.1", 8080)
-    assert (settings.workers, settings.threads, settings.timeout) == (2, 8, 30)
+    assert (settings.workers, settings.threads, settings.timeout) == (2, 8, 60)
+    assert (settings.max_posting, settings.max_waiting, settings.call_rows) == (2, 8, 2000)
+    assert (settings.queue_timeout, settings.caller_timeout) == (5.0, 10.0)
     assert settings.data == Path(".tallyward")
     assert settings.redis_url is None
     assert settings.admin_key is None
@@ -42,8 +44,10 @@ def test_every_variable_is_read():
     given_values = {
         "BIND": "[::1]:9000",
         "WORKERS": "3",
+        "MAX_POSTING": "3",
         "THREADS": "4",
-        "TIMEOUT": "60",
+        "MAX_WAITING": "0",
+        "TIMEOUT": "61",
         "DATA": "/srv/a folder",
         "REDIS_URL": "rediss://user:pw@store.example:6380/2",
         "ADMIN_KEY": KEY,
@@ -54,9 +58,13 @@ def test_every_variable_is_read():
         "MAX_ROWS": "7",
         "MAX_STREAMS": "6",
         "MAX_FULL": "5",
+        "KEPT_STREAMS": "4",
         "HORIZON_DAYS": "9",
         "MAX_WAIT": "0",
         "STORE_TIMEOUT": "0.5",
+        "QUEUE_TIMEOUT": "2.5",
+        "CALLER_TIMEOUT": "7.5",
+        "CALL_ROWS": "100",
         "SWEEP_SECONDS": "0.25",
         "LOG_LEVEL": "debug",
     }
@@ -91,6 +99,17 @@ def test_all_faults_come_in_one_message():
         ("WORKERS", "0", "must be 1 to 128, got 0"),
         ("WORKERS", "1_0", "must be a whole number, got '1_0'"),
         ("THREADS", "2.5", "must be a whole number"),
+        ("THREADS", "1", "must be 2 to 256, got 1"),
+        ("MAX_POSTING", "0", "must be 1 to 64, got 0"),
+        ("MAX_WAITING", "-1", "must be 0 to 64, got -1"),
+        ("MAX_BODY", "1023", "must be 1024 to 1073741824 bytes, got 1023"),
+        ("MAX_ROWS", "50001", "must be 1 to 50000, got 50001"),
+        ("MAX_STREAMS", "0", "must be 1 to 50000, got 0"),
+        ("MAX_FULL", "10001", "must be 1 to 10000, got 10001"),
+        ("HORIZON_DAYS", "91", "must be 1 to 90 days, got 91"),
+        ("QUEUE_TIMEOUT", "0", "must be 0.05 to 300 s, got 0"),
+        ("CALLER_TIMEOUT", "-inf", "must be 0.05 to 300 s, got -inf"),
+        ("CALL_ROWS", "99", "must be 100 to 50000, got 99"),
         ("PARTITIONS", "1025", "must be 1 to 1024, got 1025"),
         ("MAX_WAIT", "31", "must be 0 to 30 s, got 31"),
         ("SWEEP_SECONDS", "nan", "must be 0.05 to 300 s, got nan"),
@@ -106,8 +125,6 @@ def test_all_faults_come_in_one_message():
         ("ADMIN_KEY", "x" * 31, "at least 32 characters, it has 31"),
         ("ADMIN_KEY", "x" * 32 + " ", "printable ASCII"),
         ("ADMIN_KEY", "ü" * 32, "printable ASCII"),
-        ("STORE_TIMEOUT", "30", "must be less than TALLYWARD_TIMEOUT (30 s)"),
-        ("TIMEOUT", "5", "TALLYWARD_STORE_TIMEOUT (5 s) must be less than TALLYWARD_TIMEOUT (5 s)"),
         ("MAX_EXPANDED", "1024", "must be at least TALLYWARD_MAX_BODY"),
     ],
 )
@@ -115,6 +132,24 @@ def test_fault(name, text, says):
     (fault,) = faults(**{name: text})
     assert f"TALLYWARD_{name}" in fault
     assert says in fault
+
+
+@pytest.mark.parametrize(
+    ("variables", "held"),
+    [
+        ({"STORE_TIMEOUT": "9"}, 61),
+        ({"QUEUE_TIMEOUT": "20"}, 60),
+        ({"CALLER_TIMEOUT": "17.5"}, 60),
+        ({"TIMEOUT": "45"}, 45),
+        ({"TIMEOUT": "30", "CALLER_TIMEOUT": "1"}, 30),  # by MAX_WAIT
+    ],
+)
+def test_everything_ends_before_a_worker_is_taken_for_hung(variables, held):
+    (fault,) = faults(**variables)
+    assert fault.startswith("TALLYWARD_TIMEOUT (")
+    assert f"must be more than a request may take ({held} s)" in fault
+    for name in ("MAX_WAIT", "QUEUE_TIMEOUT", "2 × TALLYWARD_CALLER", "4 × TALLYWARD_STORE"):
+        assert name in fault
 
 
 @pytest.mark.parametrize(

@@ -9,6 +9,7 @@ from typing import Any, TypeVar, cast
 
 from flask import g, request
 
+from service.web.admission import admit
 from service.web.keyring import ROLES, Principal
 from service.web.parts import parts
 from service.web.problems import Problem
@@ -21,9 +22,9 @@ View = TypeVar("View", bound=Callable[..., Any])
 
 
 def requires(role: str) -> Callable[[View], View]:
-    """Let a view be called only by keys with a role; stands directly under ``path``.
+    """Let a view be called only by keys with a role, and only by so many requests at a time.
 
-    The role and the 401 and 403 appear in the OpenAPI document too.
+    Stands directly under ``path``. The role, 401, 403 and 503 appear in the OpenAPI document too.
     """
     if role not in ROLES:
         raise ValueError(f"no role {role!r}; roles are {', '.join(ROLES)}")
@@ -32,13 +33,14 @@ def requires(role: str) -> Callable[[View], View]:
         manual = doc.setdefault("manual_doc", {})
         manual["security"] = [{SCHEME: [role]}]
         responses = manual.setdefault("responses", {})
-        for status in (401, 403):
+        for status in (401, 403, 503):
             responses[status] = HTTPStatus(status).name
 
     def decorate(view: View) -> View:
         @wraps(view)
         def guarded(*args: Any, **kwargs: Any) -> Any:
-            g.principal = _admitted(role)
+            g.principal = _known(role)
+            admit(parts().posting if role == "post" else parts().answering)
             return view(*args, **kwargs)
 
         return documents(note)(cast(View, guarded))
@@ -51,7 +53,7 @@ def principal() -> Principal:
     return cast(Principal, g.principal)
 
 
-def _admitted(role: str) -> Principal:
+def _known(role: str) -> Principal:
     scheme, _, key = request.headers.get("Authorization", "").partition(" ")
     key = key.strip()
     if scheme.lower() != "bearer" or not key:

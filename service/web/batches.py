@@ -62,7 +62,7 @@ def _describe(doc: dict[str, Any]) -> None:
 @batches.path("/v1/batches", "POST")
 @requires("post")
 @batches.answers(Receipt, "What became of the batch.")
-@batches.fails(400, 413, 415, 422, 503)
+@batches.fails(400, 408, 413, 415, 422, 503)
 @documents(_describe)
 def post_batch() -> Response:
     """Post a batch of transactions.

@@ -6,9 +6,11 @@ import json
 from collections.abc import Iterator
 from typing import Any
 
-from flask import current_app, request
+from flask import current_app, g, request
+from werkzeug.exceptions import ClientDisconnected
 
 from service.batches.document import Members, parse
+from service.web.line import Line
 from service.web.problems import Problem, faults, invalid, too_large
 
 
@@ -18,18 +20,28 @@ def read_body() -> bytes:
     Raises
     ------
     Problem
-        413 above the limit, 400 where the body broke off.
+        413 above the limit, 408 where it came too slowly, 400 where it broke off.
     """
     limit: int = current_app.config["MAX_CONTENT_LENGTH"]
     # The stream of a body without a length ends at its limit as if that were all, and that of a
     # caller who hung up ends early; a batch cut at a line's end would look whole.
     request.max_content_length = limit + 1
-    body = request.get_data(cache=False)
+    line = request.environ.get("gunicorn.socket")
+    if isinstance(line, Line):
+        line.allow(g.admission.crowded)
+    try:
+        body = request.get_data(cache=False)
+    except ClientDisconnected as error:
+        if isinstance(line, Line) and line.late():
+            raise Problem(408, "The body came too slowly; send it faster, or less.") from error
+        raise Problem(400, "The body broke off.") from error
     if len(body) > limit:
         raise too_large(limit)
     said = request.content_length
     if said is not None and len(body) != said:
         raise Problem(400, f"The body broke off after {len(body):,} of {said:,} bytes.")
+    if isinstance(line, Line):
+        line.entire = True
     return body
 
 

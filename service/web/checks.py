@@ -24,7 +24,7 @@ checks = Resource("checks", __name__, description="Measures of amounts that are 
 @requires("read")
 @checks.takes(CheckRequest)
 @checks.answers(Check, "Every measure of every view.")
-@checks.fails(400, 413, 415, 422)
+@checks.fails(400, 408, 413, 415, 422)
 def check_amounts(request: dict[str, Any]) -> Response:
     """Measure amounts against the laws of digits; nothing is stored.
 

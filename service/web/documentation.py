@@ -9,8 +9,10 @@ from flask import Response, current_app
 
 from schemas.front import Front
 from service import __version__
+from service.web.admission import admit
 from service.web.method.page import method
 from service.web.openapi import Api
+from service.web.parts import parts
 from service.web.resource import Resource, reply
 
 documentation = Resource("documentation", __name__, description="This document. No key is needed.")
@@ -43,6 +45,7 @@ def front_door() -> Response:
 @documentation.answers_raw("text/html", {"type": "string"}, "A page that needs nothing else.")
 def get_method() -> Response:
     """Explain what is measured, promised and not promised, for analysts and reviewers."""
+    admit(parts().answering)
     return Response(METHOD.html, mimetype="text/html", headers=METHOD.headers)
 
 
@@ -50,5 +53,6 @@ def get_method() -> Response:
 @documentation.answers_raw("application/json", {"type": "object"}, "The OpenAPI 3.1 document.")
 def get_openapi() -> Response:
     """Describe every path, field, error and role of the service."""
+    admit(parts().answering)
     api = cast(Api, current_app.extensions["flask-smorest"]["apis"][""]["ext_obj"])
     return Response(msgspec.json.encode(api.document()), mimetype="application/json")

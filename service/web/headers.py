@@ -7,6 +7,8 @@ import secrets
 
 from flask import Flask, Response, g, request
 
+from service.web.line import Line
+
 _PRINTABLE = re.compile(r"[\x20-\x7e]{1,128}")
 
 
@@ -26,6 +28,9 @@ def register(app: Flask) -> None:
 
 
 def _mark(response: Response) -> Response:
+    line = request.environ.get("gunicorn.socket")
+    if isinstance(line, Line):
+        line.answer()
     headers = response.headers
     headers["X-Request-Id"] = request_id()
     headers["X-Content-Type-Options"] = "nosniff"

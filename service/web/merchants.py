@@ -82,7 +82,7 @@ def get_merchant(query: dict[str, Any], merchant: str) -> Response:
 @requires("tune")
 @merchants.takes(Assignment)
 @merchants.answers(Assigned, "What is assigned now.")
-@merchants.fails(400, 413, 415, 422, 503)
+@merchants.fails(400, 408, 413, 415, 422, 503)
 def put_merchant(assignment: dict[str, str], merchant: str) -> Response:
     """Assign a policy, a category, or both; rows that arrive from then on are judged by it."""
     if MERCHANT.fullmatch(merchant) is None:

@@ -58,12 +58,13 @@ _REASONS = {
     401: "No valid key.",
     403: "The key lacks the role.",
     404: "What was asked for does not exist.",
+    408: "The body came too slowly; send it faster, or less.",
     409: "The request contradicts what is stored.",
     413: "The body is too large; the detail says the limit.",
     415: "The body is of a type or an encoding that this path does not take.",
     422: "Inputs are invalid; see errors.",
     429: "Too many at once; wait Retry-After seconds.",
-    503: "The store cannot answer now; wait Retry-After seconds and send the same again.",
+    503: "Too much to do, or no store; wait Retry-After seconds and send the same again.",
 }
 _RETRY_AFTER = {
     "description": "Seconds to wait.",

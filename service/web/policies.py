@@ -44,7 +44,7 @@ def get_policy(name: str) -> Response:
 @requires("tune")
 @policies.takes(PolicySettings)
 @policies.answers(Policy, "The policy as it is from now on.")
-@policies.fails(400, 413, 415, 422, 503)
+@policies.fails(400, 408, 413, 415, 422, 503)
 def put_policy(settings: dict[str, Any], name: str) -> Response:
     """Make or replace a policy.
 

@@ -26,6 +26,7 @@ class DescribedClient(FlaskClient):
     def open(self, *args: Any, **kwargs: Any) -> TestResponse:
         """Send a request with the tests' key, unless it brings headers of its own."""
         kwargs.setdefault("headers", KEYED)
+        kwargs.setdefault("buffered", True)  # close what is answered, as a server does
         response = super().open(*args, **kwargs)
         check_response(self.document, response)
         return response
