@@ -21,7 +21,7 @@ from service.store.catalogue import Catalogue, Policies
 from service.store.charter import Charter, charter
 from service.store.connection import StoreFacts, connect, inspect
 from service.store.directory import Directory
-from service.store.errors import Conflict, StoreError, Unavailable, Unknown
+from service.store.errors import Conflict, StoreError, Stranger, Unavailable, Unknown
 from service.store.feed import Feed, Stored
 from service.store.judge import Judge, Judged
 from service.store.keys import Tenant, path, stream_of
@@ -126,8 +126,11 @@ class Tallies:
 
     def _fixed(self) -> Charter:
         """Return what is fixed in the store, once it has answered."""
-        if self._charter is None:
-            self._charter = charter(self.client, self._partitions)
+        return self._charter or self._read_charter()
+
+    def _read_charter(self) -> Charter:
+        self._charter = charter(self.client, self._partitions)
+        self.logs.mark = self._charter.mark
         return self._charter
 
     @contextmanager
@@ -149,7 +152,7 @@ class Tallies:
         if self._facts is None or now - self._facts[0] > fresh_seconds:
             self._facts = (now, inspect(self.client))
             with suppress(RedisError):  # a replica may not be asked to write one
-                self._charter = charter(self.client, self._partitions)
+                self._read_charter()
         return self._facts[1]
 
     @property
@@ -224,7 +227,11 @@ class Tallies:
             calls = self.logs.calls(
                 tenant, batch, versions, now=now, historic=historic, known=known
             )
-            appended = self.logs.append(calls, batch)
+            try:
+                appended = self.logs.append(calls, batch)
+            except Stranger:
+                self._charter = None  # nor were the identities hashed by the key of this store
+                raise
         alarms: list[Document] = []
         found: list[Document] = []
         try:

@@ -6,6 +6,7 @@ the ``standard`` policy as the software defines it.
 
 from __future__ import annotations
 
+import os
 import threading
 import time
 from collections.abc import Sequence
@@ -30,7 +31,8 @@ class Policies:
 
     Attributes
     ----------
-    revision : int
+    revision : bytes
+        Random at every change.
     by_version : dict of int to Policy
     newest : dict of str to int
         Name to version.
@@ -38,7 +40,7 @@ class Policies:
         Merchant to policy name, for those that have not the standard one.
     """
 
-    revision: int
+    revision: bytes
     by_version: dict[int, Policy] = field(default_factory=lambda: {1: Policy()})
     newest: dict[str, int] = field(default_factory=lambda: {STANDARD: 1})
     assigned: dict[str, str] = field(default_factory=dict)
@@ -71,7 +73,7 @@ class Catalogue:
             return known[1]
         keys = Tenant(tenant)
         reply: Any = self.client.get(keys.revision)
-        revision = int(reply or 0)
+        revision: bytes = reply or b""
         if known is not None and known[1].revision == revision:
             policies = known[1]
         else:
@@ -89,9 +91,9 @@ class Catalogue:
         pipe.hgetall(keys.policies)
         pipe.hgetall(keys.assignments)
         revision, versions, newest, assigned = pipe.execute()
-        empty = Policies(0)
+        empty = Policies(b"")
         return Policies(
-            revision=int(revision or 0),
+            revision=revision or b"",
             by_version=empty.by_version
             | {int(v): Policy.from_document(msgspec.json.decode(d)) for v, d in versions.items()},
             newest=empty.newest | {n.decode(): int(v) for n, v in newest.items()},
@@ -114,7 +116,7 @@ class Catalogue:
         pipe: Any = self.client.pipeline(transaction=True)
         pipe.hset(keys.versions, str(version), msgspec.json.encode(policy.document()))
         pipe.hset(keys.policies, name, version)
-        pipe.incr(keys.revision)
+        pipe.set(keys.revision, os.urandom(8))  # a number could come again after a fall-back
         pipe.execute()
         self.of(tenant, fresh=True)
         return policy
@@ -130,6 +132,6 @@ class Catalogue:
             pipe.hdel(keys.assignments, merchant)
         else:
             pipe.hset(keys.assignments, merchant, policy)
-        pipe.incr(keys.revision)
+        pipe.set(keys.revision, os.urandom(8))  # a number could come again after a fall-back
         pipe.execute()
         self.of(tenant, fresh=True)

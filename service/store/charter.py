@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import secrets
 from dataclasses import dataclass
 from typing import Any
@@ -9,7 +10,7 @@ from typing import Any
 import redis
 
 from service.store.errors import StoreError
-from service.store.keys import SETTINGS
+from service.store.keys import SETTINGS, Partition
 
 FORMAT = 1
 
@@ -29,6 +30,12 @@ class Charter:
     partitions: int
     ident_key: tuple[int, int]
 
+    @property
+    def mark(self) -> str:
+        """Name of the store, which each of its partitions bears."""
+        key = b"".join(half.to_bytes(8, "big") for half in self.ident_key)
+        return hashlib.blake2b(key, digest_size=8, person=b"tallyward store").hexdigest()
+
 
 def charter(client: redis.Redis, partitions: int) -> Charter:
     """Read the charter, or write it into a new store.
@@ -36,7 +43,8 @@ def charter(client: redis.Redis, partitions: int) -> Charter:
     Raises
     ------
     StoreError
-        If the store was made with another number of partitions or by another format.
+        If the store was made with another number of partitions or by another format, or if one of
+        its partitions belongs to another store.
     """
     pipe: Any = client.pipeline(transaction=True)
     pipe.hsetnx(SETTINGS, "format", FORMAT)
@@ -54,4 +62,11 @@ def charter(client: redis.Redis, partitions: int) -> Charter:
             f"set TALLYWARD_PARTITIONS={int(found[b'partitions'])}"
         )
     key = found[b"ident_key"]
-    return Charter(partitions, (int.from_bytes(key[:8], "big"), int.from_bytes(key[8:], "big")))
+    mine = Charter(partitions, (int.from_bytes(key[:8], "big"), int.from_bytes(key[8:], "big")))
+    for number in range(partitions):
+        pipe.set(Partition(number).mark, mine.mark, nx=True)
+        pipe.get(Partition(number).mark)
+    marks = pipe.execute()[1::2]
+    if any(mark.decode() != mine.mark for mark in marks):
+        raise StoreError("a partition of the store belongs to another store")
+    return mine

@@ -30,6 +30,7 @@ _REFUSALS = frozenset(
         "NOPERM",
         "WRONGPASS",
         "EXECABORT",
+        "STRANGER",  # ours: the partition belongs to another store than the caller thinks
     }
 )
 _RAISED_IN_SCRIPT = " script: "  # such an error ends in "script: <sha1>, on @user_script:1."
@@ -92,6 +93,10 @@ class Unavailable(Exception):
     """
 
     retry_after: int = 1
+
+
+class Stranger(Unavailable):
+    """The store is not the one that was asked for its charter."""
 
 
 class Unknown(LookupError):

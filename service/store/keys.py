@@ -68,6 +68,11 @@ class Partition:
         return f"{self.tag}category/{tenant}"
 
     @property
+    def mark(self) -> str:
+        """Name of the store that the partition belongs to, as its charter says."""
+        return f"{self.tag}mark"
+
+    @property
     def calls(self) -> str:
         """Hash of call to its registered reply, until the call is judged."""
         return f"{self.tag}calls"
@@ -135,7 +140,7 @@ class Tenant:
 
     @property
     def revision(self) -> str:
-        """Counter that grows with every change of policies or assignments."""
+        """Random name of the present policies and assignments; another one with every change."""
         return f"{self.tag}revision"
 
     def claim(self, digest: str) -> str:

@@ -17,7 +17,7 @@ from redis.exceptions import RedisError
 
 from service.batches.batch import Batch
 from service.digits.significand import IntArray
-from service.store.errors import Unavailable, surely_not_applied
+from service.store.errors import Stranger, Unavailable, surely_not_applied
 from service.store.keys import Partition, partition_of, path
 from service.store.script import APPEND, COMPACT, Command, first_error, run
 from service.streams.record import FORMAT, HEADER, HISTORIC, RECORD, ROW, Records, Stream
@@ -225,6 +225,7 @@ class Logs:
         self.partitions = [Partition(i) for i in range(partitions)]
         self.horizon_s = horizon_s
         self.call_rows = call_rows
+        self.mark = ""  # name of the store by its charter
         self._worker = os.urandom(8).hex()
         self._last = [b""] * partitions  # name under which our previous call is remembered
         self._era = np.zeros(partitions, np.int64)
@@ -310,6 +311,7 @@ class Logs:
                     sources,
                     self.horizon_s,
                     self._worker,
+                    self.mark,
                     out[-1].token if follows else self._last[p],
                 ],
             )
@@ -345,6 +347,8 @@ class Logs:
         ------
         Unavailable
             If a partition did not take its rows, or may not have; says how many were taken.
+        Stranger
+            If it did not since it belongs to another store than ``mark`` says.
         """
         for call in calls:
             self._last[call.partition.number] = b""
@@ -369,7 +373,8 @@ class Logs:
                 break
         if len(replies) < len(calls):
             done = sum(len(calls[i].rows) for i in replies)
-            raise Unavailable(
+            refused = Stranger if str(error).startswith("STRANGER") else Unavailable
+            raise refused(
                 f"the store took {done} of {len(batch.stream)} rows for certain; send the same "
                 "batch again, rows with an identity are not counted twice"
             ) from error

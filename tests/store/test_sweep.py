@@ -87,7 +87,7 @@ def test_a_young_call_is_left_to_its_worker(tallies: Tallies) -> None:
 def test_a_call_is_known_for_as_long_as_its_worker_may_send_it_again(
     fresh_store: str, seconds: float
 ) -> None:
-    tallies = Tallies(Settings(redis_url=fresh_store, store_timeout=seconds, timeout=100))
+    tallies = Tallies(Settings(redis_url=fresh_store, store_timeout=seconds, timeout=600))
     tallies.client.close()
     wait_and_send_again = 2 * seconds * 1000
     assert tallies.sweep.late_ms > wait_and_send_again
@@ -193,7 +193,7 @@ def test_what_is_kept_besides_the_tallies_expires(tallies: Tallies) -> None:
     tallies.claim("main", "key", "digest")
     tallies.sweep.round()
     lasting = {"log/", "snap/", "ids/", "of/", "dir/", "settings", "versions", "policies"}
-    lasting |= {"revision", "alarm/", "feed"}
+    lasting |= {"revision", "mark", "alarm/", "feed"}
     for key in tallies.client.keys("*"):
         name = key.decode().split("}", 1)[1]
         if not any(name.startswith(kind) for kind in lasting):

@@ -26,7 +26,8 @@
 -- ARGV[10]  names of the sources (msgpack list)
 -- ARGV[11]  horizon of ids in seconds
 -- ARGV[12]  worker
--- ARGV[13]  name under which the worker's previous call is remembered, "" if it trusts nothing
+-- ARGV[13]  name of the store that the worker takes this for
+-- ARGV[14]  name under which the worker's previous call is remembered, "" if it trusts nothing
 --
 -- Reply     {mask, heads, tails, blobs, trust}
 --   mask    a byte a row: "1" for taken, "0" for seen before
@@ -75,14 +76,17 @@ if before then
 end
 
 -- Read as a whole what a worker's own state says to be short, and the index of the others.
-local paths, keys = {}, {last}
+local paths, keys = {}, {last, tag .. 'mark'}
 for i = 1, n do
   local path = sub(KEYS[i], prefix)
   local short = folded_of[i] > 0 and folded_of[i] < LONG
-  paths[i], keys[i + 1] = path, short and KEYS[i] or tag .. 'seen/' .. path
+  paths[i], keys[i + 2] = path, short and KEYS[i] or tag .. 'seen/' .. path
 end
 local values = get(keys)
-local trusted = ARGV[13] ~= '' and values[1] == ARGV[13]
+if (values[2] or '') ~= ARGV[13] then
+  return redis.error_reply('STRANGER the partition belongs to another store')
+end
+local trusted = ARGV[14] ~= '' and values[1] == ARGV[14]
 local time = call('TIME')
 local now = time[1]
 
@@ -90,11 +94,11 @@ local now = time[1]
 -- whether its log is torn.
 local function look_at(i)
   local key, log, index, header, size = KEYS[i], nil, nil, nil, 0
-  if keys[i + 1] == key then
-    log = values[i + 1] or ''
+  if keys[i + 2] == key then
+    log = values[i + 2] or ''
     header, size = sub(log, 1, 32), #log
   else
-    index = values[i + 1] or ''
+    index = values[i + 2] or ''
     header = call('GETRANGE', key, 0, 31)
     if header == '' then return 0, header, '' end
     size = call('STRLEN', key)
