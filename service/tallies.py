@@ -96,14 +96,17 @@ class Tallies:
 
     def __init__(self, settings: Settings) -> None:
         assert settings.redis_url is not None
-        self.client: redis.Redis = connect(settings.redis_url, settings.store_timeout)
+        threads = settings.max_posting + settings.threads + 8
+        self.client: redis.Redis = connect(settings.redis_url, settings.store_timeout, threads)
         self.horizon_s = settings.horizon_days * 86_400
         self.sweep_seconds = settings.sweep_seconds
         self._partitions = settings.partitions
         self._charter: Charter | None = None
         self.catalogue = Catalogue(self.client)
         self.feed = Feed(self.client)
-        self.logs = Logs(self.client, settings.partitions, self.horizon_s)
+        self.logs = Logs(
+            self.client, settings.partitions, self.horizon_s, call_rows=settings.call_rows
+        )
         self.warm = Warm(settings.kept_streams)
         self._patience = 2 * settings.store_timeout
         self.judge = Judge(self.client, self.logs, self.feed, self.catalogue)

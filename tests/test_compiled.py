@@ -11,10 +11,13 @@ import pytest
 from numba.core.dispatcher import Dispatcher
 
 from service.digits import compiled, measures
+from service.store import layout
 from service.streams import fit, snapshots, walk
 
 
-@pytest.mark.parametrize("module", [walk, snapshots, fit, measures], ids=lambda m: m.__name__)
+@pytest.mark.parametrize(
+    "module", [walk, snapshots, fit, measures, layout], ids=lambda m: m.__name__
+)
 def test_compiled_functions_read_nothing_from_outside_their_file(module: ModuleType) -> None:
     functions = [f for f in vars(module).values() if isinstance(f, Dispatcher)]
     assert functions

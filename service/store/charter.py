@@ -12,7 +12,7 @@ import redis
 from service.store.errors import StoreError
 from service.store.keys import SETTINGS, Partition
 
-FORMAT = 1
+FORMAT = 2
 
 
 @dataclass(frozen=True)

@@ -19,8 +19,9 @@ from service.batches.batch import Batch
 from service.digits.significand import IntArray
 from service.store.errors import Stranger, Unavailable, surely_not_applied
 from service.store.keys import Partition, partition_of, path
+from service.store.layout import Layout, lay_out, unfolded
 from service.store.script import APPEND, COMPACT, Command, first_error, run
-from service.streams.record import FORMAT, HEADER, HISTORIC, RECORD, ROW, Records, Stream
+from service.streams.record import FORMAT, HEADER, RECORD, Records, Stream
 
 EVIDENCE_ROWS = 128
 """Folded rows that a log keeps as evidence."""
@@ -33,7 +34,6 @@ _TEMPORARY_MS = 60_000
 
 
 _HEAD_WORDS = 6  # format and generation, incarnation, base, folded; rows; status
-_RAW = np.dtype("V32")  # a record that nobody looks into: fields make copying slow
 _COLD, _NEW, _KEPT = 0, 1, 2
 
 
@@ -68,13 +68,11 @@ class Call:
     partition : Partition
     token : bytes
         Random name of the call; the partition answers a second try of it as the first.
-    streams : int64 array
-        Indices into the batch's streams.
+    layout : Layout
+        Of the whole batch.
+    part : slice
+        The call's streams in the layout.
     paths : list of str
-    rows : int64 array (m,)
-        Indices into the batch's rows, grouped by stream in the order of ``streams``.
-    records : array of RECORD (m,)
-        As they go to the logs.
     known : int64 array
         By stream: records that the worker has folded.
     command : Command
@@ -82,12 +80,21 @@ class Call:
 
     partition: Partition
     token: bytes
-    streams: IntArray
+    layout: Layout
+    part: slice
     paths: list[str]
-    rows: IntArray
-    records: Records
     known: IntArray
     command: Command
+
+    @property
+    def streams(self) -> IntArray:
+        """Return the call's streams, as indices into the batch's."""
+        return self.layout.streams[self.part]
+
+    @property
+    def rows(self) -> int:
+        """Return how many rows it brings."""
+        return int(self.layout.edges[self.part.stop] - self.layout.edges[self.part.start])
 
 
 @dataclass(frozen=True)
@@ -155,7 +162,7 @@ class Appended:
         Of kept and new streams: what the worker has not folded, others' rows first and then the
         taken ones of this batch.
     slot : int64 array (m,)
-        Stream of each record, ascending.
+        Stream of each record; those of one stream follow each other.
     cold : dict of int to Blobs
         Snapshot and log of each cold stream, right after the append.
     era : int64 array
@@ -183,7 +190,6 @@ class Appended:
     def blobs(self) -> list[Blobs]:
         """Return what the store holds of all streams; none of them may be a kept one."""
         out = dict(self.cold)
-        edges = np.searchsorted(self.slot, np.arange(len(self.first) + 1)).tolist()
         for call in self.calls:
             for i, name in zip(call.streams.tolist(), call.paths, strict=True):
                 if i in out:
@@ -191,16 +197,9 @@ class Appended:
                 assert self.start[i] == 0
                 header = np.zeros(1, HEADER)
                 header["format"], header["incarnation"] = FORMAT, self.incarnation[i]
-                log = header.tobytes() + self.records[edges[i] : edges[i + 1]].tobytes()
+                log = header.tobytes() + self.records[np.equal(self.slot, i)].tobytes()
                 out[i] = Blobs(name, call.partition, None, log if self.count[i] else None)
         return [out[i] for i in range(len(self.first))]
-
-
-def decimals(idents: npt.NDArray[np.uint64]) -> bytes:
-    """Return idents as 19 decimal digits each, one after the other."""
-    powers = 10 ** np.arange(18, -1, -1, dtype=np.uint64)
-    digits = idents[:, None] // powers % np.uint64(10)
-    return (digits + np.uint64(48)).astype(np.uint8).tobytes()
 
 
 class Logs:
@@ -263,21 +262,15 @@ class Logs:
         known : Known, optional
             States that the worker keeps.
         """
-        n = len(batch.streams)
+        n, partitions = len(batch.streams), len(self.partitions)
         home = np.fromiter(
-            (partition_of(tenant, s.merchant, len(self.partitions)) for s in batch.streams),
+            (partition_of(tenant, stream.merchant, partitions) for stream in batch.streams),
             np.int64,
             n,
         )
-        by_home = np.argsort(home, kind="stable")
-        rank = np.empty(n, np.int64)
-        rank[by_home] = np.arange(n)
-        order = np.argsort(rank[batch.stream], kind="stable")
-        order = order[_first_of_each(batch, order)]
-        records = _records(batch, np.asarray(versions), order, now, historic)
-        texts = [_counted(batch.ids[i]) for i in order.tolist()]
-        rows_of = np.bincount(rank[batch.stream[order]], minlength=n)
-        edges = np.concatenate([[0], np.cumsum(rows_of)])
+        layout = lay_out(batch, home, np.asarray(versions), now=now, historic=historic)
+        by_home, edges, rows, records, decimals = layout
+        texts = [_counted(batch.ids[i]) for i in rows.tolist()]
         id_bytes = np.add.reduceat(np.fromiter(map(len, texts), np.int64, len(texts)), edges[:-1])
         incarnations = np.zeros((n, 2), np.uint64)
         incarnations[:, 0] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
@@ -286,14 +279,14 @@ class Logs:
             current = known.era == self._era[home]
             incarnations[:, 1] = np.where(current, known.incarnation, 0)[by_home]
             folded, generation = known.records[by_home], known.generation[by_home]
-        by_stream = (rows_of, id_bytes, folded, generation)
+        by_stream = (np.diff(edges), id_bytes, folded, generation)
         sources = msgspec.msgpack.encode(batch.sources)
         out: list[Call] = []
         for a, b in pairwise(self._cuts(home[by_home], edges)):
             p = int(home[by_home[a]])
             partition = self.partitions[p]
             follows = bool(out) and out[-1].partition == partition
-            rows = slice(int(edges[a]), int(edges[b]))
+            part = slice(int(edges[a]), int(edges[b]))
             paths = [path(tenant, batch.streams[i]) for i in by_home[a:b].tolist()]
             token = os.urandom(16)
             command = APPEND.call(
@@ -304,10 +297,10 @@ class Logs:
                     self._take_judged(p),
                     msgspec.msgpack.encode([column[a:b].tolist() for column in by_stream]),
                     incarnations[a:b].tobytes(),
-                    records[rows].tobytes(),
-                    decimals(batch.ident[order[rows]]),
-                    "".join(texts[rows]).encode("latin-1"),
-                    _places(batch, order[rows]),
+                    records[part].tobytes(),
+                    decimals[part].tobytes(),
+                    "".join(texts[part]).encode("latin-1"),
+                    _places(batch, rows[part]),
                     sources,
                     self.horizon_s,
                     self._worker,
@@ -315,18 +308,7 @@ class Logs:
                     out[-1].token if follows else self._last[p],
                 ],
             )
-            out.append(
-                Call(
-                    partition,
-                    token,
-                    by_home[a:b],
-                    paths,
-                    order[rows],
-                    records[rows],
-                    folded[a:b],
-                    command,
-                )
-            )
+            out.append(Call(partition, token, layout, slice(a, b), paths, folded[a:b], command))
         return out
 
     def _cuts(self, home: IntArray, edges: IntArray) -> list[int]:
@@ -372,7 +354,7 @@ class Logs:
             if len(replies) == len(calls):
                 break
         if len(replies) < len(calls):
-            done = sum(len(calls[i].rows) for i in replies)
+            done = sum(calls[i].rows for i in replies)
             refused = Stranger if str(error).startswith("STRANGER") else Unavailable
             raise refused(
                 f"the store took {done} of {len(batch.stream)} rows for certain; send the same "
@@ -381,38 +363,33 @@ class Logs:
         return self._appended(calls, [replies[i] for i in range(len(calls))], batch)
 
     def _appended(self, calls: Sequence[Call], replies: Sequence[Any], batch: Batch) -> Appended:
-        n = len(batch.streams)
+        n, layout = len(batch.streams), calls[0].layout
         taken = np.zeros(len(batch.stream), bool)
-        head = np.zeros((n, _HEAD_WORDS), np.int64)
-        known = np.zeros(n, np.int64)
-        era = np.zeros(n, np.int64)
+        mask = b"".join([reply[0] for reply in replies])
+        taken[layout.rows] = np.frombuffer(mask, np.uint8) == ord("1")
+        head = np.empty((n, _HEAD_WORDS), np.int64)
+        heads = b"".join([reply[1] for reply in replies])
+        head[layout.streams] = np.frombuffer(heads, np.int64).reshape(n, _HEAD_WORDS)
+        known, era = np.empty(n, np.int64), np.empty(n, np.int64)
         registered = np.zeros(n, bool)
         cold: dict[int, Blobs] = {}
-        for call, (mask, heads, _, blobs, trust) in zip(calls, replies, strict=True):
-            taken[call.rows] = np.frombuffer(mask, np.uint8) == ord("1")
-            heads = np.frombuffer(heads, np.int64).reshape(-1, _HEAD_WORDS)
-            head[call.streams] = heads
+        for call, (_, _, _, blobs, trust) in zip(calls, replies, strict=True):
             known[call.streams] = call.known
             era[call.streams] = self._remember(call, trust)
             registered[call.streams] = trust < 0
             if blobs:
                 pairs = iter(blobs)
-                for i in np.flatnonzero(np.equal(heads[:, 5], _COLD)).tolist():
-                    blob = Blobs(call.paths[i], call.partition, next(pairs), next(pairs))
-                    cold[int(call.streams[i])] = blob
+                for i, s in enumerate(call.streams.tolist()):
+                    if head[s, 5] == _COLD:
+                        cold[s] = Blobs(call.paths[i], call.partition, next(pairs), next(pairs))
         version, incarnation, _, folded, before, status = head.T
-        kept = np.equal(status, _KEPT)
-        warm = np.not_equal(status, _COLD)
-        streams = np.concatenate([c.streams for c in calls])
-        others = np.where(kept, before - known, 0)[streams]
-        rows = np.concatenate([c.rows for c in calls])
-        stream = batch.stream[rows]
-        mine = taken[rows] & warm[stream]
-        slot = np.concatenate([np.repeat(streams, others), stream[mine]])
-        tails = b"".join([reply[2] for reply in replies])
-        own = np.frombuffer(b"".join([c.records.tobytes() for c in calls]), _RAW)[mine]
-        records = np.frombuffer(tails + own.tobytes(), _RAW)
-        by_stream = np.argsort(slot, kind="stable")
+        kept, warm = np.equal(status, _KEPT), np.not_equal(status, _COLD)
+        others = np.where(kept, before - known, 0)
+        tails = np.frombuffer(b"".join([reply[2] for reply in replies]), RECORD)
+        records = np.empty(len(tails) + len(layout.rows), RECORD)
+        slot = np.empty(len(records), np.int64)
+        streams, edges, rows, own, _ = layout
+        end = unfolded(streams, edges, rows, taken, warm, others, tails, own, records, slot)
         count = np.bincount(batch.stream[taken], minlength=n)
         return Appended(
             taken=taken,
@@ -422,8 +399,8 @@ class Logs:
             generation=version >> 32,
             folded=folded,
             start=np.where(kept, known, np.where(warm, 0, -1)),
-            records=records[by_stream].view(RECORD),
-            slot=slot[by_stream],
+            records=records[:end],
+            slot=slot[:end],
             cold=cold,
             era=era,
             may_keep=~registered & (before + count > 0),
@@ -528,32 +505,6 @@ class Logs:
         with self._lock:
             tokens, self._judged[number] = self._judged[number], []
         return b"".join(tokens)
-
-
-def _records(
-    batch: Batch, versions: IntArray, order: IntArray, now: int, historic: bool
-) -> Records:
-    records = np.zeros(len(order), RECORD)
-    at = batch.at[order]
-    records["amount"] = batch.amount[order]
-    records["ident"] = batch.ident[order]
-    records["at_s"], records["at_ms"] = np.divmod(at, 1000)
-    records["arrived_s"], records["arrived_ms"] = divmod(now, 1000)
-    records["policy"] = versions[batch.stream[order]]
-    records["kind"] = ROW
-    records["flags"] = HISTORIC if historic else 0
-    return records
-
-
-def _first_of_each(batch: Batch, order: IntArray) -> IntArray:
-    """Return the places in ``order`` whose row does not repeat an ident of its stream."""
-    ident = batch.ident[order]
-    named = np.flatnonzero(ident)
-    if len(set(ident[named].tolist())) == len(named):
-        return np.arange(len(order))
-    pairs = np.rec.fromarrays([batch.stream[order[named]], ident[named]])
-    first = named[np.unique(pairs, return_index=True)[1]]
-    return np.sort(np.concatenate([np.flatnonzero(np.equal(ident, 0)), first]))
 
 
 def _counted(text: str | None) -> str:

@@ -49,6 +49,6 @@ def test_the_number_of_partitions_cannot_change(client) -> None:
 
 def test_a_store_of_another_format_is_refused(client) -> None:
     charter(client, 4)
-    client.hset(SETTINGS, "format", 2)
-    with pytest.raises(StoreError, match="the store has format 2, this version reads 1"):
+    client.hset(SETTINGS, "format", 3)
+    with pytest.raises(StoreError, match="the store has format 3, this version reads 2"):
         charter(client, 4)

@@ -10,7 +10,7 @@ from service.store.connection import connect
 from service.store.errors import Unavailable
 from service.store.keys import Partition, path, stream_of
 from service.store.loading import CorruptStream, kept_records, load
-from service.store.logs import COMPACT_ROWS, EVIDENCE_ROWS, Logs, decimals
+from service.store.logs import COMPACT_ROWS, EVIDENCE_ROWS, Logs
 from service.streams.folded import Folded
 from service.streams.record import HEADER, RECORD, Stream
 from service.streams.snapshots import write_snapshots
@@ -100,11 +100,6 @@ def test_idents_that_go_from_a_log_to_sets_keep_all_their_digits(logs: Logs, cli
     keys = [k for k in client.keys("*seen*") if client.type(k) == b"set"]
     assert {int(m) for k in keys for m in client.smembers(k)} == set(idents)
     assert client.object("encoding", keys[0]) == b"intset"
-
-
-def test_decimals_are_exact() -> None:
-    idents = np.array([10**18, 2**63 - 1, 0, 1234567890123456789], np.uint64)
-    assert decimals(idents).decode() == "".join(f"{i:019d}" for i in idents.tolist())
 
 
 def test_offsets_at_or_below_the_mark_are_known(logs: Logs) -> None:
