@@ -44,9 +44,9 @@ def show(heads: Sequence[str], rows: Iterable[Sequence[str]]) -> None:
 
 def short(value: float) -> str:
     """Write a figure with three digits, or all of those before the point."""
-    if abs(value) >= 100:
-        return f"{value:,.0f}"
-    return f"{value:.{1 if abs(value) >= 10 else 2}f}"
+    size = abs(value)
+    decimals = 0 if size >= 100 else 1 if size >= 10 else 2 if size >= 1 else 3
+    return f"{value:,.{decimals}f}"
 
 
 def _processor() -> str:

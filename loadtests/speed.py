@@ -56,14 +56,14 @@ CONTESTANTS = (BASE, SCIPY, OWN, STEADY, LEARNING)
 def warm(
     contestant: Contestant, merchants: int, seed: int, folder: Path
 ) -> Iterator[tuple[Server, Traffic]]:
-    """Run a contestant that has seen its share of every merchant, in batches of 5000 rows."""
+    """Run a contestant that has seen rows of every merchant, in the order of time."""
     traffic = Traffic(np.random.default_rng(seed), merchants)
     with store(folder / "store") as url, running(contestant.app, url) as server:
         if contestant.each:
             stock = Stock(folder / "history")
             who = traffic.dealt(contestant.each)
             stock.fill(traffic.batches(who, 5000, days=contestant.days))
-            server.post(stock, HISTORY if contestant.is_tallyward else "", connections=4)
+            server.post(stock, HISTORY if contestant.is_tallyward else "", connections=1)
             stock.path.unlink()
         yield server, traffic
 

@@ -63,7 +63,7 @@ def main() -> None:
         with running(TALLYWARD, url) as server:
             stock = Stock(folder / "history")
             stock.fill(traffic.batches(traffic.dealt(STEADY.each), 5000, days=STEADY.days))
-            server.post(stock, HISTORY, connections=4)
+            server.post(stock, HISTORY, connections=1)
         order = list(settings(given.classes, given.workers, given.threads))
         for _ in range(given.rounds):
             for setting in order:
