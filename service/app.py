@@ -6,8 +6,8 @@ import os
 
 from flask import Flask
 
+from service.ready import get_ready
 from service.settings import Settings, SettingsError
-from service.streams.ready import get_ready
 from service.tallies import Tallies
 from service.web import headers, problems
 from service.web.alarms import alarms

@@ -25,6 +25,7 @@ import gunicorn
 
 import service
 from service.admin_key import keep_a_key, key_file
+from service.ready import get_ready
 from service.settings import Settings
 from service.store.embedded import EmbeddedStore
 from service.store.tether import tethered
@@ -93,6 +94,7 @@ def serve(settings: Settings, on_ready: Callable[[Running], None], app: str = AP
         try:
             with ExitStack() as running:
                 _check_address(settings)
+                get_ready()  # here, so that no worker is late for it, and all find it done
                 url, key, file = settings.redis_url, settings.admin_key, None
                 if url is None:
                     url = running.enter_context(EmbeddedStore(settings.data)).url

@@ -14,9 +14,12 @@ from __future__ import annotations
 from collections.abc import Sequence
 from functools import lru_cache
 from hashlib import blake2b
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+
+from service.digits.compiled import compiled
 
 Words = npt.NDArray[np.uint64]
 
@@ -29,9 +32,13 @@ _WORDS = MAX_ID // 8
 _MASK = 2**64 - 1
 _GOLDEN = 0x9E3779B97F4A7C15  # odd, near 2**64 / golden ratio; spreads small numbers
 _ROW, _POSITION = 1, 2  # domains
-_LOW_HALF = np.uint64(0xFFFFFFFF)
-_32, _33 = np.uint64(32), np.uint64(33)
-_FIRST, _SECOND = np.uint64(0xFF51AFD7ED558CCD), np.uint64(0xC4CEB9FE1A85EC53)
+_CONSTANTS = (
+    np.uint64(0xFF51AFD7ED558CCD),
+    np.uint64(0xC4CEB9FE1A85EC53),
+    np.uint64(LOWEST),
+    np.uint64(HIGHEST + 1 - LOWEST),
+)
+"""Of the finaliser, and of what its words are mapped to."""
 
 
 def row_idents(ids: Sequence[str], key: tuple[int, int]) -> Words:
@@ -54,24 +61,13 @@ def row_idents(ids: Sequence[str], key: tuple[int, int]) -> Words:
     ValueError
         If an id is longer than 64 characters or not ASCII.
     """
-    lengths = set(map(len, ids))
-    if not lengths:
-        return np.zeros(0, dtype=np.uint64)
-    longest = max(lengths)
-    if longest > MAX_ID:
-        raise ValueError(f"ids have at most {MAX_ID} characters, got {longest}")
-    used = max(1, -(-longest // 8))
-    if len(lengths) == 1:
-        padded = np.zeros((len(ids), used * 8), dtype=np.uint8)
-        joined = np.frombuffer("".join(ids).encode("ascii"), dtype=np.uint8)
-        padded[:, :longest] = joined.reshape(len(ids), longest)
-    else:
-        padded = np.array(ids, dtype=f"S{used * 8}").view(np.uint8).reshape(len(ids), used * 8)
-    words = np.ascontiguousarray(padded.view("<u8").T.astype(np.uint64, copy=False))
-    keys = _keys(key, _ROW)
-    mixed = _mix(words ^ keys[:used, None]).sum(axis=0, dtype=np.uint64)
-    mixed += _zeros(key)[used]
-    return _decimal(_mix(np.bitwise_xor(mixed, keys[_WORDS])))
+    lengths = np.fromiter(map(len, ids), np.int64, len(ids))
+    if lengths.size and int(lengths.max()) > MAX_ID:
+        raise ValueError(f"ids have at most {MAX_ID} characters, got {int(lengths.max())}")
+    joined = np.frombuffer("".join(ids).encode("ascii"), np.uint8)
+    idents = np.empty(len(ids), np.uint64)
+    _row_idents(joined, lengths, _keys(key, _ROW), _zeros(key), idents, *_CONSTANTS)
+    return idents
 
 
 def position_idents(
@@ -99,8 +95,10 @@ def position_idents(
     ).digest()
     base = np.frombuffer(digest, dtype="<u8").astype(np.uint64)
     keys = _keys(key, _POSITION)
-    mixed = _mix(positions.astype(np.uint64) ^ keys[0]) + base
-    return _decimal(_mix(mixed ^ keys[_WORDS]))
+    sums = _mix(positions.astype(np.uint64) ^ keys[0]) + base
+    idents = np.empty_like(sums)
+    _finish(sums, idents, keys[_WORDS], *_CONSTANTS)
+    return idents
 
 
 @lru_cache(maxsize=8)
@@ -126,23 +124,72 @@ def _keys(key: tuple[int, int], domain: int) -> Words:
 
 def _mix(words: Words) -> Words:
     """Return each word through the 64-bit finaliser of MurmurHash3, a bijection."""
-    mixed = words ^ (words >> _33)
-    mixed *= _FIRST
-    mixed ^= mixed >> _33
-    mixed *= _SECOND
-    mixed ^= mixed >> _33
+    mixed = np.empty_like(words)
+    _mix_all(words, mixed, *_CONSTANTS[:2])
     return mixed
 
 
-def _decimal(words: Words) -> Words:
+@compiled
+def _mixed(word: Any, first: Any, second: Any) -> Any:
+    shift = np.uint64(33)
+    word ^= word >> shift
+    word *= first
+    word ^= word >> shift
+    word *= second
+    return word ^ (word >> shift)
+
+
+@compiled
+def _decimal(word: Any, lowest: Any, width: Any) -> Any:
     """Return ``LOWEST + floor(word * width / 2**64)``: every value has 2 or 3 words behind it.
 
     A remainder would pile the words left over onto the low end instead.
     """
-    width = HIGHEST + 1 - LOWEST
-    high, low = np.uint64(width >> 32), np.uint64(width & 0xFFFFFFFF)
-    word_high, word_low = words >> _32, words & _LOW_HALF
-    middle = word_high * low + ((word_low * low) >> _32)
-    other = word_low * high + (middle & _LOW_HALF)
-    above = word_high * high + (middle >> _32) + (other >> _32)
-    return np.asarray(above + np.uint64(LOWEST))
+    half, low_half = np.uint64(32), np.uint64(0xFFFFFFFF)
+    high, low = width >> half, width & low_half
+    word_high, word_low = word >> half, word & low_half
+    middle = word_high * low + ((word_low * low) >> half)
+    other = word_low * high + (middle & low_half)
+    return lowest + word_high * high + (middle >> half) + (other >> half)
+
+
+@compiled
+def _mix_all(words: Any, mixed: Any, first: Any, second: Any) -> None:
+    for i in range(len(words)):
+        mixed[i] = _mixed(words[i], first, second)
+
+
+@compiled
+def _row_idents(
+    joined: Any,
+    lengths: Any,
+    keys: Any,
+    zeros: Any,
+    idents: Any,
+    first: Any,
+    second: Any,
+    lowest: Any,
+    width: Any,
+) -> None:
+    at = 0
+    for i in range(len(lengths)):
+        end, words, total = at + lengths[i], 0, np.uint64(0)
+        while at < end:
+            word = np.uint64(0)
+            for b in range(min(8, end - at)):
+                word |= np.uint64(joined[at + b]) << np.uint64(8 * b)
+            total += _mixed(word ^ keys[words], first, second)
+            words += 1
+            at += 8
+        at = end
+        total += zeros[words]
+        mixed = _mixed(total ^ keys[len(keys) - 1], first, second)
+        idents[i] = _decimal(mixed, lowest, width)
+
+
+@compiled
+def _finish(
+    sums: Any, idents: Any, last: Any, first: Any, second: Any, lowest: Any, width: Any
+) -> None:
+    for i in range(len(sums)):
+        idents[i] = _decimal(_mixed(sums[i] ^ last, first, second), lowest, width)

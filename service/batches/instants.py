@@ -51,9 +51,12 @@ def instants(texts: Sequence[str]) -> tuple[IntArray, npt.NDArray[np.bool_]]:
         Whether `instant` would take the text.
     """
     n = len(texts)
-    widths = set(map(len, texts))
     if n <= _FEW:
-        return _settle(texts, np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_))
+        try:
+            return np.array([instant(text) for text in texts], np.int64), np.ones(n, np.bool_)
+        except ValueError:
+            return _settle(texts, np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_))
+    widths = set(map(len, texts))
     if len(widths) == 1:
         width = widths.pop()
         if width in _WIDTHS:

@@ -171,7 +171,7 @@ def excess_mad_of_rows(counts: npt.NDArray[np.int64], law: FloatArray) -> Estima
 
 def _rows(values: npt.NDArray[Any]) -> FloatArray:
     """Return an array as one row a tally, of the one type that the loop is compiled for."""
-    return np.ascontiguousarray(values, np.float64).reshape(-1, values.shape[-1])
+    return np.array(values, np.float64, order="C").reshape(-1, values.shape[-1])
 
 
 @compiled

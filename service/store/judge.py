@@ -105,8 +105,9 @@ class Judge:
             last = records[np.flatnonzero(np.equal(slot, slots[i]))[-1]].tobytes()
             return Place(name.decode(), home, version, last)
 
-        moved = np.isin(slots, slot)  # of the others the last record is not at hand
-        tail = np.where(moved, folded.state["records"][slots] - appended.folded, 0)
+        moved = np.zeros(warm.room, bool)  # of the others the last record is not at hand
+        moved[slot] = True
+        tail = np.where(moved[slots], folded.state["records"][slots] - appended.folded, 0)
         compacted = self._settle(tenant, judged, place, tail)
         warm.keep(slots, appended, compacted)  # not before its crossings are put down
         return judged
@@ -141,8 +142,7 @@ class Judge:
         names: Sequence[bytes],
     ) -> list[Crossing]:
         policies = self.catalogue.of(tenant).by_version
-        named = set(np.unique(records["policy"]).tolist())
-        named |= set(np.unique(folded.state["policy"][slots]).tolist()) - {0}
+        named = {*records["policy"].tolist(), *folded.state["policy"][slots].tolist()} - {0}
         if not named <= policies.keys():
             policies = self.catalogue.of(tenant, fresh=True).by_version
         put_right(folded.state, slots, folded.rules, policies, kinds)

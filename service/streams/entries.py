@@ -52,14 +52,6 @@ def spans(folded: Folded, slots: IntArray, now: int) -> Spans:
     return Spans(window_rows, minimum, lifetime, np.where(lifetime[:, None], whole, window))
 
 
-def standings(state: States, slots: IntArray) -> list[str]:
-    """Return ``alarmed`` for an open alarm, else ``learning`` or ``steady``."""
-    learning = np.any(np.equal(state["reference"][slots], UNDECIDED), axis=1)
-    names = np.where(learning, "learning", "steady")
-    standing: list[str] = np.where(state["alarm"][slots] != b"", "alarmed", names).tolist()
-    return standing
-
-
 def open_alarms(state: States, slots: IntArray) -> list[str | None]:
     """Return the open alarm's id as 32 hexadecimal digits, None where there is none."""
     ids = state["alarm"][slots].tolist()
@@ -97,21 +89,21 @@ def entries(
     span = spans(folded, slots, now)
     far = fit(state, slots, _LEAD_DIGIT_VIEW, span.counts, span.lifetime)
     few = span.counts.sum(axis=1) < span.minimum
-    score, low, high = (np.where(few, np.nan, value) for value in score_of(far.reference))
+    scores = np.where(few, np.nan, np.stack(score_of(far.reference)))
+    misfits = np.stack([misfit_of(f, _CELLS).value for f in (far.reference, far.law)])
+    alarms = open_alarms(state, slots)
+    learning = np.any(np.equal(state["reference"][slots], UNDECIDED), axis=1).tolist()
     columns = zip(
         streams,
         state["rows"][slots].tolist(),
         state["zero"][slots].tolist(),
         span.window_rows.tolist(),
-        decimals(score, 1),
-        decimals(low, 1),
-        decimals(high, 1),
+        *decimals(scores, 1),
         span.lifetime.tolist(),
-        decimals(misfit_of(far.reference, _CELLS).value, 6),
-        decimals(misfit_of(far.law, _CELLS).value, 6),
-        decimals(evidence(folded, slots), 2),
-        standings(state, slots),
-        open_alarms(state, slots),
+        *decimals(misfits, 6),
+        *decimals(evidence(folded, slots)[None], 2),
+        alarms,
+        learning,
         moments(state["last_arrived"][slots]),
         strict=True,
     )
@@ -130,7 +122,7 @@ def entries(
             "misfit": misfit,
             "law_misfit": law_misfit,
             "evidence": gathered,
-            "standing": standing,
+            "standing": "alarmed" if alarm else "learning" if learns else "steady",
             "open_alarm": alarm,
             "updated": updated,
         }
@@ -146,8 +138,8 @@ def entries(
             misfit,
             law_misfit,
             gathered,
-            standing,
             alarm,
+            learns,
             updated,
         ) in columns
     ]

@@ -170,7 +170,7 @@ def excess_of_learned(
 
 
 def _rows(counts: npt.NDArray[Any]) -> FloatArray:
-    return np.ascontiguousarray(counts, np.float64).reshape(-1, counts.shape[-1])
+    return np.array(counts, np.float64, order="C").reshape(-1, counts.shape[-1])
 
 
 @compiled

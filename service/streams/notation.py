@@ -44,7 +44,7 @@ def decimal(value: npt.ArrayLike, places: int) -> float | None:
     return round(plain, places) + 0.0 if math.isfinite(plain) else None  # + 0.0: never -0.0
 
 
-def decimals(values: npt.NDArray[np.float64], places: int) -> list[float | None]:
-    """Return many values as `decimal` does; None for those that are NaN."""
-    rounded: list[float] = (np.round(values, places) + 0.0).tolist()
-    return [value if value == value else None for value in rounded]
+def decimals(rows: npt.NDArray[np.float64], places: int) -> list[list[float | None]]:
+    """Return rows of values (m, n) as `decimal` does; None for those that are NaN."""
+    rounded: list[list[float]] = (np.round(rows, places) + 0.0).tolist()
+    return [[value if value == value else None for value in row] for row in rounded]

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 
+from service import ready
+from service.batches import identity
 from service.detection.policy import Policy
 from service.digits import measures
-from service.streams import fit, ready, snapshots, walk
+from service.store import layout
+from service.streams import fit, snapshots, walk
 from service.streams.detail import detail
 from service.streams.record import Stream
 from service.streams.state import BY_OWN
@@ -20,6 +23,11 @@ ENTRANCES = (
     snapshots._pack_stream,
     snapshots._unpack_streams,
     fit._sum,
+    identity._row_idents,
+    identity._mix_all,
+    identity._finish,
+    layout._lay_out,
+    layout.unfolded,
     fit._excess_of_learned,
     measures._excess_mad,
 )
