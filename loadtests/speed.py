@@ -54,11 +54,15 @@ CONTESTANTS = (BASE, SCIPY, OWN, STEADY, LEARNING)
 
 @contextlib.contextmanager
 def warm(
-    contestant: Contestant, merchants: int, seed: int, folder: Path
+    contestant: Contestant, merchants: int, seed: int, folder: Path, sweep_seconds: float = 5.0
 ) -> Iterator[tuple[Server, Traffic]]:
     """Run a contestant that has seen rows of every merchant, in the order of time."""
     traffic = Traffic(np.random.default_rng(seed), merchants)
-    with store(folder / "store") as url, running(contestant.app, url) as server:
+    folder.mkdir()
+    with (
+        store(folder / "store") as url,
+        running(contestant.app, url, sweep_seconds=sweep_seconds) as server,
+    ):
         if contestant.each:
             stock = Stock(folder / "history")
             who = traffic.dealt(contestant.each)
@@ -157,10 +161,8 @@ def main() -> None:
         base = Path(stack.enter_context(tempfile.TemporaryDirectory()))
         servers = {}
         for number, contestant in enumerate(CONTESTANTS):
-            folder = base / f"{number}"
-            folder.mkdir()
             servers[contestant] = stack.enter_context(
-                warm(contestant, given.merchants, given.seed, folder)
+                warm(contestant, given.merchants, given.seed, base / f"{number}")
             )
             if contestant.is_tallyward:
                 server, _ = servers[contestant]
