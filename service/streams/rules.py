@@ -38,6 +38,8 @@ RULES = np.dtype(
         ("threshold", "<f8"),
         ("active", "<f8", 3),  # 1 for a view that counts
         ("shapes", "<f8", bank.SHAPES),  # weights of the shape detectors
+        ("shape_least", "<f8", bank.SHAPES),  # smallest ratio q/p* of each; 0 for a dropped one
+        ("shape_per_norm", "<f8", bank.SHAPES),  # one over z of the alternative
         ("joint", "<f8", bank.JOINT),  # weights of the joint detectors
         ("low", "<i8", bank.LIMITS),  # just below a review limit: low <= amount < high
         ("high", "<i8", bank.LIMITS),
@@ -166,6 +168,8 @@ def refresh(
     fresh["tolerance"] = policy.tolerances()
     fresh["threshold"] = policy.transactions_per_false_alarm
     fresh["active"], fresh["shapes"], fresh["joint"] = weights(state, slots, policy)
+    fresh["shape_least"] = 1 / state["shape_scale"][slots]
+    fresh["shape_per_norm"] = 1 / state["shape_norm"][slots]
     fresh["minimum"] = policy.minimum_count
     fresh["size"] = policy.baseline_size
     fresh["span"] = int(policy.baseline_days * DAY_MS)

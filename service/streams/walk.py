@@ -29,7 +29,7 @@ WINDOW_MS = BUCKETS * BUCKET_MS
 
 HOUR_BLOCK_MS = 3 * 3600 * 1000
 """Baseline blocks of the time of day (UTC), so that lunch and dinner are told apart."""
-DAY_MS = 86_400_000
+DAY_MS = 24 * 3600 * 1000
 FIRST_BLOCK_LEVEL = 6
 
 FEW_CROSSINGS = 16
@@ -57,11 +57,12 @@ class Tables(NamedTuple):
     cell_weights: FloatArray
     view_weights: FloatArray
     epsilons: FloatArray
+    per_epsilon: FloatArray  # their reciprocals
     shares: FloatArray
-    powers: FloatArray  # (3, 4096) of the retained parts
+    powers: FloatArray  # (4096, 3) of the retained parts
     invented: FloatArray
     rho: FloatArray
-    waves: FloatArray
+    waves: FloatArray  # (90, 12)
     joint_epsilons: FloatArray
     joint_views: IntArray  # whose tolerance serves each joint detector
     numbers: tuple[tuple[int, int, int, int], ...]  # see `_NUMBERS`
@@ -74,10 +75,8 @@ JOINT_VIEWS = (*bank.RARE_VIEWS, 1, *([1] * bank.LIMITS))
 _NUMBERS = (
     (LEAD_PAIR.start, LEAD_PAIR_FROM, TAIL_PAIR.start, TAIL_PAIR_FROM),
     (bank.REPEATS, bank.FIRST_LIMIT, bank.JOINT, bank.REACH),
-    (BUCKET_MS, WINDOW_MS, HOUR_BLOCK_MS, DAY_MS),
     (pages.FIRST_RUN, pages.FIRST_HOUR, pages.FIRST_WEEKDAY, pages.REPEAT_CELL),
-    (pages.WINDOW_PLACES, pages.RUN_BLOCKS, FIRST_BLOCK_LEVEL, len(bank.INVENTED)),
-    (FEW_CROSSINGS, PAUSE_ROWS, record.HISTORIC, NO_VIEW),
+    (pages.WINDOW_PLACES, pages.RUN_BLOCKS, record.HISTORIC, NO_VIEW),
     (UNDECIDED, BY_LAW, BY_OWN, CELLS),
 )
 
@@ -88,11 +87,12 @@ TABLES = Tables(
     cell_weights=bank.CELL_WEIGHTS,
     view_weights=bank.VIEW_WEIGHTS.astype(np.float64),
     epsilons=bank.EPSILONS,
+    per_epsilon=1 / bank.EPSILONS,
     shares=bank.EPSILON_SHARES,
-    powers=bank.RETAINED[:, None] ** np.arange(4096.0),
+    powers=bank.RETAINED ** np.arange(4096.0)[:, None],
     invented=bank.INVENTED,
     rho=bank.SHIFT_RHO,
-    waves=bank.SHIFT_WAVES,
+    waves=np.ascontiguousarray(bank.SHIFT_WAVES.T),
     joint_epsilons=bank.JOINT_EPSILONS,
     joint_views=np.array(JOINT_VIEWS),
     numbers=_NUMBERS,
@@ -200,7 +200,7 @@ def evidence_of(states: Any, rules: Any, slots: IntArray) -> FloatArray:
 
 
 @compiled
-def _tally(state: Any, row_at: int, arrived: int, amount: int, window: int) -> bool:
+def _tally(state: Any, row_at: int, arrived: int, amount: int) -> bool:
     """Count what no detector needs; return whether the row belongs to the rolling window."""
     state.records += 1
     if state.first_at == 0 or row_at < state.first_at:
@@ -210,7 +210,7 @@ def _tally(state: Any, row_at: int, arrived: int, amount: int, window: int) -> b
     if amount == 0:
         state.zero += 1
         return False
-    if row_at < arrived - window:
+    if row_at < arrived - WINDOW_MS:
         state.late += 1
         return False
     return True
@@ -229,7 +229,7 @@ def _cells(
     by_own: int,
 ) -> None:
     """Detectors of the cells that a row hits; misses act in closed form at the next hit."""
-    epsilons, powers = tables.epsilons, tables.powers
+    epsilons, per_epsilon, powers = tables.epsilons, tables.per_epsilon, tables.powers
     for view in range(3):
         if hits[view] < 0:
             continue
@@ -241,18 +241,16 @@ def _cells(
         if hits[h] < 0:
             continue
         view, cell = tables.view_of_cell[hits[h]], state.cell[hits[h]]
-        u = _bound(state, rules, tables, hits[h], by_law, by_own)
+        per_u = 1 / _bound(state, rules, tables, hits[h], by_law, by_own)
         misses = state.clock[view] - cell.hit - 1
         for e in range(3):
-            eps = epsilons[e]
-            keep = 1 - eps
-            kept = powers[e, misses] if misses < powers.shape[1] else keep**misses
-            factor = keep + eps / u
-            value = factor * (kept * cell.value[e] + (1 - kept * keep) / eps)
-            value = min(value, 1e100)
-            cell.value[e] = value
-            weight = tables.cell_weights[hits[h]] * tables.shares[e] * (eps / u) / factor
-            state.sums[view, e] = min(state.sums[view, e] + weight * value, 1e100)
+            keep, gain = 1 - epsilons[e], epsilons[e] * per_u
+            kept = powers[misses, e] if misses < len(powers) else keep**misses
+            factor = keep + gain
+            before = kept * cell.value[e] + (1 - kept * keep) * per_epsilon[e]  # and 1 added
+            cell.value[e] = min(factor * before, CEILING)
+            added = tables.cell_weights[hits[h]] * tables.shares[e] * gain * before
+            state.sums[view, e] = min(state.sums[view, e] + added, CEILING)
             if e == tables.cusum:  # from which onset and severity are read
                 ratio = kept * cell.ratio
                 if ratio <= 1:
@@ -262,7 +260,7 @@ def _cells(
                     cell.onset = number
                     cell.onset_clock = state.clock[view]
                     cell.onset_at = row_at
-                cell.ratio = min(ratio * factor, 1e100)
+                cell.ratio = min(ratio * factor, CEILING)
         cell.run += 1
         cell.spent += amount
         cell.hit = state.clock[view]
@@ -282,20 +280,19 @@ def _shapes(
 ) -> None:
     """Shape detectors, at a row that has a lead pair."""
     k = pair - tables.numbers[0][0]
-    u = _bound(state, rules, tables, pair, by_law, by_own)
+    per_u = 1 / _bound(state, rules, tables, pair, by_law, by_own)
     share = tables.law[pair]
     if state.reference[1] == by_own:
         share = (state.cell[pair].base + 0.5) / (rules.pairs + 45.0)
     some = len(tables.invented)
     for j in range(state.shape.shape[0]):
         ratio = 1.0
-        if math.isfinite(state.shape_scale[j]):
+        if rules.shape_least[j] > 0:
             if j < some:
                 q = (1 - tables.invented[j]) * share + tables.invented[j] / 90
             else:
-                q = share * (1 + tables.rho[j - some] * tables.waves[j - some, k])
-            q /= state.shape_norm[j]
-            ratio = q / min(u, state.shape_scale[j] * q)
+                q = share * (1 + tables.rho[j - some] * tables.waves[k, j - some])
+            ratio = max(q * rules.shape_per_norm[j] * per_u, rules.shape_least[j])
             before = state.shape_ratio[j]
             after = max(before, 1.0) * ratio
             if after <= 1:
@@ -303,8 +300,8 @@ def _shapes(
             elif before <= 1:
                 state.shape_onset[j] = number
                 state.shape_onset_at[j] = row_at
-            state.shape_ratio[j] = min(after, 1e100)
-        state.shape[j] = min(ratio * (state.shape[j] + 1), 1e100)
+            state.shape_ratio[j] = min(after, CEILING)
+        state.shape[j] = min(ratio * (state.shape[j] + 1), CEILING)
 
 
 @compiled
@@ -346,7 +343,7 @@ def _joint(
         for e in range(2):
             eps = tables.joint_epsilons[e]
             ratio = (1 - eps) + eps * member / u
-            state.joint_value[j, e] = min(ratio * (state.joint_value[j, e] + 1), 1e100)
+            state.joint_value[j, e] = min(ratio * (state.joint_value[j, e] + 1), CEILING)
         before = state.joint_ratio[j]
         after = max(before, 1.0) * (retained + (1 - retained) * member / u)
         if after <= 1:
@@ -361,7 +358,7 @@ def _joint(
             state.joint_seen[j] += 1
             state.joint_hits[j] += member
             state.joint_spent[j] += member * amount
-        state.joint_ratio[j] = min(after, 1e100)
+        state.joint_ratio[j] = min(after, CEILING)
 
 
 @compiled
@@ -393,9 +390,8 @@ def _learn(
     again: bool,
 ) -> None:
     """Add a row to a baseline: its counts, and those of its blocks."""
-    hour, day = tables.numbers[2][2], tables.numbers[2][3]
-    first_run, first_hour, first_weekday, repeat = tables.numbers[3]
-    blocks, level = tables.numbers[4][1], tables.numbers[4][2]
+    first_run, first_hour, first_weekday, repeat = tables.numbers[2]
+    blocks = tables.numbers[3][1]
     if state.base_rows == 0:
         state.base_first_at = row_at
         state.base_last_at = row_at
@@ -403,16 +399,16 @@ def _learn(
     state.base_last_at = max(state.base_last_at, row_at)
     for i in range(4):
         state.base_circle[i] += wave[i]
-    state.block_level = max(state.block_level, level)
+    state.block_level = max(state.block_level, FIRST_BLOCK_LEVEL)
     while state.base_rows >> state.block_level >= blocks:
         _pair_up(state, table, count, free, slot, first_run, blocks)
     for kind in range(3):
         if kind == 0:
             place = first_run + (state.base_rows >> state.block_level)
         elif kind == 1:
-            place = first_hour + row_at % day // hour
+            place = first_hour + row_at % DAY_MS // HOUR_BLOCK_MS
         else:
-            place = first_weekday + row_at // day % 7
+            place = first_weekday + row_at // DAY_MS % 7
         page = _page(table, free, slot, place)
         for h in range(6):
             if hits[h] >= 0:
@@ -440,16 +436,16 @@ def _learn_limits(state: Any, rules: Any, amount: int, row_at: int) -> None:
 
 
 @compiled
-def _rests(state: Any, rules: Any, number: int, historic: bool, few: int, pause: int) -> bool:
+def _rests(state: Any, rules: Any, number: int, historic: bool) -> bool:
     """Return whether a row may not cross.
 
     A stream rests after a crossing if it raises no alarms, or if its open alarm has crossed often.
     An alarm of history does not rest from the first live row that would bring it to the feed.
     """
-    if state.crossed_row <= 0 or number - state.crossed_row >= pause:
+    if state.crossed_row <= 0 or number - state.crossed_row >= PAUSE_ROWS:
         return False
     told = historic or state.alarm_live > 0
-    return bool((state.alarm_crossings >= few and told) or rules.watching == 0)
+    return bool((state.alarm_crossings >= FEW_CROSSINGS and told) or rules.watching == 0)
 
 
 @compiled
@@ -491,10 +487,8 @@ def walk(
     """
     first_pair, pair_from, first_tail, tail_from = tables.numbers[0]
     repeats, first_limit, joints, reach = tables.numbers[1]
-    bucket_ms, window_ms = tables.numbers[2][0], tables.numbers[2][1]
-    places, most_pages = tables.numbers[4][0], 4
-    few, pause, historic_flag, no_view = tables.numbers[5]
-    undecided, by_law, by_own, _ = tables.numbers[6]
+    places, _, historic_flag, no_view = tables.numbers[3]
+    undecided, by_law, by_own, _ = tables.numbers[4]
     hits = np.empty(6, np.int64)
     wave = np.empty(6)
     stopped = 0
@@ -512,32 +506,31 @@ def walk(
             row_at: Any = np.int64(row.at_s) * 1000 + np.int64(row.at_ms)
             arrived: Any = np.int64(row.arrived_s) * 1000 + np.int64(row.arrived_ms)
             if amount > 0 and row.policy != state.policy:
-                events[i] = 1
+                events[i] = NEW_POLICY
                 break
-            if free[0] < most_pages:
-                events[i] = 8
+            if free[0] < MOST_PAGES:
+                events[i] = NO_PAGE
                 break
             at += 1
-            timely = _tally(state, row_at, arrived, amount, window_ms)
+            timely = _tally(state, row_at, arrived, amount)
             if amount == 0:
                 continue
             number = state.rows + 1
 
             # digits
-            scale, exponent = 1, 0
-            while amount // scale >= 10:
+            scale, tenth = 1, 1
+            while 10 * scale <= amount:
+                tenth = scale
                 scale *= 10
-                exponent += 1
-            hits[0] = amount // scale - 1
-            hits[1] = -1
-            if amount >= pair_from:
-                hits[1] = amount // (scale // 10) - 10 + first_pair
+            pair = amount // tenth
+            hits[0] = pair - 1 if scale == 1 else pair // 10 - 1
+            hits[1] = pair - 10 + first_pair if amount >= pair_from else -1
             hits[2] = first_tail + amount % 100 if amount >= tail_from else -1
             for c in range(3):
                 hits[3 + c] = tables.coarse[c, hits[1] - first_pair] if hits[1] >= 0 else -1
 
             if timely:
-                bucket = row_at // bucket_ms
+                bucket = row_at // BUCKET_MS
                 place = bucket % places
                 if state.window[place] < bucket:
                     _give_back(table, count, free, slot, place)
@@ -587,8 +580,8 @@ def walk(
 
             total = _evidence(state, rules)
             historic = (row.flags & historic_flag) > 0
-            if total >= rules.threshold and not _rests(state, rules, number, historic, few, pause):
-                events[i] |= 2
+            if total >= rules.threshold and not _rests(state, rules, number, historic):
+                events[i] |= CROSSED
             if (
                 learning
                 and _is_long(state.base_rows, state.base_first_at, state.base_last_at, rules)
@@ -596,7 +589,7 @@ def walk(
                 limits
                 and _is_long(state.limit_rows, state.limit_first_at, state.limit_last_at, rules)
             ):
-                events[i] |= 4
+                events[i] |= COMPLETE
             if events[i] != 0:
                 break
         begin[i] = at
