@@ -1,7 +1,8 @@
-"""Rows a second and latency by gunicorn's worker class, workers and threads.
+"""Rows a second and latency by gunicorn's worker class, workers and batches at a time in each.
 
-Every setting serves the same store in turn, which is warm before the first. A worker of class
-`sync` closes each connection after an answer, so that every batch pays for a new one.
+Threads follow from the latter (`TALLYWARD_MAX_POSTING`) as the service itself reckons. Every
+setting serves the same store in turn, which is warm before the first. A worker of class `sync`
+closes each connection after an answer, so that every batch pays for a new one.
 """
 
 from __future__ import annotations
@@ -27,10 +28,10 @@ SERVED = "served"
 Setting = tuple[str, int, int]
 
 
-def settings(classes: list[str], workers: list[int], threads: list[int]) -> Iterator[Setting]:
-    """Yield worker class, workers and threads; `sync` has no threads."""
+def settings(classes: list[str], workers: list[int], posting: list[int]) -> Iterator[Setting]:
+    """Yield worker class, workers and batches at a time; `sync` takes one."""
     for chosen in classes:
-        yield from itertools.product([chosen], workers, [1] if chosen == "sync" else threads)
+        yield from itertools.product([chosen], workers, [1] if chosen == "sync" else posting)
 
 
 def main() -> None:
@@ -38,18 +39,18 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--classes", nargs="+", default=[SERVED, "sync"])
     parser.add_argument("--workers", type=int, nargs="+", default=[1, 2, 3, 4])
-    parser.add_argument("--threads", type=int, nargs="+", default=[1, 4, 8, 16])
+    parser.add_argument("--posting", type=int, nargs="+", default=[1, 2, 4, 16])
     parser.add_argument("--sizes", type=int, nargs="+", default=[10, 1000])
     parser.add_argument("--merchants", type=int, default=500)
     parser.add_argument("--rounds", type=int, default=2)
     parser.add_argument("--seconds", type=float, default=2.0, help="of each run")
     parser.add_argument("--connections", type=int, default=16)
     parser.add_argument("--seed", type=int, default=1)
-    parser.add_argument("--quick", action="store_true", help="four settings, in seconds")
+    parser.add_argument("--quick", action="store_true", help="few settings, in seconds")
     given = parser.parse_args()
     if given.quick:
         given.merchants = 50
-        given.workers, given.threads, given.rounds, given.seconds = [2], [8], 1, 1.0
+        given.workers, given.posting, given.rounds, given.seconds = [2], [2], 1, 1.0
     print(f"# Workers\n\n{facts('workers')}\n- seed: {given.seed}\n")
     print(
         f"Medians of {given.rounds} runs of {given.seconds:g} s, the order of settings turned "
@@ -64,13 +65,18 @@ def main() -> None:
             stock = Stock(folder / "history")
             stock.fill(traffic.batches(traffic.dealt(STEADY.each), 5000, days=STEADY.days))
             server.post(stock, HISTORY, connections=1)
-        order = list(settings(given.classes, given.workers, given.threads))
+        order = list(settings(given.classes, given.workers, given.posting))
         for _ in range(given.rounds):
             for setting in order:
-                worker_class, workers, threads = setting
+                worker_class, workers, posting = setting
                 chosen = "" if worker_class == SERVED else worker_class
                 with running(
-                    TALLYWARD, url, worker_class=chosen, workers=workers, threads=threads
+                    TALLYWARD,
+                    url,
+                    worker_class=chosen,
+                    workers=workers,
+                    max_posting=posting,
+                    max_waiting=given.connections,  # all may be with one worker
                 ) as server:
                     for rows in given.sizes:
                         runs = Series(
@@ -90,7 +96,7 @@ def main() -> None:
                 median = medians(found[setting, rows])
                 line += [f"{median.rate:,.0f}", short(median.p99), short(median.both)]
             said.append(line)
-    heads = ["class", "workers", "threads"]
+    heads = ["class", "workers", "batches at a time"]
     for rows in given.sizes:
         heads += [f"{rows} a batch: rows/s", "p99 ms", "CPU µs a row"]
     show(heads, said)
