@@ -74,10 +74,11 @@ class Receipt(Answer):
     )
     durability = fields.String(
         required=True,
-        validate=words.one_of("none", "everysec", "always", "unknown"),
+        validate=words.one_of("none", "everysec", "always", "replicas", "unknown"),
         metadata=said(
             "What this answer means when the store's machine fails: none: kept in memory; "
-            "everysec: at most about the last second is lost; always: written to disk; "
+            "everysec: about the last second is lost, more while the disk is slow; always: written "
+            "to disk; replicas: held by as many replicas as the operator asked for; "
             "unknown: the store does not say."
         ),
     )

@@ -167,6 +167,13 @@ class Settings:
         "answer to be taken; then 408, or the caller is hung up on.",
         "s",
     )
+    replicas: int = _number(
+        0,
+        0,
+        9,
+        "Replicas of the store that must have a batch before it is acknowledged; with too few in "
+        "time it is answered with 503.",
+    )
     call_rows: int = _number(
         2000,
         100,

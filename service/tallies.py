@@ -8,7 +8,7 @@ import time
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 import redis
@@ -19,7 +19,7 @@ from service.digits.significand import IntArray
 from service.settings import Settings
 from service.store.catalogue import Catalogue, Policies
 from service.store.charter import Charter, charter
-from service.store.connection import StoreFacts, connect, inspect
+from service.store.connection import CarefulPool, StoreFacts, connect, inspect
 from service.store.directory import Directory
 from service.store.errors import Conflict, StoreError, Stranger, Unavailable, Unknown
 from service.store.feed import Feed, Stored
@@ -48,6 +48,9 @@ CATEGORIES_KNOWN = 100_000
 """Merchants whose category a worker remembers, so as not to write it again with every batch."""
 CATEGORIES_SECONDS = 60.0
 """... and for how long: another worker may have written another one since."""
+
+KEEPING = ("noeviction", "unknown")
+"""Eviction policies under which a store keeps what it has; some servers do not tell."""
 
 STREAMS_AT_ONCE = 500
 """Streams read and folded at a time, of a batch with more than a worker keeps."""
@@ -105,7 +108,12 @@ class Tallies:
         self.catalogue = Catalogue(self.client)
         self.feed = Feed(self.client)
         self.logs = Logs(
-            self.client, settings.partitions, self.horizon_s, call_rows=settings.call_rows
+            self.client,
+            settings.partitions,
+            self.horizon_s,
+            call_rows=settings.call_rows,
+            replicas=settings.replicas,
+            replica_ms=int(800 * settings.store_timeout),
         )
         self.warm = Warm(settings.kept_streams)
         self._patience = 2 * settings.store_timeout
@@ -121,7 +129,7 @@ class Tallies:
             late_ms=max(LATE_MS, int(3000 * settings.store_timeout)),
             usable=self._fixed,
         )
-        self._facts: tuple[float, StoreFacts] | None = None
+        self._facts: tuple[float, int, StoreFacts] | None = None
         self._categories: dict[tuple[str, str], str] = {}
         self._categories_until = 0.0
         with suppress(Unavailable), self._answering():
@@ -146,23 +154,40 @@ class Tallies:
             raise Unavailable("the store does not answer; send the same again later") from error
 
     def facts(self, fresh_seconds: float = 5.0) -> StoreFacts:
-        """Return what the store says about itself, at most some seconds old.
+        """Return what the store says about itself, at most some seconds and one connection old.
 
         Its charter is read again, too: a store that came back empty has another ident key, and
         all workers must hash identities by the same one.
         """
-        now = time.monotonic()
-        if self._facts is None or now - self._facts[0] > fresh_seconds:
-            self._facts = (now, inspect(self.client))
+        now, pool = time.monotonic(), cast(CarefulPool, self.client.connection_pool)
+        if (
+            self._facts is None
+            or self._facts[0] < now - fresh_seconds
+            or pool.made != self._facts[1]
+        ):
+            found = inspect(self.client)
+            self._facts = (now, pool.made, found)
             with suppress(RedisError):  # a replica may not be asked to write one
                 self._read_charter()
-        return self._facts[1]
+        return self._facts[2]
 
     @property
     def durability(self) -> str:
-        """What a 200 means: ``none``, ``everysec``, ``always``, or ``unknown``."""
+        """What a 200 means: ``none``, ``everysec``, ``always``, ``replicas`` or ``unknown``.
+
+        Raises
+        ------
+        Unavailable
+            Also if the store may drop keys when its memory is full.
+        """
         with self._answering():
-            return self.facts().durability
+            facts = self.facts()
+        if facts.maxmemory_policy not in KEEPING:
+            raise Unavailable(
+                f"under the store's maxmemory-policy, {facts.maxmemory_policy}, it may drop "
+                "tallies; it must be noeviction"
+            )
+        return "replicas" if self.logs.replicas else facts.durability
 
     def ident_key(self) -> tuple[int, int]:
         """Return the random key of identities (two 64-bit integers), kept in the store.
@@ -476,7 +501,7 @@ class Tallies:
             "pass" if master else "fail",
             f"role {facts.role}" + (", still loading" if facts.loading else ""),
         )
-        keeps = facts.maxmemory_policy in ("noeviction", "unknown")
+        keeps = facts.maxmemory_policy in KEEPING
         yield _check(
             "eviction",
             "pass" if facts.maxmemory_policy == "noeviction" else "warn" if keeps else "fail",
@@ -486,6 +511,12 @@ class Tallies:
             "durability",
             "fail" if not facts.persisting else "pass" if facts.durability != "none" else "warn",
             f"{facts.durability}" + ("" if facts.persisting else ", the last write failed"),
+        )
+        wanted = self.logs.replicas
+        yield _check(
+            "replicas",
+            "pass" if facts.replicas >= wanted else "fail",
+            f"{facts.replicas} connected, {wanted} must have each batch",
         )
         used = facts.used_memory / facts.maxmemory if facts.maxmemory else 0.0
         yield _check(

@@ -270,6 +270,7 @@ class TestReadiness:
             "role": "pass",
             "eviction": "pass",
             "durability": "pass",
+            "replicas": "pass",
             "memory": "pass",
             "quarantine": "pass",
             "unjudged": "pass",
@@ -279,6 +280,16 @@ class TestReadiness:
     def test_a_store_that_may_evict_is_not_ready(self, tallies: Tallies, policy: str) -> None:
         tallies.client.config_set("maxmemory-policy", policy)
         assert check(tallies, "eviction") == "fail"
+        with pytest.raises(Unavailable, match=f"{policy}, it may drop tallies"):
+            _ = tallies.durability
+
+    def test_what_answers_a_new_connection_is_looked_at_again(self, tallies: Tallies) -> None:
+        assert tallies.durability == "everysec"
+        tallies.client.config_set("appendfsync", "always")
+        assert tallies.durability == "everysec"  # seen a moment ago
+        tallies.client.connection_pool.disconnect()
+        tallies.client.ping()
+        assert tallies.durability == "always"
 
     def test_a_store_without_a_file_is_warned_of(self, tallies: Tallies) -> None:
         tallies.client.config_set("appendonly", "no")

@@ -26,7 +26,20 @@ SCHEMES = ("redis", "rediss", "unix")
 
 
 class CarefulPool(BlockingConnectionPool):
-    """A bounded pool that says when nothing was sent, and keeps no connection after an error."""
+    """A bounded pool that says when nothing was sent, and keeps no connection after an error.
+
+    Attributes
+    ----------
+    made : int
+        How often a connection was made: what is at its other end may be another server each time.
+    """
+
+    made = 0
+
+    def greet(self, connection: Any) -> None:
+        """Count a connection, and say what the client says first."""
+        self.made += 1
+        connection.on_connect()
 
     def get_connection(self, command_name: Any = None, *keys: Any, **options: Any) -> Any:
         """Return a connection that is up.
@@ -102,6 +115,7 @@ def connect(url: str, timeout: float, connections: int = 64) -> redis.Redis:
         retry_on_error=[],
         health_check_interval=0,
         decode_responses=False,
+        redis_connect_func=pool.greet,
         protocol=2,  # the same replies, and no server pushes, from every version of the client
     )
     if scheme != "unix":

@@ -215,15 +215,28 @@ class Logs:
     call_rows : int
         Rows after which a partition's part of a batch is cut, between streams, so that no script
         runs long.
+    replicas : int
+        Copies of the store that must have a batch before it is acknowledged.
+    replica_ms : int
+        Longest wait for them, less than the client waits for an answer.
     """
 
     def __init__(
-        self, client: redis.Redis, partitions: int, horizon_s: int, call_rows: int = 2000
+        self,
+        client: redis.Redis,
+        partitions: int,
+        horizon_s: int,
+        call_rows: int = 2000,
+        replicas: int = 0,
+        replica_ms: int = 1000,
     ) -> None:
         self.client = client
         self.partitions = [Partition(i) for i in range(partitions)]
         self.horizon_s = horizon_s
         self.call_rows = call_rows
+        self.replicas = replicas
+        # on the connection of the writes, or it would not be about them
+        self._copied: list[Command] = [("WAIT", replicas, replica_ms)] if replicas else []
         self.mark = ""  # name of the store by its charter
         self._worker = os.urandom(8).hex()
         self._last = [b""] * partitions  # name under which our previous call is remembered
@@ -339,7 +352,9 @@ class Logs:
         for _ in range(2):
             missing = [i for i in range(len(calls)) if i not in replies]
             try:
-                answers = run(self.client, [[calls[i].command] for i in missing])
+                *answers, copies = run(
+                    self.client, [*([calls[i].command] for i in missing), self._copied]
+                )
             except RedisError as failure:
                 error = failure
                 if surely_not_applied(failure):
@@ -360,6 +375,12 @@ class Logs:
                 f"the store took {done} of {len(batch.stream)} rows for certain; send the same "
                 "batch again, rows with an identity are not counted twice"
             ) from error
+        failed = first_error(copies)
+        if failed is not None or (copies and copies[0] < self.replicas):
+            raise Unavailable(
+                f"the rows are not yet on {self.replicas} replicas of the store; send the same "
+                "batch again, rows with an identity are not counted twice"
+            ) from failed
         return self._appended(calls, [replies[i] for i in range(len(calls))], batch)
 
     def _appended(self, calls: Sequence[Call], replies: Sequence[Any], batch: Batch) -> Appended:
