@@ -218,12 +218,13 @@ def _unfolded(folded: Folded, slots: IntArray, appended: Appended) -> tuple[Reco
     """Bring slots to where an append's records go on; return all records to be folded."""
     state, start = folded.state, appended.start
     new = np.flatnonzero(start == 0)
-    folded.forget(slots[new])
-    state["incarnation"][slots[new]] = appended.incarnation[new]
-    cold = np.fromiter(appended.cold, np.int64, len(appended.cold))
-    assert np.array_equal(state["records"][slots[start >= 0]], start[start >= 0])
+    if new.size:
+        folded.forget(slots[new])
+        state["incarnation"][slots[new]] = appended.incarnation[new]
+    assert np.all((state["records"][slots] == start) | (start < 0))
     records, slot = appended.records, slots[appended.slot]
-    if cold.size:
+    if appended.cold:
+        cold = np.fromiter(appended.cold, np.int64, len(appended.cold))
         loaded = load(list(appended.cold.values()), folded, slots[cold])
         records = np.concatenate([records, loaded.records])
         slot = np.concatenate([slot, loaded.slot])
