@@ -12,12 +12,12 @@ import numpy as np
 import pytest
 from numba.core.dispatcher import Dispatcher
 
-from service.batches import identity
+from service.batches import identity, instants
 from service.digits import compiled, measures
 from service.store import layout
 from service.streams import fit, snapshots, walk
 
-MODULES = (identity, measures, walk, snapshots, fit, layout)
+MODULES = (identity, instants, measures, walk, snapshots, fit, layout)
 
 
 def own_numbers(module: ModuleType) -> set[str]:

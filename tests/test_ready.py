@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from service import ready
-from service.batches import identity
+from service.batches import identity, instants
 from service.detection.policy import Policy
 from service.digits import measures
 from service.store import layout
@@ -26,6 +26,7 @@ ENTRANCES = (
     identity._row_idents,
     identity._mix_all,
     identity._finish,
+    instants._read,
     layout._lay_out,
     layout.unfolded,
     fit._excess_of_learned,

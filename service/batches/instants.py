@@ -1,23 +1,19 @@
-"""A column of RFC 3339 times to milliseconds, without a loop over the usual rows."""
+"""A column of RFC 3339 times to milliseconds."""
 
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from schemas.transaction import instant
+from service.digits.compiled import compiled
 
 IntArray = npt.NDArray[np.int64]
 
 _FIRST_YEAR, _LAST_YEAR = 1970, 2100
-_DIGITS = np.array([0, 2, 5, 8, 11, 14, 17])  # tens of century, year, month, day, h, min, s
-_MARKS = ((4, "-"), (7, "-"), (10, "T"), (13, ":"), (16, ":"))
-_SHORT = len("2026-11-30T12:00:00Z")
-_WIDTHS = (_SHORT, *range(_SHORT + 4, _SHORT + 11))  # with 3 to 9 digits of a fraction
-
-_FEW = 16  # up to here one by one is faster
 
 
 def _calendar() -> IntArray:
@@ -51,22 +47,14 @@ def instants(texts: Sequence[str]) -> tuple[IntArray, npt.NDArray[np.bool_]]:
         Whether `instant` would take the text.
     """
     n = len(texts)
-    if n <= _FEW:
-        try:
-            return np.array([instant(text) for text in texts], np.int64), np.ones(n, np.bool_)
-        except ValueError:
-            return _settle(texts, np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_))
-    widths = set(map(len, texts))
-    if len(widths) == 1:
-        width = widths.pop()
-        if width in _WIDTHS:
-            return _settle(texts, *_fixed(texts, width))
-        return _settle(texts, np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_))
     milliseconds, ok = np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_)
-    lengths = np.fromiter(map(len, texts), np.int64, n)
-    for width in widths.intersection(_WIDTHS):
-        chosen = np.flatnonzero(lengths == width).tolist()
-        milliseconds[chosen], ok[chosen] = _fixed([texts[i] for i in chosen], width)
+    try:
+        joined = np.frombuffer("".join(texts).encode("ascii"), np.uint8)
+    except UnicodeEncodeError:
+        pass
+    else:
+        lengths = np.fromiter(map(len, texts), np.int64, n)
+        _read(joined, lengths, _CALENDAR, _FIRST_YEAR, milliseconds, ok)
     return _settle(texts, milliseconds, ok)
 
 
@@ -85,32 +73,46 @@ def _settle(
     return milliseconds, ok
 
 
-def _fixed(texts: Sequence[str], width: int) -> tuple[IntArray, npt.NDArray[np.bool_]]:
-    """Read texts of one width that have the usual shape."""
-    n = len(texts)
-    try:
-        joined = "".join(texts).encode("ascii")
-    except UnicodeEncodeError:
-        return np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.bool_)
-    # One row of bytes for each character place, so that every step below runs over memory.
-    places = np.ascontiguousarray(np.frombuffer(joined, dtype=np.uint8).reshape(n, width).T)
-    values = places - np.uint8(ord("0"))  # bytes below "0" wrap around to large ones
-    tens, ones = values[_DIGITS], values[_DIGITS + 1]
-    ok = (np.maximum(tens, ones) <= 9).all(axis=0)
-    for place, mark in _MARKS:
-        ok &= places[place] == ord(mark)
-    ok &= places[width - 1] == ord("Z")
-    century, year, month, day, hour, minute, second = (tens * 10 + ones).astype(np.int64)
-    ok &= (hour < 24) & (minute < 60) & (second < 60) & (month - 1 < 12) & (day - 1 < 31)
-    index = ((century * 100 + year - _FIRST_YEAR) * 12 + month - 1) * 32 + day - 1
-    ok &= (month > 0) & (day > 0) & (index >= 0) & (index < _CALENDAR.size)
-    days = _CALENDAR[np.where(ok, index, 0)]
-    ok &= days >= 0
-    milliseconds = (((days * 24 + hour) * 60 + minute) * 60 + second) * 1000
-    if width > _SHORT:
-        ok &= places[19] == ord(".")
-        fraction = values[20 : width - 1]
-        ok &= (fraction <= 9).all(axis=0)
-        milliseconds += fraction[0].astype(np.int64) * 100 + fraction[1] * np.int64(10)
-        milliseconds += fraction[2]
-    return np.where(ok, milliseconds, 0), ok
+@compiled
+def _number(text: Any, at: int, digits: int) -> int:
+    """Return the number that some digits make, -1 if they are none."""
+    number = 0
+    for i in range(at, at + digits):
+        digit = np.int64(text[i]) - 48
+        if digit < 0 or digit > 9:
+            return -1
+        number = 10 * number + digit
+    return number
+
+
+@compiled
+def _read(
+    joined: Any, lengths: Any, calendar: Any, first_year: int, milliseconds: Any, ok: Any
+) -> None:
+    """Read what has the usual shape."""
+    start = 0
+    for i in range(len(lengths)):
+        width, text = lengths[i], joined[start : start + lengths[i]]
+        start += width
+        if not (width == 20 or 24 <= width <= 30) or text[width - 1] != 90:  # Z
+            continue
+        if not (text[4] == 45 and text[7] == 45 and text[10] == 84):  # - - T
+            continue
+        if not (text[13] == 58 and text[16] == 58):  # : :
+            continue
+        year, month, day = _number(text, 0, 4), _number(text, 5, 2), _number(text, 8, 2)
+        hour, minute, second = _number(text, 11, 2), _number(text, 14, 2), _number(text, 17, 2)
+        if not (0 <= hour < 24 and 0 <= minute < 60 and 0 <= second < 60):
+            continue
+        index = ((year - first_year) * 12 + month - 1) * 32 + day - 1
+        if not (0 < month <= 12 and 0 < day <= 31 and 0 <= index < len(calendar)):
+            continue
+        days, fraction = calendar[index], 0
+        if width > 20:
+            fraction = _number(text, 20, 3)
+            if text[19] != 46 or _number(text, 20, width - 21) < 0:
+                continue
+        if days >= 0:
+            seconds = ((days * 24 + hour) * 60 + minute) * 60 + second
+            milliseconds[i] = seconds * 1000 + fraction
+            ok[i] = True
