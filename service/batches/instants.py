@@ -76,13 +76,13 @@ def _settle(
 @compiled
 def _number(text: Any, at: int, digits: int) -> int:
     """Return the number that some digits make, -1 if they are none."""
-    number = 0
+    number: Any = 0
     for i in range(at, at + digits):
         digit = np.int64(text[i]) - 48
         if digit < 0 or digit > 9:
             return -1
         number = 10 * number + digit
-    return number
+    return int(number)
 
 
 @compiled
