@@ -230,7 +230,8 @@ def score(counts: npt.ArrayLike, p: npt.ArrayLike) -> Estimate:
 
 def score_of(excess: Estimate) -> Estimate:
     """Return the score that belongs to an ``excess_mad`` of the lead digit."""
-    return Estimate(_score(excess.value), _score(excess.high), _score(excess.low))
+    value, low, high = 100 * np.maximum(0, 1 - np.stack(excess) / WORST_EXCESS_MAD)
+    return Estimate(value, high, low)
 
 
 def band(view: str, counts: npt.ArrayLike, p: npt.ArrayLike) -> npt.NDArray[np.object_]:
@@ -316,10 +317,6 @@ def _mad(counts: FloatArray, n: FloatArray, law: FloatArray) -> FloatArray:
 
 def _noise_constant(shares: FloatArray) -> FloatArray:
     return np.asarray(np.sqrt(2 / np.pi * shares * (1 - shares)).mean(axis=-1))
-
-
-def _score(excess: FloatArray) -> FloatArray:
-    return np.asarray(100 * np.maximum(0, 1 - excess / WORST_EXCESS_MAD))
 
 
 def _log_binomial(k: FloatArray, n: FloatArray, p: FloatArray) -> FloatArray:

@@ -8,7 +8,7 @@ from typing import Any, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from service.digits.measures import misfit_of, score_of
+from service.digits.measures import score_of
 from service.digits.significand import FloatArray, IntArray
 from service.digits.views import LEAD_DIGIT
 from service.streams.fit import fit, window_counts
@@ -90,7 +90,8 @@ def entries(
     far = fit(state, slots, _LEAD_DIGIT_VIEW, span.counts, span.lifetime)
     few = span.counts.sum(axis=1) < span.minimum
     scores = np.where(few, np.nan, np.stack(score_of(far.reference)))
-    misfits = np.stack([misfit_of(f, _CELLS).value for f in (far.reference, far.law)])
+    # what `misfit_of` makes of a value; the intervals are not told here
+    misfits = np.stack([far.reference.value, far.law.value]) * (_CELLS / 2)
     alarms = open_alarms(state, slots)
     learning = np.any(np.equal(state["reference"][slots], UNDECIDED), axis=1).tolist()
     columns = zip(
