@@ -2,17 +2,24 @@
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import secrets
 from dataclasses import dataclass
 from typing import Any
 
 import redis
+from redis.exceptions import ResponseError
 
 from service.store.errors import StoreError
 from service.store.keys import SETTINGS, Partition
 
 FORMAT = 2
+
+_SETTING = "set-max-intset-entries"
+ROOM = 512
+"""Integers that every server keeps as an array in a set unless told otherwise."""
+MOST_ROOM = 4096
 
 
 @dataclass(frozen=True)
@@ -23,11 +30,15 @@ class Charter:
     ----------
     partitions : int
         Number of partitions; a merchant's place follows from it, so it never changes.
+    shard : int
+        Idents that a set is meant to hold, so that the server that made the store keeps it as an
+        array of integers; on one that does not, it only takes more memory.
     ident_key : tuple of int
         Two random 64-bit integers that key the hashes of identities.
     """
 
     partitions: int
+    shard: int
     ident_key: tuple[int, int]
 
     @property
@@ -35,6 +46,14 @@ class Charter:
         """Name of the store, which each of its partitions bears."""
         key = b"".join(half.to_bytes(8, "big") for half in self.ident_key)
         return hashlib.blake2b(key, digest_size=8, person=b"tallyward store").hexdigest()
+
+
+def _shard(client: redis.Redis) -> int:
+    """Return how many idents a set should hold here; their digits spread them unevenly."""
+    found: Any = {}
+    with contextlib.suppress(ResponseError):  # hosted servers often forbid CONFIG
+        found = client.config_get(_SETTING)
+    return int(0.78 * min(int(found.get(_SETTING, ROOM)), MOST_ROOM))
 
 
 def charter(client: redis.Redis, partitions: int) -> Charter:
@@ -49,6 +68,7 @@ def charter(client: redis.Redis, partitions: int) -> Charter:
     pipe: Any = client.pipeline(transaction=True)
     pipe.hsetnx(SETTINGS, "format", FORMAT)
     pipe.hsetnx(SETTINGS, "partitions", partitions)
+    pipe.hsetnx(SETTINGS, "shard", _shard(client))
     pipe.hsetnx(SETTINGS, "ident_key", secrets.token_bytes(16))
     pipe.hgetall(SETTINGS)
     found = pipe.execute()[-1]
@@ -62,7 +82,8 @@ def charter(client: redis.Redis, partitions: int) -> Charter:
             f"set TALLYWARD_PARTITIONS={int(found[b'partitions'])}"
         )
     key = found[b"ident_key"]
-    mine = Charter(partitions, (int.from_bytes(key[:8], "big"), int.from_bytes(key[8:], "big")))
+    halves = int.from_bytes(key[:8], "big"), int.from_bytes(key[8:], "big")
+    mine = Charter(partitions, int(found[b"shard"]), halves)
     for number in range(partitions):
         pipe.set(Partition(number).mark, mine.mark, nx=True)
         pipe.get(Partition(number).mark)

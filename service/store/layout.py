@@ -15,6 +15,8 @@ from service.streams.record import HISTORIC, RECORD, ROW, Records
 DECIMALS = 19
 """Digits of an ident."""
 
+_TEXT = 0xA0 + DECIMALS  # msgpack's first byte of a text of that length
+
 
 class Layout(NamedTuple):
     """A batch's rows as they go to the logs; k streams, n rows.
@@ -28,8 +30,8 @@ class Layout(NamedTuple):
     rows : int64 array (n,)
         The batch's rows by stream.
     records : array of RECORD (n,)
-    decimals : uint8 array (n, 19)
-        Idents in decimal digits; zeros for none.
+    decimals : uint8 array (n, 20)
+        Idents in decimal digits as msgpack has texts; zeros for none.
     """
 
     streams: IntArray
@@ -60,9 +62,9 @@ def lay_out(
         np.empty(k + 1, np.int64),
         np.empty(n, np.int64),
         np.empty(n, RECORD),
-        np.empty((n, DECIMALS), np.uint8),
+        np.empty((n, 1 + DECIMALS), np.uint8),
     )
-    constant = (now // 1000, now % 1000, ROW, HISTORIC if historic else 0)
+    constant = (now // 1000, now % 1000, ROW, HISTORIC if historic else 0, _TEXT)
     columns = batch.stream, batch.amount, batch.at, batch.ident
     _lay_out(chosen, *columns, home, versions, constant, *out)
     return out
@@ -96,7 +98,7 @@ def _lay_out(
     records: Any,
     decimals: Any,
 ) -> None:
-    arrived_s, arrived_ms, kind, flags = constant
+    arrived_s, arrived_ms, kind, flags, text = constant
     k = len(home)
     # counting sorts: streams by partition, rows by stream
     at_home = np.zeros(home.max() + 2, np.int64)
@@ -131,7 +133,8 @@ def _lay_out(
         record.kind = kind
         record.flags = flags
         rest = ident[row]
-        for d in range(decimals.shape[1] - 1, -1, -1):
+        decimals[j, 0] = text
+        for d in range(decimals.shape[1] - 1, 0, -1):
             decimals[j, d] = np.uint8(48) + np.uint8(rest % np.uint64(10))
             rest //= np.uint64(10)
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import threading
+import time
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
@@ -29,12 +30,18 @@ EVIDENCE_ROWS = 128
 COMPACT_ROWS = 128
 """A log is compacted when it holds so many records that its snapshot does not."""
 
+SHARD = 399
+"""Idents of a set where the store's charter says nothing else."""
+
 _PLACE = np.dtype([("source", "<u2"), ("offset", "<f8")])
 _TEMPORARY_MS = 60_000
 
 
-_HEAD_WORDS = 6  # format and generation, incarnation, base, folded; rows; status
+_VERSION = np.dtype([("generation", "<u4"), ("incarnation", "<u8")])
+_JUDGED_AT_ONCE = 8
+_JUDGED_WITHIN_S = 1.0
 _COLD, _NEW, _KEPT = 0, 1, 2
+_LISTS = msgspec.msgpack.Decoder(tuple[list[int], list[int], list[int], list[int]])
 
 
 @dataclass(frozen=True)
@@ -238,10 +245,12 @@ class Logs:
         # on the connection of the writes, or it would not be about them
         self._copied: list[Command] = [("WAIT", replicas, replica_ms)] if replicas else []
         self.mark = ""  # name of the store by its charter
+        self.shard = SHARD  # idents of a set by its charter
         self._worker = os.urandom(8).hex()
         self._last = [b""] * partitions  # name under which our previous call is remembered
         self._era = np.zeros(partitions, np.int64)
         self._judged: dict[int, list[bytes]] = {i: [] for i in range(partitions)}
+        self._taken_at = [0.0] * partitions
         self._lock = threading.Lock()
 
     def partition(self, tenant: str, merchant: str) -> Partition:
@@ -285,14 +294,15 @@ class Logs:
         by_home, edges, rows, records, decimals = layout
         texts = [_counted(batch.ids[i]) for i in rows.tolist()]
         id_bytes = np.add.reduceat(np.fromiter(map(len, texts), np.int64, len(texts)), edges[:-1])
-        incarnations = np.zeros((n, 2), np.uint64)
-        incarnations[:, 0] = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
-        folded, generation = np.zeros(n, np.int64), np.zeros(n, np.int64)
+        named = np.add.reduceat(np.not_equal(records["ident"], 0), edges[:-1], dtype=np.int64)
+        incarnations = np.frombuffer(os.urandom(8 * n), np.uint64) | np.uint64(1)
+        folded, versions_known = np.zeros(n, np.int64), np.zeros(n, _VERSION)
         if known is not None:
             current = known.era == self._era[home]
-            incarnations[:, 1] = np.where(current, known.incarnation, 0)[by_home]
-            folded, generation = known.records[by_home], known.generation[by_home]
-        by_stream = (np.diff(edges), id_bytes, folded, generation)
+            versions_known["incarnation"] = np.where(current, known.incarnation, 0)[by_home]
+            versions_known["generation"] = known.generation[by_home]
+            folded = known.records[by_home]
+        by_stream = (np.diff(edges), named, id_bytes, folded)
         sources = msgspec.msgpack.encode(batch.sources)
         out: list[Call] = []
         for a, b in pairwise(self._cuts(home[by_home], edges)):
@@ -307,11 +317,12 @@ class Logs:
                 [
                     partition.tag,
                     token,
-                    self._take_judged(p),
+                    self._take_judged(p, _JUDGED_AT_ONCE),
                     msgspec.msgpack.encode([column[a:b].tolist() for column in by_stream]),
                     incarnations[a:b].tobytes(),
+                    versions_known[a:b].tobytes(),
                     records[part].tobytes(),
-                    decimals[part].tobytes(),
+                    _texts(decimals[part]) if named[a:b].any() else b"",
                     "".join(texts[part]).encode("latin-1"),
                     _places(batch, rows[part]),
                     sources,
@@ -319,6 +330,7 @@ class Logs:
                     self._worker,
                     self.mark,
                     out[-1].token if follows else self._last[p],
+                    self.shard,
                 ],
             )
             out.append(Call(partition, token, layout, slice(a, b), paths, folded[a:b], command))
@@ -386,11 +398,16 @@ class Logs:
     def _appended(self, calls: Sequence[Call], replies: Sequence[Any], batch: Batch) -> Appended:
         n, layout = len(batch.streams), calls[0].layout
         taken = np.zeros(len(batch.stream), bool)
-        mask = b"".join([reply[0] for reply in replies])
-        taken[layout.rows] = np.frombuffer(mask, np.uint8) == ord("1")
-        head = np.empty((n, _HEAD_WORDS), np.int64)
-        heads = b"".join([reply[1] for reply in replies])
-        head[layout.streams] = np.frombuffer(heads, np.int64).reshape(n, _HEAD_WORDS)
+        taken[layout.rows] = True
+        lists = [_LISTS.decode(reply[0]) for reply in replies]
+        for call, (absent, *_) in zip(calls, lists, strict=True):
+            if absent:
+                taken[layout.rows[layout.edges[call.part.start] + np.array(absent)]] = False
+        before, folded, status = np.empty((3, n), np.int64)
+        for k, column in enumerate((before, folded, status), 1):
+            column[layout.streams] = [number for of_call in lists for number in of_call[k]]
+        version = np.empty(n, _VERSION)
+        version[layout.streams] = np.frombuffer(b"".join([r[1] for r in replies]), _VERSION)
         known, era = np.empty(n, np.int64), np.empty(n, np.int64)
         registered = np.zeros(n, bool)
         cold: dict[int, Blobs] = {}
@@ -401,9 +418,8 @@ class Logs:
             if blobs:
                 pairs = iter(blobs)
                 for i, s in enumerate(call.streams.tolist()):
-                    if head[s, 5] == _COLD:
+                    if status[s] == _COLD:
                         cold[s] = Blobs(call.paths[i], call.partition, next(pairs), next(pairs))
-        version, incarnation, _, folded, before, status = head.T
         kept, warm = np.equal(status, _KEPT), np.not_equal(status, _COLD)
         others = np.where(kept, before - known, 0)
         tails = np.frombuffer(b"".join([reply[2] for reply in replies]), RECORD)
@@ -416,8 +432,8 @@ class Logs:
             taken=taken,
             first=np.where(count > 0, before, -1),
             count=count,
-            incarnation=incarnation.astype(np.uint64),
-            generation=version >> 32,
+            incarnation=version["incarnation"],
+            generation=version["generation"].astype(np.int64),
             folded=folded,
             start=np.where(kept, known, np.where(warm, 0, -1)),
             records=records[:end],
@@ -497,6 +513,7 @@ class Logs:
                 arguments += [field, document]
             name = place.path
             keys = [p.log(name), p.snapshot(name), temporary, p.ids(name), p.outbox]
+            keys.append(f"{p.tag}seen/{name}")
             groups.append(
                 [
                     ("SET", temporary, snapshot, "PX", _TEMPORARY_MS),
@@ -522,10 +539,19 @@ class Logs:
         if groups:
             run(self.client, groups)
 
-    def _take_judged(self, number: int) -> bytes:
+    def _take_judged(self, number: int, least: int = 1) -> bytes:
+        """Return calls to forget, unless they are few and none has waited for long."""
         with self._lock:
-            tokens, self._judged[number] = self._judged[number], []
+            tokens, now = self._judged[number], time.monotonic()
+            if len(tokens) < least and now - self._taken_at[number] < _JUDGED_WITHIN_S:
+                return b""
+            self._judged[number], self._taken_at[number] = [], now
         return b"".join(tokens)
+
+
+def _texts(cells: npt.NDArray[np.uint8]) -> bytes:
+    """Return texts, packed one by one, as a msgpack list."""
+    return b"\xdd" + len(cells).to_bytes(4, "big") + cells.tobytes()
 
 
 def _counted(text: str | None) -> str:

@@ -52,3 +52,19 @@ def test_a_store_of_another_format_is_refused(client) -> None:
     client.hset(SETTINGS, "format", 3)
     with pytest.raises(StoreError, match="the store has format 3, this version reads 2"):
         charter(client, 4)
+
+
+@pytest.mark.parametrize(("room", "shard"), [(512, 399), (4096, 3194), (100_000, 3194), (64, 49)])
+def test_sets_are_as_large_as_the_server_keeps_them_as_arrays(client, room: int, shard) -> None:
+    client.config_set("set-max-intset-entries", room)
+    assert charter(client, 4).shard == shard
+    client.config_set("set-max-intset-entries", 300)
+    assert charter(client, 4).shard == shard
+
+
+def test_a_server_that_tells_no_settings_is_taken_to_have_its_own(client) -> None:
+    client.execute_command("ACL", "SETUSER", "default", "-config")
+    try:
+        assert charter(client, 4).shard == 399
+    finally:
+        client.execute_command("ACL", "SETUSER", "default", "+@all")

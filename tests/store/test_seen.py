@@ -8,7 +8,7 @@ import pytest
 
 from service.store.keys import path
 from service.store.logs import Logs
-from service.streams.record import Stream
+from service.streams.record import HEADER, Stream
 from tests.store.batches import NOW, batch
 from tests.store.workers import HORIZON, named
 
@@ -34,9 +34,9 @@ def seen(logs: Logs) -> str:
 
 def groups(logs: Logs) -> list[tuple[int, int, int]]:
     """Return when each group of sets goes, its level, and at which row it was begun."""
-    index = logs.client.get(seen(logs)) or b""
-    cells = [index[i : i + 24] for i in range(0, len(index), 24)]
-    return [(int(c[:10]), int(c[10:11]), int(c[11:])) for c in cells]
+    index = (logs.client.get(seen(logs)) or b"")[HEADER.itemsize :]
+    cells = [index[i : i + 19] for i in range(0, len(index), 19)]
+    return [(int(c[8:18]), int(c[18:]), int.from_bytes(c[:8], "little")) for c in cells]
 
 
 def sets(client) -> list[bytes]:
@@ -78,11 +78,11 @@ def test_an_epoch_that_is_gone_is_forgotten(client) -> None:
     logs = Logs(client, 3, HORIZON)
     now = client.time()[0]
     post(logs, named("a", 0, LONG))
-    gone, other = b"%010d2%013d" % (now - 1, 0), b"%010d1%013d" % (now + 100, 0)
-    client.set(seen(logs), gone + other)
+    gone, other = (bytes(8) + b"%010d%d" % group for group in [(now - 1, 2), (now + 100, 1)])
+    client.set(seen(logs), client.getrange(seen(logs), 0, 31) + other + gone)
     post(logs, ["new"])
     assert [level for _, level, _ in groups(logs)] == [1, 1]  # begun as large as the one before
-    assert groups(logs)[0][0] == now + 100
+    assert groups(logs)[1][0] == now + 100
     assert post(logs, ["new"]) == [False]
 
 

@@ -10,6 +10,7 @@
 -- KEYS[3]   the new snapshot, under a temporary key
 -- KEYS[4]   ids of the rows in the log
 -- KEYS[5]   outbox
+-- KEYS[6]   index of the stream's idents, if there is one: begins with a copy of the log's header
 -- ARGV[1]   tag
 -- ARGV[2]   generation and incarnation that were folded (12 bytes as in the header)
 -- ARGV[3]   records folded: the first row number that the new snapshot does not hold
@@ -30,6 +31,7 @@ local generation = struct.unpack('<I4', header, 5)
 local new_base = math.max(base, folded - tonumber(ARGV[4]))
 local drop = new_base - base
 local rest = redis.call('GETRANGE', key, 32 * (drop + 1), -1)
+local copied = redis.call('EXISTS', KEYS[6]) == 1
 local ids, skip = nil, 1
 if drop > 0 then
   ids = redis.call('GET', KEYS[4]) or ''
@@ -41,7 +43,9 @@ end
 for k = 6, #ARGV, 2 do redis.call('HSET', KEYS[5], ARGV[k], ARGV[k + 1]) end
 redis.call('RENAME', KEYS[3], KEYS[2])
 redis.call('PERSIST', KEYS[2])
-redis.call('SET', key, string.sub(header, 1, 4) .. struct.pack('<I4', generation + 1)
-  .. string.sub(header, 9, 16) .. struct.pack('<I8I8', new_base, folded) .. rest)
+header = string.sub(header, 1, 4) .. struct.pack('<I4', generation + 1)
+  .. string.sub(header, 9, 16) .. struct.pack('<I8I8', new_base, folded)
+redis.call('SET', key, header .. rest)
+if copied then redis.call('SETRANGE', KEYS[6], 0, header) end
 if ids then redis.call('SET', KEYS[4], string.sub(ids, skip)) end
 return 1

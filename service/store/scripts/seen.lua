@@ -1,30 +1,45 @@
 -- Idents seen of a stream, as sets of integers small enough that a server keeps them as arrays.
 --
--- An index of a stream ("{tag}seen/<path>") names its groups of sets, 24 characters each: in decimal
--- the time when the group goes (10), its level (1) and the stream's row number when it was begun
--- (13). A group of level l has 10^l sets of about 400 idents, by their last l digits. When it is
--- full, one of the next level is begun; when an epoch of the server's clock is over, one of the same
--- level. A group goes a horizon and a day after the end of its epoch, whatever the horizon is by
--- then.
-local SHARD, DAY = 400, 86400
+-- An index of a stream ("{tag}seen/<path>") begins with a copy of its log's header, 32 bytes, which
+-- is written only where the header is; it may expire, and is then made again. Its groups of sets follow, the newest first, 19 bytes each:
+-- the stream's row number when the group was begun (i64), and in decimal the time when it goes (10)
+-- and its level (1). A group of level l has 10^l sets of about `shard` idents, by their last l
+-- digits. When it is full, one of the next level is begun; when an epoch of the server's clock is
+-- over, one of the same level. A group goes a horizon and a day after the end of its epoch,
+-- whatever the horizon is by then.
+local DAY = 86400
 
-local call, sub = redis.call, string.sub
+local call, sub, unpack, min = redis.call, string.sub, unpack, math.min
+local time = call('TIME')
+local now = time[1]
+local levels, ends = {}, {}  -- by the name of a group
 
--- Return idents by the set of a group that they belong to.
-local function by_set(group, level, idents)
-  local sets = {}
-  for k = 1, #idents do
-    local name = group .. sub(idents[k], -level)
-    local members = sets[name]
-    if members then members[#members + 1] = idents[k] else sets[name] = {idents[k]} end
+-- Return a group's name, its level and the time when it goes; level nil if it is gone.
+local function group_at(index, at)
+  local name = sub(index, at + 8, at + 18)
+  if not ends[name] then
+    ends[name] = sub(name, 1, 10)
+    if ends[name] > now then levels[name] = tonumber(sub(name, 11)) end
   end
-  return sets
+  return name, levels[name], ends[name]
+end
+
+-- Return idents by their last digits.
+local function split(level, idents, from, to)
+  local parts = {}
+  for k = from, to do
+    local ident = idents[k]
+    local digits = sub(ident, -level)
+    local part = parts[digits]
+    if part then part[#part + 1] = ident else parts[digits] = {ident} end
+  end
+  return parts
 end
 
 -- Return those of some idents that a set holds, as keys of a table; nil for none.
-local function in_set(name, idents, found)
-  for k = 1, #idents, 4000 do
-    local there = call('SMISMEMBER', name, unpack(idents, k, math.min(k + 3999, #idents)))
+local function in_set(name, idents, from, to, found)
+  for k = from, to, 4000 do
+    local there = call('SMISMEMBER', name, unpack(idents, k, min(k + 3999, to)))
     for m = 1, #there do
       if there[m] == 1 then
         found = found or {}
@@ -35,63 +50,78 @@ local function in_set(name, idents, found)
   return found
 end
 
--- Return those of some idents that a stream's sets hold, as keys of a table; nil for none.
-local function look_up(seen, index, idents, now)
-  local found
-  for at = 1, #index, 24 do
-    local group, level = seen .. sub(index, at, at + 10), sub(index, at + 10, at + 10)
-    if sub(index, at, at + 9) <= now then
-      -- gone
-    elseif level == '0' then
-      found = in_set(group, idents, found)
-    else
-      for name, members in pairs(by_set(group, level, idents)) do
-        found = in_set(name, members, found)
+-- Return those of some idents that a stream's sets hold, as keys of a table, nil for none, and the
+-- idents as they were split by the level.
+local function look_up(seen, index, idents, from, to)
+  local found, splits
+  for at = 33, #index, 19 do
+    local name, level = group_at(index, at)
+    if level == 0 then
+      found = in_set(seen .. name, idents, from, to, found)
+    elseif level then
+      splits = splits or {}
+      splits[level] = splits[level] or split(level, idents, from, to)
+      for digits, part in pairs(splits[level]) do
+        found = in_set(seen .. name .. digits, part, 1, #part, found)
       end
     end
   end
-  return found
+  return found, splits
 end
 
--- Begin a group of an epoch's sets at row number `row`; return its level.
-local function begin(seen, index, goes, row, now)
-  local level, latest, groups = 0, goes, ''
-  for at = 1, #index, 24 do
-    local other = sub(index, at, at + 9)
-    if other > now then
-      level = sub(index, at + 10, at + 10) + (other == goes and 1 or 0)
-      if other > latest then latest = other end
-      groups = groups .. sub(index, at, at + 23)
+-- Return an index without the groups that are gone, and with one more of an epoch's sets, begun at
+-- row number `row`.
+local function begin(index, goes, row)
+  local level, groups = 0, ''
+  for at = 33, #index, 19 do
+    local _, other, ending = group_at(index, at)
+    if other then
+      level = math.max(level, other + (ending == goes and 1 or 0))
+      groups = groups .. sub(index, at, at + 18)
     end
   end
-  groups = groups .. string.format('%s%d%013d', goes, level, row)
-  call('SET', seen, groups, 'EXAT', latest)
-  return groups
+  return sub(index, 1, 32) .. struct.pack('<i8', row) .. goes .. level .. groups
 end
 
--- Remember idents of rows from number `row` on in the epoch that goes at a time.
-local function remember(seen, index, idents, row, goes, now)
-  local k = 1
-  while k <= #idents do
-    local at = #index - 23
-    while at > 0 and sub(index, at, at + 9) ~= goes do at = at - 24 end
-    local level = at > 0 and sub(index, at + 10, at + 10)
-    local began = level and tonumber(sub(index, at + 11, at + 23))
-    local room = level and began + SHARD * 10 ^ level - row or 0
+-- Write an index, to be kept until all its groups are gone.
+local function write(seen, index, goes)
+  local latest = goes
+  for at = 33, #index, 19 do
+    local _, _, ending = group_at(index, at)
+    if ending > latest then latest = ending end
+  end
+  call('SET', seen, index, 'EXAT', latest)
+end
+
+-- Remember idents of rows from number `row` on in the epoch that goes at a time; return the index.
+local function remember(seen, index, idents, from, to, row, goes, shard, splits)
+  while from <= to do
+    local name, level, ending
+    local at = 14
+    repeat
+      at = at + 19
+      name, level, ending = group_at(index, at)
+    until ending == goes or at > #index
+    local began = ending == goes and struct.unpack('<i8', index, at)
+    local room = began and began + shard * 10 ^ level - row or 0
     if room <= 0 then
-      index = begin(seen, index, goes, row, now)
+      index = begin(index, goes, row)
     else
-      local group, part = seen .. goes .. level, idents
-      if k > 1 or #idents > math.min(room, 4000) then
-        part = {unpack(idents, k, math.min(#idents, k + 3999, k + room - 1))}
+      local last = min(to, from + 3999, from + room - 1)
+      local young = row - began < (level == 0 and 1 or 20 * 10 ^ level)  -- some sets may not exist
+      if level == 0 then
+        call('SADD', seen .. name, unpack(idents, from, last))
+        if young then call('EXPIREAT', seen .. name, goes) end
+      else
+        local parts = last == to and splits and splits[level] or split(level, idents, from, last)
+        for digits, part in pairs(parts) do
+          local key = seen .. name .. digits
+          call('SADD', key, unpack(part))
+          if young then call('EXPIREAT', key, goes) end
+        end
       end
-      local sets = level == '0' and {[group] = part} or by_set(group, level, part)
-      local young = row - began < 20 * 10 ^ level  -- some of its sets may not exist yet
-      for name, members in pairs(sets) do
-        call('SADD', name, unpack(members))
-        if young then call('EXPIREAT', name, goes) end
-      end
-      k, row = k + #part, row + #part
+      from, row, splits = last + 1, row + last - from + 1, nil
     end
   end
+  return index
 end
