@@ -8,6 +8,7 @@ import random
 import shutil
 import signal
 import subprocess
+import tempfile
 import time
 from collections.abc import Iterator
 from contextlib import ExitStack
@@ -194,8 +195,8 @@ class House:
         client.save()
         client.config_set("appendonly", "no")
         client.client_unpause()
-        kept = self.folder / f"kept-{len(self.earlier)}"
-        shutil.copytree(self.server.folder / "appendonlydir", kept)
+        kept = Path(tempfile.mkdtemp(prefix="kept-", dir=self.folder))
+        shutil.copytree(self.server.folder / "appendonlydir", kept, dirs_exist_ok=True)
         self.earlier += in_order(kept)
 
     def fall_back_on_the_snapshot(self) -> None:
