@@ -10,7 +10,7 @@ from service.store.keys import path
 from service.store.logs import Logs
 from service.streams.record import HEADER, Stream
 from tests.store.batches import NOW, batch
-from tests.store.workers import HORIZON, named
+from tests.store.workers import HORIZON, compact, named
 
 ROOM = 512
 """Members up to which a server with its own settings keeps a set of integers as an array."""
@@ -139,3 +139,43 @@ def test_an_ident_is_no_other_bytes_of_a_log(logs: Logs, asked: int) -> None:
     post(logs, ["torn"], idents=[torn], amounts=[half])
     taken = post(logs, named("a", 0, asked), idents=[ident, *fillers])
     assert taken == [True] * asked
+
+
+def log_of(logs: Logs) -> bytes:
+    return logs.client.get(seen(logs).replace("seen/", "log/")) or b""
+
+
+@pytest.mark.parametrize("known", [True, False])
+def test_the_copy_of_a_header_is_the_header(logs: Logs, client, known: bool) -> None:
+    def rows(first: int, n: int) -> list[str | None]:
+        return list(named("a", first, n)) if known else [None] * n
+
+    for first, n in [(0, LONG - 1), (100, 1), (200, 150), (400, 1)]:
+        assert all(post(logs, rows(first, n)))
+        assert bool(client.exists(seen(logs))) == (first > 0)
+        if first == 200:
+            assert compact(logs, "a")
+        if first:
+            assert client.getrange(seen(logs), 0, 31) == log_of(logs)[:32]
+
+
+@pytest.mark.parametrize("size", [LONG, 500])
+def test_an_index_that_has_expired_is_made_again(logs: Logs, client, size: int) -> None:
+    post(logs, named("a", 0, size))
+    assert compact(logs, "a")
+    for key in client.keys("*seen/*"):  # all go together, at the latest time of any
+        client.delete(key)
+    assert post(logs, ["new"]) == [True]
+    assert client.getrange(seen(logs), 0, 31) == log_of(logs)[:32]
+    assert post(logs, ["new", "newer"]) == [False, True]
+    assert [began for _, _, began in groups(logs)] == [size]
+
+
+def test_an_append_to_a_torn_log_is_cold_and_tears_it_no_further(logs: Logs, client) -> None:
+    post(logs, named("a", 0, 100))
+    key = seen(logs).replace("seen/", "log/")
+    client.set(key, log_of(logs)[:-5])
+    rows = batch(["a"], [1999], ids=["b"])
+    done = logs.append(logs.calls("main", rows, [1], now=NOW, historic=False), rows)
+    assert done.cold[0].log == log_of(logs)
+    assert len(log_of(logs)) % 32 == 27

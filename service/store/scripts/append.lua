@@ -82,11 +82,12 @@ if before then
 end
 
 -- Read as a whole what a worker's own state says to be short, and the index of the others.
-local paths, keys = {}, {last, tag .. 'mark'}
+local paths, seens, keys = {}, {}, {last, tag .. 'mark'}
 for i = 1, n do
   local key, folded = KEYS[i], folded_of[i]
   local path = sub(key, prefix)
-  paths[i], keys[i + 2] = path, folded > 0 and folded < LONG and key or to_seen .. path
+  local seen = to_seen .. path
+  paths[i], seens[i], keys[i + 2] = path, seen, folded > 0 and folded < LONG and key or seen
 end
 local values = get(keys)
 if (values[2] or '') ~= ARGV[14] then
@@ -161,7 +162,7 @@ for i = 1, n do
     log = call('GET', key) or ''
   end
   if log and log ~= '' and struct.unpack('<i8', log, 17) + #log / 32 - 1 >= LONG then
-    index = call('GET', to_seen .. paths[i])
+    index = call('GET', seens[i])
     fresh[i] = not index
     index, log = index or sub(log, 1, 32), false
   end
@@ -171,7 +172,7 @@ for i = 1, n do
     if named_of[i] > 0 then
       local some, first, last = idents_of(from, to, named_of[i])
       local found
-      found, splits[i] = look_up(to_seen .. paths[i], index, some, first, last)
+      found, splits[i] = look_up(seens[i], index, some, first, last)
       if found then
         known = known or {}
         for j = from, to do
@@ -257,9 +258,9 @@ for i = 1, n do
       if named_of[i] > 0 then
         local some, first, last = idents_of(from, to, named_of[i], known)
         local parts = not known and splits[i]
-        after = remember(to_seen .. path, index, some, first, last, row, goes, shard, parts)
+        after = remember(seens[i], index, some, first, last, row, goes, shard, parts)
       end
-      if after ~= index or fresh[i] then write(to_seen .. path, after, goes) end
+      if after ~= index or fresh[i] then write(seens[i], after, goes) end
     else
       local header = sub(log, 1, 32)
       if log == '' then
@@ -275,8 +276,7 @@ for i = 1, n do
       if row + taken >= LONG then
         local all, some, first, last = idents_in(log), idents_of(from, to, named_of[i], known)
         for k = first, last do all[#all + 1] = some[k] end
-        local seen = to_seen .. path
-        write(seen, remember(seen, header, all, 1, #all, 0, goes, shard), goes)
+        write(seens[i], remember(seens[i], header, all, 1, #all, 0, goes, shard), goes)
       end
     end
     call('APPEND', to_ids .. path, id_chunk)

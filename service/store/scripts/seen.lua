@@ -1,12 +1,12 @@
 -- Idents seen of a stream, as sets of integers small enough that a server keeps them as arrays.
 --
 -- An index of a stream ("{tag}seen/<path>") begins with a copy of its log's header, 32 bytes, which
--- is written only where the header is; it may expire, and is then made again. Its groups of sets follow, the newest first, 19 bytes each:
--- the stream's row number when the group was begun (i64), and in decimal the time when it goes (10)
--- and its level (1). A group of level l has 10^l sets of about `shard` idents, by their last l
--- digits. When it is full, one of the next level is begun; when an epoch of the server's clock is
--- over, one of the same level. A group goes a horizon and a day after the end of its epoch,
--- whatever the horizon is by then.
+-- is written only where the header is; it may expire, and is then made again. Its groups of sets
+-- follow, 19 bytes each, the newest first: the stream's row number when the group was begun (i64),
+-- and in decimal the time when it goes (10) and its level (1). A group of level l has 10^l sets of
+-- about `shard` idents, by their last l digits. When it is full, one of the next level is begun; when
+-- an epoch of the server's clock is over, one of the same level. A group goes a horizon and a day
+-- after the end of its epoch, whatever the horizon is by then.
 local DAY = 86400
 
 local call, sub, unpack, min = redis.call, string.sub, unpack, math.min
