@@ -4,9 +4,9 @@
 -- is written only where the header is; it may expire, and is then made again. Its groups of sets
 -- follow, 19 bytes each, the newest first: the stream's row number when the group was begun (i64),
 -- and in decimal the time when it goes (10) and its level (1). A group of level l has 10^l sets of
--- about `shard` idents, by their last l digits. When it is full, one of the next level is begun; when
--- an epoch of the server's clock is over, one of the same level. A group goes a horizon and a day
--- after the end of its epoch, whatever the horizon is by then.
+-- about `shard` idents, by their last l digits. When it is full, one of the next level is begun;
+-- when an epoch of the server's clock is over, one of the same level. A group goes a horizon and a
+-- day after the end of its epoch, whatever the horizon is by then.
 local DAY = 86400
 
 local call, sub, unpack, min = redis.call, string.sub, unpack, math.min
