@@ -36,11 +36,6 @@ class CarefulPool(BlockingConnectionPool):
 
     made = 0
 
-    def greet(self, connection: Any) -> None:
-        """Count a connection, and say what the client says first."""
-        self.made += 1
-        connection.on_connect()
-
     def get_connection(self, command_name: Any = None, *keys: Any, **options: Any) -> Any:
         """Return a connection that is up.
 
@@ -106,6 +101,11 @@ def connect(url: str, timeout: float, connections: int = 64) -> redis.Redis:
         pool = CarefulPool.from_url(url, max_connections=connections, timeout=timeout)
     except (ValueError, TypeError) as error:
         raise StoreError(f"the store's address cannot be read ({type(error).__name__})") from None
+
+    def greet(connection: Any) -> None:
+        pool.made += 1
+        connection.on_connect()
+
     # Set afterwards, as options in the address would win over arguments.
     pool.connection_kwargs.update(
         socket_timeout=timeout,
@@ -115,7 +115,7 @@ def connect(url: str, timeout: float, connections: int = 64) -> redis.Redis:
         retry_on_error=[],
         health_check_interval=0,
         decode_responses=False,
-        redis_connect_func=pool.greet,
+        redis_connect_func=greet,
         protocol=2,  # the same replies, and no server pushes, from every version of the client
     )
     if scheme != "unix":

@@ -9,6 +9,7 @@ from importlib.resources import files
 from typing import Any
 
 import redis
+from hiredis import pack_command
 from redis.exceptions import NoScriptError, RedisError, ResponseError
 
 Argument = str | bytes | int
@@ -72,8 +73,9 @@ def _send(client: redis.Redis, groups: Sequence[Sequence[Command]]) -> list[list
     pool: Any = client.connection_pool
     connection = pool.get_connection()
     try:
-        packed = connection.pack_commands([command for group in groups for command in group])
-        connection.send_packed_command(packed)
+        pack: Any = pack_command
+        packed = b"".join([pack(command) for group in groups for command in group])
+        connection.send_packed_command([packed])
         return [[_reply(client, connection, command) for command in group] for group in groups]
     finally:
         pool.release(connection)
