@@ -18,7 +18,7 @@ from service.batches.batch import Batch
 from service.digits.significand import IntArray
 from service.settings import Settings
 from service.store.catalogue import Catalogue, Policies
-from service.store.charter import Charter, charter
+from service.store.charter import Charter, charter, mark_of
 from service.store.connection import CarefulPool, StoreFacts, connect, inspect
 from service.store.directory import Directory
 from service.store.errors import Conflict, StoreError, Stranger, Unavailable, Unknown
@@ -141,7 +141,7 @@ class Tallies:
 
     def _read_charter(self) -> Charter:
         self._charter = charter(self.client, self._partitions)
-        self.logs.mark = self._charter.mark
+        self.logs.mark, self.logs.shard = self._charter.mark, self._charter.shard
         return self._charter
 
     @contextmanager
@@ -211,11 +211,22 @@ class Tallies:
         if before is not None and before.decode() != body_digest:
             raise Conflict("this Idempotency-Key came with another body before")
 
-    def post(self, tenant: str, batch: Batch, *, historic: bool, reply: str, now: int) -> Posted:
+    def post(
+        self,
+        tenant: str,
+        batch: Batch,
+        *,
+        historic: bool,
+        reply: str,
+        now: int,
+        ident_key: tuple[int, int] | None = None,
+    ) -> Posted:
         """Count a batch exactly once and judge its streams.
 
         Parameters
         ----------
+        ident_key : tuple of two int, optional
+            By which its identities were hashed; by default that of the store as known now.
         historic : bool
             Rows of the past: alarms they cause stay off the feed.
         reply : {'alarms', 'merchants', 'full'}
@@ -234,14 +245,15 @@ class Tallies:
             self._remember_categories(tenant, batch.categories)
             versions = policies.versions_for([s.merchant for s in batch.streams])
         with self.warm.turn(self._patience):
-            return self._post(tenant, batch, versions, historic=historic, reply=reply, now=now)
+            mark = None if ident_key is None else mark_of(ident_key)
+            return self._post(tenant, batch, versions, mark, historic, reply, now)
 
     def _post(
         self,
         tenant: str,
         batch: Batch,
         versions: Sequence[int],
-        *,
+        mark: str | None,
         historic: bool,
         reply: str,
         now: int,
@@ -253,7 +265,7 @@ class Tallies:
                 slots = self.warm.slots([path(tenant, s) for s in batch.streams])
                 known = self.warm.known(slots)
             calls = self.logs.calls(
-                tenant, batch, versions, now=now, historic=historic, known=known
+                tenant, batch, versions, now=now, historic=historic, known=known, mark=mark
             )
             try:
                 appended = self.logs.append(calls, batch)

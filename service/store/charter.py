@@ -44,8 +44,7 @@ class Charter:
     @property
     def mark(self) -> str:
         """Name of the store, which each of its partitions bears."""
-        key = b"".join(half.to_bytes(8, "big") for half in self.ident_key)
-        return hashlib.blake2b(key, digest_size=8, person=b"tallyward store").hexdigest()
+        return mark_of(self.ident_key)
 
 
 def _shard(client: redis.Redis) -> int:
@@ -54,6 +53,12 @@ def _shard(client: redis.Redis) -> int:
     with contextlib.suppress(ResponseError):  # hosted servers often forbid CONFIG
         found = client.config_get(_SETTING)
     return int(0.78 * min(int(found.get(_SETTING, ROOM)), MOST_ROOM))
+
+
+def mark_of(ident_key: tuple[int, int]) -> str:
+    """Return the name of the store whose identities are hashed by a key."""
+    key = b"".join(half.to_bytes(8, "big") for half in ident_key)
+    return hashlib.blake2b(key, digest_size=8, person=b"tallyward store").hexdigest()
 
 
 def charter(client: redis.Redis, partitions: int) -> Charter:

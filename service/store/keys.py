@@ -55,6 +55,10 @@ class Partition:
         """Ids of the rows in a stream's log, each after its length in one byte."""
         return f"{self.tag}ids/{path}"
 
+    def seen(self, path: str) -> str:
+        """Index of the sets of a stream's idents, whose names begin with this one."""
+        return f"{self.tag}seen/{path}"
+
     def streams(self, tenant: str, merchant: str) -> str:
         """Set of a merchant's ``flow/currency``."""
         return f"{self.tag}of/{tenant}/{merchant}"

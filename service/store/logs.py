@@ -270,6 +270,7 @@ class Logs:
         now: int,
         historic: bool,
         known: Known | None = None,
+        mark: str | None = None,
     ) -> list[Call]:
         """Pack a batch into calls, several for a partition that gets many rows.
 
@@ -283,6 +284,8 @@ class Logs:
             Arrival, ms since 1970 UTC.
         known : Known, optional
             States that the worker keeps.
+        mark : str, optional
+            Name of the store that the identities were hashed for; by default `mark`.
         """
         n, partitions = len(batch.streams), len(self.partitions)
         home = np.fromiter(
@@ -328,7 +331,7 @@ class Logs:
                     sources,
                     self.horizon_s,
                     self._worker,
-                    self.mark,
+                    self.mark if mark is None else mark,
                     out[-1].token if follows else self._last[p],
                     self.shard,
                 ],
@@ -513,7 +516,7 @@ class Logs:
                 arguments += [field, document]
             name = place.path
             keys = [p.log(name), p.snapshot(name), temporary, p.ids(name), p.outbox]
-            keys.append(f"{p.tag}seen/{name}")
+            keys.append(p.seen(name))
             groups.append(
                 [
                     ("SET", temporary, snapshot, "PX", _TEMPORARY_MS),

@@ -85,13 +85,14 @@ def post_batch() -> Response:
     tallies, tenant = here.tallies, principal().tenant
     body = expand(read_body(), request.headers.get("Content-Encoding"), here.limits)
     digest = "" if idempotency_key is None else hashlib.sha256(body).hexdigest()
+    ident_key = tallies.ident_key()
     batch = read_batch(
         body,
         ndjson=ndjson,
         limits=here.limits,
         defaults=here.defaults,
         now=arrived,
-        ident_key=tallies.ident_key(),
+        ident_key=ident_key,
         # with the body's digest: a key used again after its claim was forgotten names other rows
         idempotency_key=None if idempotency_key is None else f"{idempotency_key}/{digest}",
         skip_invalid=query["invalid"] == "skip",
@@ -107,7 +108,12 @@ def post_batch() -> Response:
             raise invalid([fault]) from conflict
     durability = tallies.durability  # asked before: once rows are counted, nothing may fail
     posted = tallies.post(
-        tenant, batch, historic="mode" in query, reply=query["reply"], now=arrived
+        tenant,
+        batch,
+        historic="mode" in query,
+        reply=query["reply"],
+        now=arrived,
+        ident_key=ident_key,
     )
     return reply(_receipt(batch, posted, durability, query["reply"]))
 

@@ -232,6 +232,20 @@ def test_a_row_hashed_by_the_key_of_another_store_is_not_taken(
     assert post(other, honest("a", n=5)).accepted == 5
 
 
+def test_the_mark_goes_with_the_key_that_hashed_a_batch(tallies: Tallies) -> None:
+    """Another thread learns of the new store while a batch waits that is hashed for the old."""
+    key = tallies.ident_key()
+    tallies.client.flushall()
+    assert tallies.facts(0)
+    assert tallies.ident_key() != key
+    rows = honest("a", n=5)
+    arguments = {"historic": False, "reply": "alarms", "now": NOW}
+    with pytest.raises(Unavailable):
+        tallies.post("main", rows, ident_key=key, **arguments)
+    posted = tallies.post("main", rows, ident_key=tallies.ident_key(), **arguments)
+    assert posted.accepted == 5
+
+
 @pytest.mark.xfail(strict=True, reason="a version that a roll-back took is still written to logs")
 def test_a_policy_that_the_store_forgot_puts_nothing_in_quarantine(
     tallies: Tallies, hire: Hire
