@@ -94,6 +94,7 @@ def serve(settings: Settings, on_ready: Callable[[Running], None], app: str = AP
         try:
             with ExitStack() as running:
                 _check_address(settings)
+                log.info("getting ready; the first start on a machine compiles, for half a minute")
                 get_ready()  # here, so that no worker is late for it, and all find it done
                 url, key, file = settings.redis_url, settings.admin_key, None
                 if url is None:
