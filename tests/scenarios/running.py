@@ -10,11 +10,13 @@ import signal
 import subprocess
 import sys
 import threading
+import time
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from service.serving import KEEP_ALIVE
 from service.store.connection import connect
 from tests.processes import PATIENCE, children, eventually, free_port
 
@@ -67,6 +69,9 @@ class Service:
             line = http.client.HTTPConnection("127.0.0.1", self.port, timeout=PATIENCE)
             self._lines.line = line
             self._opened.append(line)
+        elif time.monotonic() > self._lines.until:
+            line.close()  # the service may have, too; it opens again at the next request
+        self._lines.until = time.monotonic() + KEEP_ALIVE / 2
         with_key = {"Authorization": f"Bearer {KEY}", **(headers or {})}
         try:
             line.request(method, path, body, with_key)
