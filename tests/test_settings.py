@@ -65,6 +65,7 @@ def test_every_variable_is_read():
         "QUEUE_TIMEOUT": "2.5",
         "CALLER_TIMEOUT": "7.5",
         "CALL_ROWS": "100",
+        "REPLICAS": "2",
         "SWEEP_SECONDS": "0.25",
         "LOG_LEVEL": "debug",
     }
