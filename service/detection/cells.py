@@ -42,26 +42,6 @@ VIEW_OF_CELL: IntArray = np.concatenate(
 """Place in ``WATCHED_VIEWS`` of each cell's view."""
 
 
-def all_hits(cell: IntArray) -> IntArray:
-    """Return the cells hit by rows: those of the views, then the coarse ones; (6, n), -1 for none.
-
-    Parameters
-    ----------
-    cell : int64 array (3, n)
-        Cells of the watched views, -1 where not seen.
-
-    Raises
-    ------
-    ValueError
-        If cell has not three rows.
-    """
-    if len(cell) != 3:
-        raise ValueError(f"cell must have a row for each of 3 watched views, got {len(cell)}")
-    pair = cell[1]
-    coarse = np.where(pair >= 0, COARSE_OF_PAIR[:, np.maximum(pair - LEAD_PAIR.start, 0)], -1)
-    return np.concatenate([cell, coarse])
-
-
 def with_coarse(counts: npt.ArrayLike) -> npt.NDArray[np.float64]:
     """Return counts or shares of the views' cells (..., 199) with those of the coarse cells.
 

@@ -19,16 +19,6 @@ from service.digits.views import WATCHED, WATCHED_VIEWS
 from service.streams.state import BY_LAW, BY_OWN, States
 
 
-def bound_of(state: States, slot: IntArray, cell: IntArray) -> FloatArray:
-    """Return the bounds of (stream, cell) pairs, arrays of one shape, tolerance not included."""
-    return _chosen(
-        state["reference"][slot, VIEW_OF_CELL[cell]],
-        state["cell"]["excepted"][slot, cell],
-        state["cell"]["bound"][slot, cell],
-        LAW[cell],
-    )
-
-
 def bounds_of_view(state: States, view: int) -> FloatArray:
     """Return the bounds of a watched view's cells, float64 (..., K), tolerance not included."""
     cells = WATCHED[WATCHED_VIEWS[view]]

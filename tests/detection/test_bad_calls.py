@@ -46,7 +46,6 @@ TOLERANCES = (0.1, 0.1, 0.05)
         (lambda: baseline.own_shares(COUNT[:90]), "count must have 224 values"),
         (lambda: bank.alternatives(np.ones(89)), "reference must have 90 shares above 0"),
         (lambda: bank.alternatives(np.zeros(90)), "reference must have 90 shares above 0"),
-        (lambda: cells.all_hits(np.zeros((2, 5), int)), "3 watched views, got 2"),
         (lambda: cells.with_coarse(np.ones(90)), "counts must have 199 values"),
         (lambda: cells.pairs_of(9), "cell must be 199 to 223, got 9"),
     ],

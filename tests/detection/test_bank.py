@@ -67,6 +67,3 @@ def test_coarse_cells_are_partitions_of_the_pairs() -> None:
     assert [p - 9 + 10 for p in cells.pairs_of(cells.QUARTERS.start + 1)] == list(range(20, 50))
     counts = np.arange(199.0)
     assert cells.with_coarse(counts)[cells.HALVES.start] == sum(range(9, 14))
-    hits = cells.all_hits(np.array([[0, 8], [-1, 98], [-1, 198]]))
-    assert hits[3:, 0].tolist() == [-1, -1, -1]
-    assert hits[3:, 1].tolist() == [cells.HALVES.stop - 1, cells.QUARTERS.stop - 1, 223]
