@@ -61,8 +61,9 @@ class Caller:
 
 @dataclass
 class Progress:
-    """What the posters of an episode have done so far."""
+    """What the posters of an episode have done so far, of so many batches in all."""
 
+    total: int
     counts: Counter[str] = field(default_factory=Counter)
     acknowledged: set[tuple[str, int]] = field(default_factory=set)
     done: list[Batch] = field(default_factory=list)
@@ -91,9 +92,10 @@ class Progress:
             self.changed.notify_all()
 
     def wait_for(self, batches: int) -> None:
-        """Wait until so many batches are done, or all is lost."""
+        """Wait until so many batches are done, or all of them, or all is lost."""
+        enough = min(batches, self.total)
         with self.changed:
-            self.changed.wait_for(lambda: len(self.done) >= batches or self.failed is not None)
+            self.changed.wait_for(lambda: len(self.done) >= enough or self.failed is not None)
 
 
 class Poster:

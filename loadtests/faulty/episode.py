@@ -88,7 +88,7 @@ class _Play:
         self.house, self.script = house, script
         self.prefix = house.prefixes.pop()
         self.plan: Plan = plan(script.seed, script.rows, self.prefix)
-        self.progress = Progress()
+        self.progress = Progress(sum(map(len, self.plan.posters)))
         self.outcome = Outcome()
 
     def run(self) -> Outcome:
@@ -129,7 +129,7 @@ class _Play:
             scene = Scene(
                 self.house, self.plan, self.progress, chance, replica, self.script.loss is None
             )
-            total = sum(map(len, self.plan.posters))
+            total = self.progress.total
             at = sorted(int(chance.uniform(0.05, 0.8) * total) for _ in names)
             timetable = list(zip(at, names, strict=True))
             jobs.append(partial(self._conduct, scene, timetable))
