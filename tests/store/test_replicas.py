@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import signal
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -11,6 +12,7 @@ from service.settings import Settings
 from service.tallies import Tallies, Unavailable
 from tests.processes import eventually, free_port
 from tests.scenarios.running import StoreServer
+from tests.store.batches import NOW
 from tests.store.workers import blobs_of, check, honest, post, worker
 
 
@@ -77,3 +79,18 @@ def test_without_its_replica_a_batch_is_not_acknowledged_and_then_completed(
     assert (again.accepted, again.duplicates) == (1, 30)
     assert len(blobs_of(follower.logs, "a")[0].log) == 32 * 32
     follower.client.close()
+
+
+def test_a_call_that_is_sent_again_waits_for_the_replica_too(
+    servers: tuple[StoreServer, StoreServer], first: Tallies
+) -> None:
+    """It writes no row then, and its connection may be another one."""
+    assert post(first, honest("b", n=1)).accepted == 1
+    servers[1].process.send_signal(signal.SIGSTOP)  # connected, and behind from now on
+    rows = honest("a", n=30)
+    calls = first.logs.calls("main", rows, [1], now=NOW, historic=False, mark=first.logs.mark)
+    for _ in range(2):
+        with pytest.raises(Unavailable, match="not yet on 1 replicas"):
+            first.logs.append(calls, rows)
+        first.client.connection_pool.disconnect()
+    assert len(blobs_of(first.logs, "a")[0].log) == 32 * 31

@@ -78,6 +78,7 @@ if before then
     local log = blobs[2 * i] or string.rep('\0', 32)
     versions[i], snapped[i], status[i] = sub(log, 5, 16), struct.unpack('<i8', log, 25), COLD
   end
+  call('SET', last, '', 'EX', 3600)  -- a write, so that WAIT on this connection covers the first run
   return {cmsgpack.pack({absent, row, snapped, status}), concat(versions), '', blobs, -1}
 end
 
