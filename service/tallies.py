@@ -300,10 +300,10 @@ class Tallies:
 
     def _raised(self, tenant: str, judged: Judged, appended: Appended) -> list[Document]:
         """Return the alarms that rows of one call raised, or brought from history to the feed."""
-        first = appended.first[judged.index]
-        end = first + appended.count[judged.index]
         if not judged.crossings:
             return []
+        first = appended.first[judged.index]
+        end = first + appended.count[judged.index]
         position = {slot: i for i, slot in enumerate(judged.slots.tolist())}
         mine = [
             c.alarm.hex()
